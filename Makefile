@@ -1,0 +1,118 @@
+# limbwatch: build, check and install.  One file, no recursion into folders; see DEVELOPERS.md.
+#
+#   make            the programs                  make check      set up, build, run the tests
+#   make demo       set up, build, run the demo   make bench      measurements (ratios, instruction counts)
+#   make deps       install the Debian packages   make install    DESTDIR= PREFIX=
+#   SAN=address,undefined | SAN=thread            a sanitised build in a folder of its own
+#   CROSS=aarch64-linux-gnu-                      a cross build in a folder of its own
+
+VERSION    := 0.1.0
+CROSS      ?=
+CC         := $(if $(filter default,$(origin CC)),$(CROSS)gcc,$(CC))
+AR         := $(if $(filter default,$(origin AR)),$(CROSS)gcc-ar,$(AR))
+PKG_CONFIG ?= $(CROSS)pkg-config
+PYTHON     ?= /usr/bin/python3
+CFLAGS     ?= -O2 -g
+PREFIX     ?= /usr/local
+SYSCONFDIR ?= $(if $(filter /usr,$(PREFIX)),/etc,$(PREFIX)/etc)
+comma      := ,
+BUILD      ?= build$(if $(CROSS),-$(CROSS:-=))$(if $(SAN),-$(subst $(comma),-,$(SAN)))
+
+PKGS       := alsa sndfile libconfig erfa gsl jansson
+DEPS_BUILD := gcc libc6-dev make pkg-config libasound2-dev libsndfile1-dev libconfig-dev liberfa-dev \
+              libgsl-dev libjansson-dev tzdata
+DEPS_CHECK := libcmocka-dev perl python3-numpy python3-scipy sox libsox-fmt-base pulseaudio \
+              libasound2-plugins
+DEPS_BENCH := valgrind
+
+# Looked up when a rule needs them, so that `make deps` works before pkg-config is there.
+pkg_cflags  = $(eval pkg_cflags := $$(shell $(PKG_CONFIG) --cflags $(PKGS)))$(pkg_cflags)
+pkg_libs    = $(eval pkg_libs := $$(shell $(PKG_CONFIG) --libs $(PKGS)))$(pkg_libs)
+
+override CPPFLAGS += -Iinclude -D_GNU_SOURCE -DLIMBWATCH_VERSION='"$(VERSION)"'
+override CFLAGS   += -std=c17 -Wall -Wextra -Wshadow -Wmissing-prototypes -Wstrict-prototypes -pthread -MMD -MP \
+                     $(if $(WERROR),-Werror) $(if $(SAN),-fsanitize=$(SAN) -fno-sanitize-recover=all)
+override LDFLAGS  += -pthread $(if $(SAN),-fsanitize=$(SAN))
+
+rooms      := base optics sky clock signal keep watch reduce report service command
+lib_src    := $(foreach room,$(rooms),$(wildcard daemon/$(room)/*.c)) $(wildcard drivers/*.c)
+lib_obj    := $(lib_src:%.c=$(BUILD)/%.o)
+library    := $(BUILD)/liblimbwatch.a
+programs   := $(BUILD)/limbwatchd $(BUILD)/limbwatch
+support    := $(patsubst %.c,$(BUILD)/%.o,$(wildcard tests/support/*.c))
+tests      := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/test_*.c))
+benches    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/bench/bench_*.c))
+fuzzers    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/fuzz/fuzz_*.c))
+
+all: $(programs)
+
+$(BUILD)/%.o: %.c
+	@mkdir -p $(@D)
+	$(CC) $(CPPFLAGS) $(pkg_cflags) $(CFLAGS) -c -o $@ $<
+
+$(library): $(lib_obj)
+	rm -f $@
+	$(AR) rcs $@ $^
+
+$(BUILD)/limbwatchd $(BUILD)/limbwatch: $(BUILD)/%: $(BUILD)/daemon/%.o $(library)
+	$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
+
+$(tests): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
+	$(CC) $(LDFLAGS) -o $@ $^ -lcmocka $(pkg_libs) -lm
+
+$(benches) $(fuzzers): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
+	$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
+
+tests: all $(tests) $(fuzzers)
+
+# Set up everything, build, pass the tests.
+check: deps-check
+	$(MAKE) run-check
+
+run-check: tests
+	BUILD=$(BUILD) PYTHON=$(PYTHON) CMOCKA_MESSAGE_OUTPUT=TAP prove -e '' $(tests) $(sort $(wildcard tests/*.t))
+
+# Set up everything, build, run the main job on the invented scenario.
+demo: deps-build
+	$(MAKE) run-demo
+
+run-demo: all
+	BUILD=$(BUILD) sh tests/demo.sh
+
+bench: deps-check deps-bench
+	$(MAKE) run-bench
+
+run-bench: all $(benches)
+	BUILD=$(BUILD) PYTHON=$(PYTHON) sh tests/bench/run
+
+define install_packages
+	@missing=; for p in $(1); do \
+		dpkg-query -W -f '$${Status}\n' $$p 2>/dev/null | grep -q '^install ok installed' || missing="$$missing $$p"; \
+	done; \
+	if [ -n "$$missing" ]; then \
+		echo "installing Debian packages:$$missing"; \
+		sudo=; if [ "$$(id -u)" != 0 ]; then sudo=sudo; fi; \
+		$$sudo env DEBIAN_FRONTEND=noninteractive sh -c \
+			"apt-get update -qq && apt-get install -y -qq --no-install-recommends $$missing" >&2; \
+	fi
+endef
+
+deps: deps-build deps-check deps-bench
+deps-build:
+	$(call install_packages,$(DEPS_BUILD))
+deps-check:
+	$(call install_packages,$(DEPS_BUILD) $(DEPS_CHECK))
+deps-bench:
+	$(call install_packages,$(DEPS_BENCH))
+
+install: all
+	install -D -m 755 $(BUILD)/limbwatchd $(DESTDIR)$(PREFIX)/sbin/limbwatchd
+	install -D -m 755 $(BUILD)/limbwatch $(DESTDIR)$(PREFIX)/bin/limbwatch
+	install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf
+
+clean:
+	rm -rf build build-*
+
+.PHONY: all tests check run-check demo run-demo bench run-bench deps deps-build deps-check deps-bench install clean
+.DELETE_ON_ERROR:
+-include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

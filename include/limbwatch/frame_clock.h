@@ -1,0 +1,68 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef LIMBWATCH_FRAME_CLOCK_H
+#define LIMBWATCH_FRAME_CLOCK_H
+
+#include <stdbool.h>
+#include <stddef.h>
+#include <stdint.h>
+#include "limbwatch/tai.h"
+
+/*
+ * Frame number -> TAI.  Fed with pulse edges (which say when a second begins, not which) and labels (which say
+ * roughly what time it is); maps any frame by a robust smooth through the accepted pulses, sigma growing away from
+ * them.  Without pulses the labels alone give the time.  One thread at a time.
+ */
+struct frame_clock;
+
+struct frame_clock_settings {
+	double rate;                    /* frames per second, nominal */
+	double rate_tolerance;          /* how far the true rate may be off, relative; 200e-6 is generous for a card */
+	double pulse_sigma_s;           /* jitter of one pulse, one sigma; 50e-9 */
+	double pulse_delay_s;           /* the pulse in the samples is later than the second by this (cable, filter) */
+	double pulse_delay_sigma_s;
+};
+
+/** -EINVAL when a setting is out of range. Caller destroys. */
+int  frame_clock_create(struct frame_clock **out, const struct frame_clock_settings *settings);
+void frame_clock_destroy(struct frame_clock *clock);
+
+/** An edge at that frame; frames in ascending order.  The newest 86400 are remembered. */
+void frame_clock_add_pulse(struct frame_clock *clock, double frame, double sigma_frames);
+/** A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true). */
+void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai when, double sigma_s, bool late,
+                           enum time_quality quality);
+/** Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
+void frame_clock_add_gap(struct frame_clock *clock, double frame, double sigma_frames);
+
+/** Fits again with all that is known.  Cheap enough for once a second. @return pulses accepted */
+size_t frame_clock_solve(struct frame_clock *clock);
+
+struct clock_reading {
+	struct tai when;
+	double sigma_s;                 /* one standard deviation, clock terms only; NAN when quality is TIME_FREE */
+	enum time_quality quality;
+	/*
+	 * Which second a pulse is was known: two independent labels agree, or one label's sigma is far below half a second.
+	 * Otherwise quality is at most TIME_HOST and sigma_s that of the label.
+	 */
+	bool second_confirmed;
+	struct { double pulse, interpolation, delay, label; } terms;   /* parts of sigma_s */
+};
+
+/** By the last solution.  With no label at all: TIME_FREE, `when` = seconds since frame 0 from the epoch. */
+void frame_clock_at(const struct frame_clock *clock, double frame, struct clock_reading *reading);
+/** The inverse by the last solution, to a thousandth of a frame. */
+double frame_clock_frame(const struct frame_clock *clock, struct tai when);
+/** True frames per second about `frame` by the last solution (nominal before any). */
+double frame_clock_rate(const struct frame_clock *clock, double frame);
+
+struct clock_pulse {
+	double frame;
+	struct tai second;              /* the second it begins, when known; else ns = INT64_MIN */
+	bool   accepted;
+	double residual_s;              /* from the smooth */
+};
+/** Pulses with frames in [from, to), oldest first. @return number given, at most `max` */
+size_t frame_clock_pulses(const struct frame_clock *clock, double from, double to, struct clock_pulse *out, size_t max);
+
+#endif

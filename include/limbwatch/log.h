@@ -1,0 +1,25 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef LIMBWATCH_LOG_H
+#define LIMBWATCH_LOG_H
+
+#include <stdarg.h>
+
+/*
+ * One clear sentence per event, to stderr: "limbwatchd: error: ...".  The function that knows what went
+ * wrong says it, with the value and its range, and returns -errno; its callers do not repeat it.
+ * Any thread but the acquisition thread.  A sentence has no final newline.
+ */
+enum log_level { LEVEL_ERROR, LEVEL_WARNING, LEVEL_NOTICE, LEVEL_DETAIL };
+
+/** Name before each sentence (kept by reference) and the least important level shown; initially LEVEL_NOTICE. */
+void log_open(const char *program, enum log_level least);
+
+/** Sends every sentence to `sink` instead of stderr, all levels; NULL restores.  For tests. */
+void log_set_sink(void (*sink)(void *context, enum log_level level, const char *sentence), void *context);
+
+void log_error(const char *format, ...) __attribute__((format(printf, 1, 2)));
+void log_warning(const char *format, ...) __attribute__((format(printf, 1, 2)));
+void log_notice(const char *format, ...) __attribute__((format(printf, 1, 2)));
+void log_detail(const char *format, ...) __attribute__((format(printf, 1, 2)));
+
+#endif
