@@ -1,0 +1,113 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/* limbwatchd: records, detects and times lunar contacts. */
+#include <errno.h>
+#include <getopt.h>
+#include <signal.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include <unistd.h>
+#include "limbwatch/log.h"
+#include "limbwatch/recorder.h"
+
+enum { EXIT_USAGE = 2 };
+
+struct options {
+	const char *config;
+	bool check, json, quiet, verbose;
+};
+
+static void help(FILE *out)
+{
+	fputs("limbwatchd - watch a detector for lunar contacts, record and time them\n"
+	      "\n"
+	      "  limbwatchd --config FILE [--json] [--quiet | --verbose]\n"
+	      "  limbwatchd --config FILE --check\n"
+	      "\n"
+	      "  -c, --config FILE  the configuration (default /etc/limbwatch/limbwatch.conf)\n"
+	      "      --check        say in plain words what the configuration means, record nothing\n"
+	      "      --json         one JSON object per contact on standard output, a line each\n"
+	      "  -q, --quiet        warnings and errors only\n"
+	      "  -v, --verbose      more of what happens inside\n"
+	      "  -h, --help         this text\n"
+	      "  -V, --version      the version\n"
+	      "\n"
+	      "A recording of a file or a synthetic event is replayed as fast as it goes, then the program ends.\n"
+	      "Exit status: 0 done, 1 failed (said on standard error), 2 wrong usage or configuration.\n", out);
+}
+
+/* @return -1: go on; else the exit status */
+static int parse_options(struct options *o, int argc, char **argv)
+{
+	enum { CHECK = 256, JSON };
+	static const struct option table[] = {
+		{ "config", required_argument, NULL, 'c' }, { "check", no_argument, NULL, CHECK },
+		{ "json", no_argument, NULL, JSON }, { "quiet", no_argument, NULL, 'q' },
+		{ "verbose", no_argument, NULL, 'v' }, { "help", no_argument, NULL, 'h' },
+		{ "version", no_argument, NULL, 'V' }, { NULL, 0, NULL, 0 },
+	};
+	int option;
+
+	while ((option = getopt_long(argc, argv, "c:qvhV", table, NULL)) != -1) {
+		switch (option) {
+		case 'c': o->config = optarg; break;
+		case CHECK: o->check = true; break;
+		case JSON: o->json = true; break;
+		case 'q': o->quiet = true; break;
+		case 'v': o->verbose = true; break;
+		case 'h': help(stdout); return EXIT_SUCCESS;
+		case 'V': puts("limbwatchd " LIMBWATCH_VERSION); return EXIT_SUCCESS;
+		default: help(stderr); return EXIT_USAGE;
+		}
+	}
+	if (optind < argc) {
+		log_error("\"%s\" is not understood; the configuration is given as --config FILE (see --help)", argv[optind]);
+		return EXIT_USAGE;
+	}
+	return -1;
+}
+
+static void on_signal(int number)
+{
+	(void)number;
+	recorder_stop();
+}
+
+static void catch_signals(void)
+{
+	struct sigaction stop = { .sa_handler = on_signal };
+
+	sigaction(SIGINT, &stop, NULL);
+	sigaction(SIGTERM, &stop, NULL);
+	signal(SIGPIPE, SIG_IGN);       /* a reader of --json that goes away must not end the recording */
+}
+
+static void print_contact(void *context, const struct config *config, const struct contact *contact,
+                          const char *segment)
+{
+	const struct options *o = context;
+
+	(o->json ? report_json : report_text)(stdout, config, contact, segment);
+}
+
+int main(int argc, char **argv)
+{
+	struct options options = { .config = "/etc/limbwatch/limbwatch.conf" };
+	struct recorder_hooks hooks = { .context = &options, .contact = print_contact, .progress = true };
+	struct config config;
+	int ret;
+
+	log_open("limbwatchd", LEVEL_NOTICE);
+	ret = parse_options(&options, argc, argv);
+	if (ret >= 0)
+		return ret;
+	log_open("limbwatchd", options.quiet ? LEVEL_WARNING : options.verbose ? LEVEL_DETAIL : LEVEL_NOTICE);
+	ret = config_load(&config, options.config);
+	if (ret < 0)
+		return ret == -EINVAL ? EXIT_USAGE : EXIT_FAILURE;
+	catch_signals();
+	ret = options.check ? recorder_describe(&config, stdout) : recorder_run(&config, &hooks);
+	config_free(&config);
+	if (ret == -EINVAL)
+		return EXIT_USAGE;
+	return ret < 0 ? EXIT_FAILURE : EXIT_SUCCESS;
+}

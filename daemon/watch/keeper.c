@@ -1,0 +1,425 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <errno.h>
+#include <fcntl.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+#include <time.h>
+#include "keeper.h"
+#include "limbwatch/log.h"
+#include "limbwatch/segment.h"
+#include "limbwatch/space.h"
+
+/*
+ * A plan becomes one segment, or several when the disk failed in between or a gap was too long: pieces.
+ * A piece's sidecar is written when it begins, whenever the plan knows more, and for good when the plan is final.
+ */
+struct piece {
+	char name[SIDECAR_TEXT];
+	uint64_t first, end;            /* frames [first, end) */
+	struct segment *segment;        /* NULL once closed */
+	struct sidecar described;       /* parts and gaps only */
+};
+
+struct work {
+	struct keeper *keeper;
+	struct plan *plan;              /* being carried out; NULL: none */
+	unsigned version;               /* of its sidecar, as last written */
+	size_t delivered;               /* contacts of it */
+	bool refused;                   /* the disk took nothing of this plan since the last attempt */
+	time_t again;                   /* then: when to try again, CLOCK_MONOTONIC seconds */
+	size_t pieces;
+	struct piece piece[32];
+	size_t max;                     /* frames of buffer */
+	void *buffer;
+	uint64_t checked;               /* frame at the last look at the free space */
+};
+
+int keeper_open(struct keeper *keeper)
+{
+	keeper->delivery = NULL;
+	keeper->last = &keeper->delivery;
+	return -pthread_mutex_init(&keeper->mutex, NULL);
+}
+
+void keeper_close(struct keeper *keeper)
+{
+	struct delivery *delivery;
+
+	while ((delivery = keeper_deliver(keeper)))
+		free(delivery);
+	pthread_mutex_destroy(&keeper->mutex);
+}
+
+struct delivery *keeper_deliver(struct keeper *keeper)
+{
+	struct delivery *delivery;
+
+	pthread_mutex_lock(&keeper->mutex);
+	delivery = keeper->delivery;
+	if (delivery) {
+		keeper->delivery = delivery->next;
+		if (!keeper->delivery)
+			keeper->last = &keeper->delivery;
+	}
+	pthread_mutex_unlock(&keeper->mutex);
+	return delivery;
+}
+
+static void trouble(struct keeper *keeper, int error)
+{
+	int none = 0;
+
+	atomic_compare_exchange_strong(&keeper->trouble, &none, error);
+}
+
+static bool taken(const struct keeper *keeper, const char *name, const char *ending)
+{
+	char path[4096];
+	int fd;
+
+	snprintf(path, sizeof(path), "%s/%s%s", keeper->config->keep.folder, name, ending);
+	fd = keeper->disk->open(path, O_RDONLY | O_CLOEXEC, 0);
+	if (fd < 0)
+		return fd != -ENOENT;
+	keeper->disk->close(fd);
+	return true;
+}
+
+/* A base name that overwrites nothing: NAME, NAME_2, NAME_3 ... */
+static void choose_name(const struct keeper *keeper, char name[SIDECAR_TEXT], const char *wanted)
+{
+	snprintf(name, SIDECAR_TEXT, "%s", wanted);
+	for (int k = 2; k < 10000 && (taken(keeper, name, ".json") || taken(keeper, name, ".wav") ||
+	                              taken(keeper, name, ".wav.part")); k++)
+		snprintf(name, SIDECAR_TEXT, "%.110s_%d", wanted, k);
+}
+
+static int create_segment(struct work *w, struct piece *piece, uint64_t first)
+{
+	const struct keeper *keeper = w->keeper;
+	const struct plan *plan = w->plan;
+	double seconds = ((double)first - (double)plan->from) / keeper->intake->rate;
+	struct segment_header header = {
+		.folder = keeper->config->keep.folder, .name = piece->name,
+		.format = keeper->intake->format, .rate = keeper->intake->rate,
+		.station = keeper->config->station.name, .description = plan->description,
+		.start = tai_add(plan->start, seconds), .quality = plan->quality, .first = first,
+		.part_bytes = keeper->config->keep.part_bytes,
+	};
+
+	return segment_create(&piece->segment, keeper->disk, &header);
+}
+
+/* Begins a piece at frame `first`; when the disk is full, after removing what may be removed. */
+static int begin_piece(struct work *w, uint64_t first)
+{
+	const struct config *config = w->keeper->config;
+	struct piece *piece = &w->piece[w->pieces];
+	int ret;
+
+	if (w->pieces == sizeof(w->piece) / sizeof(*w->piece))
+		return -EMFILE;
+	*piece = (struct piece){ .first = first, .end = first };
+	choose_name(w->keeper, piece->name, w->plan->name);
+	ret = space_make(w->keeper->disk, config->keep.folder, config->keep.free_bytes, config->keep.remove_contacts);
+	if (ret == 0)
+		ret = create_segment(w, piece, first);
+	if (ret < 0)
+		return ret;
+	w->pieces++;
+	w->version = 0;                 /* its sidecar is due */
+	log_detail("recording %s/%s.wav", config->keep.folder, piece->name);
+	return 0;
+}
+
+static void describe_piece(struct piece *piece)
+{
+	if (piece->segment && segment_describe(piece->segment, &piece->described) < 0)
+		log_error("out of memory while describing %s", piece->name);
+}
+
+static void end_piece(struct work *w)
+{
+	struct piece *piece = w->pieces ? &w->piece[w->pieces - 1] : NULL;
+	int ret;
+
+	if (!piece || !piece->segment)
+		return;
+	describe_piece(piece);
+	piece->end = segment_position(piece->segment);
+	ret = segment_close(piece->segment);
+	piece->segment = NULL;
+	if (ret < 0) {
+		log_error("%s/%s.wav: cannot be closed: %s; the next start repairs it", w->keeper->config->keep.folder,
+		          piece->name, strerror(-ret));
+		trouble(w->keeper, ret);
+		return;
+	}
+	atomic_fetch_add(&w->keeper->segments, 1);
+}
+
+static struct piece *open_piece(struct work *w)
+{
+	struct piece *piece = w->pieces ? &w->piece[w->pieces - 1] : NULL;
+
+	return piece && piece->segment ? piece : NULL;
+}
+
+/* Moves the contacts, pulses and expectations that are not of [first, end) out of the sidecar. */
+static void confine(struct sidecar *s, uint64_t first, uint64_t end)
+{
+	size_t n = 0;
+
+	for (size_t k = 0; k < s->contacts; k++)
+		if (s->contact[k].frame >= (double)first && s->contact[k].frame < (double)end)
+			s->contact[n++] = s->contact[k];
+	s->contacts = n;
+	n = 0;
+	for (size_t k = 0; k < s->pulses; k++)
+		if (s->pulse[k].frame >= (double)first && s->pulse[k].frame < (double)end)
+			s->pulse[n++] = s->pulse[k];
+	s->pulses = n;
+}
+
+static void *move_array(void **from, size_t *n, size_t *out)
+{
+	void *p = *from;
+
+	*out = *n;
+	*from = NULL;
+	*n = 0;
+	return p;
+}
+
+static int write_piece_sidecar(struct work *w, struct piece *piece)
+{
+	char path[4096];
+	struct sidecar s;
+	int ret;
+
+	ret = plans_copy_sidecar(w->keeper->plans, w->plan, &s);
+	if (ret < 0)
+		return ret;
+	describe_piece(piece);
+	if (w->pieces > 1)
+		confine(&s, piece->first, piece->segment ? UINT64_MAX : piece->end);
+	free(s.part);
+	free(s.gap);
+	s.part = move_array((void **)&piece->described.part, &piece->described.parts, &s.parts);
+	s.gap = move_array((void **)&piece->described.gap, &piece->described.gaps, &s.gaps);
+	s.first = piece->first;
+	s.state = piece->segment ? SEGMENT_RECORDING : SEGMENT_CLOSED;
+	snprintf(path, sizeof(path), "%s/%s.json", w->keeper->config->keep.folder, piece->name);
+	ret = sidecar_write(&s, w->keeper->disk, path);
+	/* Parts and gaps of a closed piece are still needed by a later writing. */
+	piece->described.part = move_array((void **)&s.part, &s.parts, &piece->described.parts);
+	piece->described.gap = move_array((void **)&s.gap, &s.gaps, &piece->described.gaps);
+	sidecar_clear(&s);
+	return ret;
+}
+
+static void write_sidecars(struct work *w, unsigned version)
+{
+	for (size_t k = 0; k < w->pieces; k++) {
+		int ret = write_piece_sidecar(w, &w->piece[k]);
+
+		if (ret < 0) {
+			log_error("%s/%s.json: cannot be written: %s", w->keeper->config->keep.folder, w->piece[k].name,
+			          strerror(-ret));
+			trouble(w->keeper, ret);
+		}
+	}
+	w->version = version;
+}
+
+/* The file that will hold frame `frame`, or an empty text. */
+static void segment_path(const struct work *w, double frame, char *path, size_t size)
+{
+	*path = 0;
+	for (size_t k = 0; k < w->pieces; k++) {
+		const struct piece *piece = &w->piece[k];
+		uint64_t end = piece->segment ? UINT64_MAX : piece->end;
+
+		if (frame < (double)piece->first || frame >= (double)end)
+			continue;
+		for (size_t j = 0; j < piece->described.parts; j++)
+			if (frame >= (double)piece->described.part[j].first)
+				snprintf(path, size, "%s/%s", w->keeper->config->keep.folder,
+				         piece->described.part[j].file);
+	}
+}
+
+static void deliver(struct work *w)
+{
+	struct sidecar s;
+
+	if (plans_copy_sidecar(w->keeper->plans, w->plan, &s) < 0)
+		return;
+	for (; w->delivered < s.contacts; w->delivered++) {
+		struct delivery *delivery = calloc(1, sizeof(*delivery));
+
+		if (!delivery)
+			break;
+		delivery->contact = s.contact[w->delivered];
+		segment_path(w, delivery->contact.frame, delivery->segment, sizeof(delivery->segment));
+		pthread_mutex_lock(&w->keeper->mutex);
+		*w->keeper->last = delivery;
+		w->keeper->last = &delivery->next;
+		pthread_mutex_unlock(&w->keeper->mutex);
+	}
+	sidecar_clear(&s);
+}
+
+/* The disk failed: what is there is closed properly, and after a while a new piece is tried. */
+static void disk_failed(struct work *w, int ret)
+{
+	const char *folder = w->keeper->config->keep.folder;
+	struct timespec now;
+
+	end_piece(w);
+	clock_gettime(CLOCK_MONOTONIC, &now);
+	if (ret == -ERANGE)             /* a gap too long for one file: simply a new piece */
+		return;
+	if (!w->refused)
+		log_error("%s: %s: RECORDING STOPPED; watching goes on, the disk is tried again every 5 s", folder,
+		          strerror(-ret));
+	trouble(w->keeper, ret);
+	w->refused = true;
+	w->again = now.tv_sec + 5;
+}
+
+static bool disk_ready(struct work *w)
+{
+	struct timespec now;
+
+	if (!w->refused)
+		return true;
+	clock_gettime(CLOCK_MONOTONIC, &now);
+	return now.tv_sec >= w->again;
+}
+
+static int keep_space(struct work *w, uint64_t first)
+{
+	const struct keeper *keeper = w->keeper;
+
+	if ((double)(first - w->checked) < 10 * keeper->intake->rate)
+		return 0;
+	w->checked = first;
+	return space_make(keeper->disk, keeper->config->keep.folder, keeper->config->keep.free_bytes,
+	                  keeper->config->keep.remove_contacts);
+}
+
+static void write_frames(struct work *w, size_t count, const struct ring_news *news)
+{
+	int ret = 0;
+
+	if (news->overrun) {
+		atomic_fetch_add(&w->keeper->lost, news->overrun);
+		log_error("%s: the disk was too slow: %llu frames lost", w->keeper->config->keep.folder,
+		          (unsigned long long)news->overrun);
+	}
+	for (int attempt = 0; attempt < 2; attempt++) {
+		if (!open_piece(w)) {
+			if (!disk_ready(w))
+				return;
+			ret = begin_piece(w, news->first);
+		}
+		if (ret == 0)
+			ret = keep_space(w, news->first);
+		if (ret == 0)
+			ret = segment_write(open_piece(w)->segment, w->buffer, count, news->first, 0);
+		if (ret == 0) {
+			if (w->refused)
+				log_notice("%s: recording again", w->keeper->config->keep.folder);
+			w->refused = false;
+			return;
+		}
+		disk_failed(w, ret);
+		if (ret != -ERANGE)
+			return;
+		ret = 0;
+	}
+}
+
+static void finish_plan(struct work *w, unsigned version)
+{
+	end_piece(w);
+	write_sidecars(w, version);
+	deliver(w);
+	for (size_t k = 0; k < w->pieces; k++)
+		sidecar_clear(&w->piece[k].described);
+	plans_drop(w->keeper->plans);
+	w->plan = NULL;
+	w->pieces = 0;
+	w->delivered = 0;
+	w->version = 0;
+}
+
+static void idle(const struct keeper *keeper)
+{
+	nanosleep(&(struct timespec){ .tv_nsec = keeper->idle_ns }, NULL);
+}
+
+/* Takes one step of the plan. @return false: nothing to do now */
+static bool carry_out(struct work *w, const struct plan_view *view)
+{
+	struct ring_reader *reader = w->keeper->reader;
+	uint64_t position = ring_reader_position(reader);
+	struct ring_news news = { 0 };
+	bool written = false;
+
+	if (position < view->from) {
+		ring_skip_to(reader, view->decided < view->from ? view->decided : view->from);
+		if (ring_reader_position(reader) < view->from)
+			return false;   /* an earlier plan may still come */
+		position = ring_reader_position(reader);
+	}
+	if (position < view->to) {
+		size_t want = view->to - position < w->max ? view->to - position : w->max;
+		size_t count = ring_read(reader, w->buffer, want, &news);
+
+		if (count)
+			write_frames(w, count, &news);
+		written = count > 0;
+	}
+	if (w->version != view->version && view->version && open_piece(w)) {
+		write_sidecars(w, view->version);
+		deliver(w);
+	}
+	if (view->final && !written && (position >= view->to || news.ended)) {
+		finish_plan(w, view->version);
+		return true;
+	}
+	return written;
+}
+
+void *keeper_run(void *argument)
+{
+	struct keeper *keeper = argument;
+	size_t bytes = frame_bytes(keeper->intake->format);
+	struct work w = { .keeper = keeper, .max = 4096 };
+
+	w.buffer = malloc(w.max * bytes);
+	if (!w.buffer) {
+		trouble(keeper, -ENOMEM);
+		return NULL;
+	}
+	for (;;) {
+		struct plan_view view;
+
+		plans_view(keeper->plans, &view);
+		if (!view.plan) {
+			ring_skip_to(keeper->reader, view.decided);
+			if (view.ended)
+				break;
+			idle(keeper);
+			continue;
+		}
+		w.plan = view.plan;
+		if (!carry_out(&w, &view))
+			idle(keeper);
+	}
+	free(w.buffer);
+	return NULL;
+}

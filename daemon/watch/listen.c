@@ -1,0 +1,325 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <errno.h>
+#include <math.h>
+#include <stdlib.h>
+#include <time.h>
+#include "limbwatch/host_clock.h"
+#include "limbwatch/log.h"
+#include "listen_inner.h"
+
+static const double settle_s = 4;       /* pulses come up to two seconds late, and one more each side helps */
+static const double fill_s = 600;       /* longer gaps end a segment instead of filling it with zeros */
+static const double gap_sigma_s = 0.001;/* how well an intake knows the length of a gap, at worst: see alsa.c */
+
+/* Latency is the same number of series samples for every detector: what counts is the slowest series. */
+static void measure_hold(struct listener *l, const struct lane_settings *settings, double *latency_samples)
+{
+	char why[256];
+	struct lane_shape shape;
+	struct lane *lane;
+	double frames;
+
+	if (lane_plan(&shape, settings, why, sizeof(why)) < 0)
+		return;
+	if (*latency_samples == 0 && lane_create(&lane, settings) == 0) {
+		*latency_samples = lane_latency(lane) / shape.decimation;
+		lane_destroy(lane);
+	}
+	frames = *latency_samples * shape.decimation;
+	if (frames > (double)l->hold)
+		l->hold = (uint64_t)ceil(frames);
+}
+
+static int create_outside(struct listener *l, unsigned channel)
+{
+	struct lane_settings settings = {
+		.config = l->config, .channel = channel, .format = l->settings.intake->format, .rate = l->rate,
+	};
+
+	for (unsigned k = 0; k < lanes_outside(l->config); k++) {
+		int ret;
+
+		lane_outside(&settings, k);
+		ret = lane_create(&l->lane[l->lanes], &settings);
+		if (ret < 0)
+			return ret;
+		if (lane_latency(l->lane[l->lanes]) > (double)l->hold)
+			l->hold = (uint64_t)ceil(lane_latency(l->lane[l->lanes]));
+		l->lanes++;
+	}
+	return 0;
+}
+
+static int create_lanes(struct listener *l)
+{
+	double latency = 0;
+
+	if (lanes_outside(l->config) > OUTSIDE_LANES) {
+		log_error("watch.shadow_speed_min_mps = %g to shadow_speed_max_mps = %g is too wide to watch outside vigils",
+		          l->config->watch.speed_min_mps, l->config->watch.speed_max_mps);
+		return -EINVAL;
+	}
+	for (unsigned c = 0; c < l->config->channels; c++) {
+		struct lane_settings settings = {
+			.config = l->config, .channel = c, .format = l->settings.intake->format, .rate = l->rate,
+		};
+		int ret;
+
+		if (l->config->channel[c].measure != MEASURE_VOLTAGE)
+			continue;
+		ret = create_outside(l, c);
+		if (ret < 0)
+			return ret;
+		for (size_t e = 0; e < l->config->expecteds; e++) {
+			settings.expected = (int)e;
+			measure_hold(l, &settings, &latency);
+		}
+	}
+	l->hold += CHUNK;
+	return 0;
+}
+
+static int create_clock(struct listener *l)
+{
+	struct frame_clock_settings clock = {
+		.rate = l->rate, .rate_tolerance = l->config->clock.card_tolerance, .pulse_sigma_s = 50e-9,
+	};
+	struct pulse_settings pulse = { .rate = l->rate };
+	int ret;
+
+	l->pulse_channel = -1;
+	for (size_t k = 0; k < l->config->channels; k++) {
+		const struct config_channel *c = &l->config->channel[k];
+
+		if (c->measure != MEASURE_PULSE)
+			continue;
+		l->pulse_channel = (int)k;
+		pulse.width_s = c->pulse.width_s;
+		pulse.polarity = c->polarity;
+		clock.pulse_sigma_s = c->pulse.jitter_s;
+		clock.pulse_delay_s = c->pulse.delay_s;
+		clock.pulse_delay_sigma_s = c->pulse.delay_sigma_s;
+		ret = pulse_detector_create(&l->pulses, &pulse);
+		if (ret < 0)
+			return ret;
+	}
+	return frame_clock_create(&l->clock, &clock);
+}
+
+int listener_create(struct listener **out, const struct listener_settings *settings)
+{
+	struct listener *l = calloc(1, sizeof(*l));
+	int ret = -ENOMEM;
+
+	if (!l)
+		return -ENOMEM;
+	l->settings = *settings;
+	l->config = settings->config;
+	l->rate = settings->intake->rate;
+	l->frames = malloc(CHUNK * frame_bytes(settings->intake->format));
+	l->samples = malloc(CHUNK * sizeof(*l->samples));
+	if (!l->frames || !l->samples)
+		goto destroy;
+	ret = create_clock(l);
+	if (ret < 0)
+		goto destroy;
+	ret = create_lanes(l);
+	if (ret < 0)
+		goto destroy;
+	l->settle = (uint64_t)(settle_s * l->rate) + 1;
+	*out = l;
+	return 0;
+destroy:
+	listener_destroy(l);
+	return ret;
+}
+
+void listener_destroy(struct listener *l)
+{
+	if (!l)
+		return;
+	for (size_t k = 0; k < l->lanes; k++)
+		lane_destroy(l->lane[k]);
+	pulse_detector_destroy(l->pulses);
+	frame_clock_destroy(l->clock);
+	free(l->samples);
+	free(l->frames);
+	free(l);
+}
+
+/* A contact is planned for at the latest `hold` after it, and `pre_s` before it is wanted. */
+uint64_t listener_lookback(const struct listener *l)
+{
+	if (!l->config->watch.outside)
+		return CHUNK;
+	return l->hold + (uint64_t)(l->config->keep.pre_s * l->rate) + 2 * CHUNK;
+}
+
+/* A plan is final only when contacts at its very end have settled. */
+uint64_t listener_backlog(const struct listener *l)
+{
+	return listener_lookback(l) + l->hold + l->settle + 4 * CHUNK;
+}
+
+void listener_attach(struct listener *l, struct ring_reader *reader)
+{
+	l->settings.reader = reader;
+}
+
+uint64_t listener_heard(const struct listener *l)
+{
+	return atomic_load(&l->heard);
+}
+
+unsigned listener_contacts(const struct listener *l)
+{
+	return atomic_load(&l->contacts);
+}
+
+uint64_t listener_lost(const struct listener *l)
+{
+	return atomic_load(&l->lost);
+}
+
+/* ------------------------------------------------------------------ the thread */
+
+/* What the data say of their own time, before the first frame. */
+static void label_origin(struct listener *l)
+{
+	const struct intake *intake = l->settings.intake;
+
+	if (intake->origin.quality == TIME_FREE)
+		return;
+	frame_clock_add_label(l->clock, 0, intake->origin.when, intake->origin.sigma_s, false, intake->origin.quality);
+	l->dated = true;
+}
+
+static void label_stamps(struct listener *l)
+{
+	struct stamp stamp;
+	struct tai when;
+	double sigma;
+
+	while (acquire_stamp(l->settings.acquire, &stamp)) {
+		if (l->settings.intake->origin.quality != TIME_FREE)
+			continue;       /* a replay: the data's own time counts */
+		if (!host_clock_at(stamp.host_ns, l->config->clock.host_sigma_s, &when, &sigma))
+			continue;
+		frame_clock_add_label(l->clock, (double)stamp.frame, when, sigma, stamp.late, TIME_HOST);
+		l->dated = true;
+	}
+}
+
+static void find_pulses(struct listener *l, size_t count, uint64_t first)
+{
+	struct pulse_edge edge[16];
+	size_t n;
+
+	if (l->pulse_channel < 0)
+		return;
+	frames_to_double(l->samples, l->frames, l->settings.intake->format,
+	                 l->config->channel[l->pulse_channel].column, count);
+	do {
+		n = pulse_detector_execute(l->pulses, l->samples, count, first, edge, 16);
+		for (size_t k = 0; k < n; k++)
+			frame_clock_add_pulse(l->clock, edge[k].frame, edge[k].sigma_frames);
+		first += count;
+		count = 0;
+	} while (n == 16);
+}
+
+/* Often while the clock is young, then every ten seconds. */
+static void solve_clock(struct listener *l, bool now)
+{
+	double since = (double)(l->next_frame - l->solved) / l->rate, age = (double)l->next_frame / l->rate;
+
+	if (!now && since < (age < 60 ? 1 : 10))
+		return;
+	l->solved = l->next_frame;
+	frame_clock_solve(l->clock);
+	vigils_refresh(l);
+}
+
+static void handle_gap(struct listener *l, const struct ring_news *news)
+{
+	if (news->overrun) {
+		atomic_fetch_add(&l->lost, news->overrun);
+		log_error("the signal thread was too slow: %llu frames not looked at", (unsigned long long)news->overrun);
+	}
+	if (news->lost > news->overrun)
+		frame_clock_add_gap(l->clock, (double)news->first, gap_sigma_s * l->rate);
+	if ((double)news->lost > fill_s * l->rate)
+		plans_break(l, l->next_frame);
+}
+
+static void hear(struct listener *l, size_t count, const struct ring_news *news)
+{
+	struct contact contact[SIGHTINGS];
+
+	if (news->lost)
+		handle_gap(l, news);
+	label_stamps(l);
+	find_pulses(l, count, news->first);
+	for (size_t k = 0; k < l->lanes; k++)
+		sightings_add(l, contact, lane_execute(l->lane[k], l->frames, count, news->first, contact, SIGHTINGS));
+	vigils_execute(l, l->frames, count, news->first);
+	l->next_frame = news->first + count;
+	solve_clock(l, false);
+}
+
+static void decide(struct listener *l, bool ended)
+{
+	uint64_t lookback = listener_lookback(l);
+
+	plans_decide(l->settings.plans, ended ? UINT64_MAX : l->next_frame > lookback ? l->next_frame - lookback : 0, ended);
+	atomic_store(&l->heard, l->next_frame);
+}
+
+static void finish(struct listener *l)
+{
+	struct contact contact[SIGHTINGS];
+	struct pulse_edge edge[16];
+	size_t n;
+
+	label_stamps(l);
+	while (l->pulses && (n = pulse_detector_finish(l->pulses, edge, 16)) > 0)
+		for (size_t k = 0; k < n; k++)
+			frame_clock_add_pulse(l->clock, edge[k].frame, edge[k].sigma_frames);
+	solve_clock(l, true);
+	for (size_t k = 0; k < l->lanes; k++)
+		sightings_add(l, contact, lane_finish(l->lane[k], contact, SIGHTINGS));
+	vigils_update(l, true);
+	sightings_update(l, true);
+	plans_update(l, true);
+	vigils_destroy(l);
+	decide(l, true);
+}
+
+void *listener_run(void *argument)
+{
+	struct listener *l = argument;
+	const struct timespec moment = { .tv_nsec = l->settings.idle_ns };
+	struct ring_news news;
+
+	label_origin(l);
+	if (!l->dated && l->config->expecteds && !l->settings.intake->real_time)
+		log_warning("the samples do not say when they were taken: expected contacts cannot be placed, watching for any");
+	frame_clock_solve(l->clock);
+	for (;;) {
+		size_t count = ring_read(l->settings.reader, l->frames, CHUNK, &news);
+
+		if (count == 0 && news.ended)
+			break;
+		if (count == 0) {
+			nanosleep(&moment, NULL);
+			continue;
+		}
+		hear(l, count, &news);
+		vigils_update(l, false);
+		sightings_update(l, false);
+		plans_update(l, false);
+		decide(l, false);
+	}
+	finish(l);
+	return NULL;
+}

@@ -1,0 +1,78 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef LISTEN_INNER_H
+#define LISTEN_INNER_H
+
+#include "lane.h"
+#include "limbwatch/pulse.h"
+#include "listen.h"
+
+/* What listen.c (the thread), vigil.c (expected contacts) and sighting.c (seen contacts, plans) share: all of it is
+ * the signal thread's. */
+
+enum { SIGHTINGS = 64, OUTSIDE_LANES = 8 };
+
+enum vigil_state { VIGIL_WAITING, VIGIL_OPEN, VIGIL_DONE };
+
+struct vigil {
+	enum vigil_state state;
+	struct tai begin, end;
+	uint64_t first, last;           /* frames, once open */
+	unsigned seen;
+	struct lane *lane[CONFIG_CHANNELS];     /* NULL where the channel is not watched */
+};
+
+/* A contact on its way: held until every lane has had its say, then until pulses on both sides are in. */
+struct sighting {
+	struct contact contact;
+	bool announced;
+};
+
+struct listener {
+	struct listener_settings settings;
+	const struct config *config;
+	double rate;
+	size_t lanes;
+	struct lane *lane[OUTSIDE_LANES * CONFIG_CHANNELS];
+	struct vigil vigil[CONFIG_EXPECTED];
+	int pulse_channel;              /* index in the configuration, or -1 */
+	struct pulse_detector *pulses;
+	struct frame_clock *clock;
+	uint64_t next_frame;            /* after the newest heard */
+	uint64_t solved;                /* frame at the last solution */
+	bool dated;                     /* some label says what time it is */
+	uint64_t hold, settle;          /* frames: until all lanes have spoken; until later pulses are in */
+	size_t sightings;
+	struct sighting sighting[SIGHTINGS];
+	size_t plans;                   /* not final yet, oldest first */
+	struct plan *plan[16];
+	uint64_t clipped;               /* of lanes already gone */
+	void *frames;                   /* one chunk */
+	double *samples;
+	atomic_ullong heard, lost;
+	atomic_uint contacts;
+};
+
+enum { CHUNK = 4096 };                  /* frames */
+
+/* vigil.c */
+/** Opens, refreshes and closes vigils as the frames pass. `ending`: no more frames will come. */
+void vigils_update(struct listener *l, bool ending);
+/** Feeds the open vigils' lanes. */
+void vigils_execute(struct listener *l, const void *frames, size_t count, uint64_t first);
+/** Tells open vigils where the better clock now puts their contacts. */
+void vigils_refresh(struct listener *l);
+void vigils_destroy(struct listener *l);
+
+/* sighting.c */
+/** A lane gave these contacts. */
+void sightings_add(struct listener *l, const struct contact *contact, size_t n);
+/** Announces those all lanes have spoken about, and hands settled ones to their plan. `ending`: all of them. */
+void sightings_update(struct listener *l, bool ending);
+/** Keeps [from, to), stretched into the newest plan where it overlaps. `what` names it in the file name; may be "". */
+void plans_keep(struct listener *l, uint64_t from, uint64_t to, enum segment_reason reason, const char *what);
+/** Closes plans whose frames and settling time have passed. */
+void plans_update(struct listener *l, bool ending);
+/** After a gap too long to fill: every plan ends at `frame`. */
+void plans_break(struct listener *l, uint64_t frame);
+
+#endif

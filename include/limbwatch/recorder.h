@@ -1,0 +1,40 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef LIMBWATCH_RECORDER_H
+#define LIMBWATCH_RECORDER_H
+
+#include <stdbool.h>
+#include <stdio.h>
+#include "limbwatch/config.h"
+#include "limbwatch/contact.h"
+
+struct recorder_hooks {
+	void *context;
+	/* Main thread, once per contact, when its time has settled (pulses from both sides) and its sidecar is on disk.
+	 * `segment`: path of the file that holds it once closed; NULL when the disk refused it. */
+	void (*contact)(void *context, const struct config *config, const struct contact *contact, const char *segment);
+	bool progress;                  /* say how far a long replay has come */
+};
+
+/**
+ * Records, detects and times until the data end or recorder_stop() is called; repairs first what an earlier run left
+ * open in the folder.
+ *
+ * @return 0; -errno on failure (said); what was recorded is closed properly all the same
+ */
+int recorder_run(const struct config *config, const struct recorder_hooks *hooks);
+
+/** Ends recorder_run() soon.  Async-signal-safe. */
+void recorder_stop(void);
+
+/**
+ * Says in plain words, with units, everything the configuration means, after opening the intake to see what it delivers.
+ *
+ * @return 0; -EINVAL when it cannot work (said); other -errno
+ */
+int recorder_describe(const struct config *config, FILE *out);
+
+/* One contact as one JSON object on one line, and as one line of text. `text` NUL-terminated by the caller's stdio. */
+void report_json(FILE *out, const struct config *config, const struct contact *contact, const char *segment);
+void report_text(FILE *out, const struct config *config, const struct contact *contact, const char *segment);
+
+#endif
