@@ -103,7 +103,7 @@ int main(int argc, char **argv)
 	log_open("limbwatchd", options.quiet ? LEVEL_WARNING : options.verbose ? LEVEL_DETAIL : LEVEL_NOTICE);
 	ret = config_load(&config, options.config);
 	if (ret < 0)
-		return ret == -EINVAL ? EXIT_USAGE : EXIT_FAILURE;
+		return EXIT_USAGE;
 	catch_signals();
 	ret = options.check ? recorder_describe(&config, stdout) : recorder_run(&config, &hooks);
 	config_free(&config);

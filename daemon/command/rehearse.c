@@ -368,7 +368,7 @@ int command_rehearse(int argc, char **argv)
 	ret = r.config_path ? config_load(&r.config, r.config_path) :
 		config_parse(&r.config, scenario, "the invented evening");
 	if (ret < 0)
-		return ret == -EINVAL ? STATUS_USAGE : STATUS_FAILURE;
+		return STATUS_USAGE;
 	signal(SIGINT, on_signal);
 	signal(SIGTERM, on_signal);
 	ret = stage(&r, start);

@@ -211,7 +211,7 @@ static int say_end(struct recorder *r)
 	           atomic_load(&r->keeper.segments) == 1 ? "" : "s", r->config->keep.folder);
 	if (result != -ECANCELED && result != -ENODATA)
 		return result;
-	return disk ? disk : lost ? -EIO : 0;
+	return disk ? disk : lost || *sentence ? -EIO : 0;      /* incomplete data count as a failure, kept though they are */
 }
 
 static int run(struct recorder *r)
