@@ -70,23 +70,29 @@ static void reduced_phase(double w, double *sine, double *cosine)
  */
 static void midpoint_sum(double w, double *real, double *imaginary)
 {
-	/* t_k^2 = (k - 1/2)^2 pi / 12.5 and exp(-t_k^2), k = 1..12 */
-	static const double square[NODES] = {
-#define T2(k) ((k - 0.5) * (k - 0.5) * (M_PI / 12.5))
-		T2(1), T2(2), T2(3), T2(4), T2(5), T2(6), T2(7), T2(8), T2(9), T2(10), T2(11), T2(12),
-	};
-	static const double weight[NODES] = {
-#define EXP_T2(k) __builtin_exp(-T2(k))
-		EXP_T2(1), EXP_T2(2), EXP_T2(3), EXP_T2(4), EXP_T2(5), EXP_T2(6),
-		EXP_T2(7), EXP_T2(8), EXP_T2(9), EXP_T2(10), EXP_T2(11), EXP_T2(12),
+	/* (k - 1/2)^2 pi / 12.5, and the exponential of its negative */
+	static const struct { double square, weight; } node[NODES] = {
+		{ 6.28318530717958679e-02, 9.39101367424292621e-01 },
+		{ 5.65486677646162783e-01, 5.68083605877734321e-01 },
+		{ 1.57079632679489656e+00, 2.07879576350761902e-01 },
+		{ 3.07876080051799716e+00, 4.60162446385278187e-02 },
+		{ 5.08938009881546538e+00, 6.16183843443004510e-03 },
+		{ 7.60265422168729987e+00, 4.99124885647275773e-04 },
+		{ 1.06185831691335011e+01, 2.44572669573648102e-05 },
+		{ 1.41371669411540690e+01, 7.24947251598793766e-07 },
+		{ 1.81584055377490046e+01, 1.29988422941187066e-08 },
+		{ 2.26822989589183059e+01, 1.40994679695499394e-10 },
+		{ 2.77088472046619749e+01, 9.25125302267138309e-13 },
+		{ 3.32380502749800115e+01, 3.67196198461394198e-15 },
 	};
 	double phi = M_PI_2 * w * w;
 	double sum_real = 0.0, sum_imaginary = 0.0;
 
 	for (int k = NODES - 1; k >= 0; k--) {
-		double factor = weight[k] / (square[k] * square[k] + phi * phi);
+		double square = node[k].square;
+		double factor = node[k].weight / (square * square + phi * phi);
 
-		sum_real += factor * square[k];
+		sum_real += factor * square;
 		sum_imaginary += factor;
 	}
 	double scale = w / sqrt(NODES + 0.5);   /* h w / sqrt(pi) */
