@@ -233,6 +233,22 @@ static bool take_number(config_setting_t *node, double *number)
 	return false;
 }
 
+/* Whole numbers are compared as such: beyond 2^53 a double no longer tells neighbours apart. */
+static bool is_outside(const struct setting *row, config_setting_t *node, double number)
+{
+	long long integer;
+
+	if (row->min == row->max)
+		return false;
+	if (config_setting_type(node) == CONFIG_TYPE_INT64 && fabs(number) >= 0x1p53) {
+		integer = config_setting_get_int64(node);
+		return (fabs(row->min) < 0x1p63 && integer < (long long)ceil(row->min))
+			|| (fabs(row->max) < 0x1p63 && integer > (long long)floor(row->max))
+			|| number < row->min || number > row->max;
+	}
+	return number < row->min || number > row->max;
+}
+
 static int check_number(struct setting_value *value, const struct setting *row, config_setting_t *node,
 			const char *where)
 {
@@ -245,7 +261,7 @@ static int check_number(struct setting_value *value, const struct setting *row, 
 	if (whole && (value->number != rint(value->number)
 		      || (config_setting_type(node) == CONFIG_TYPE_FLOAT && fabs(value->number) > 0x1p53)))
 		return refuse(row, node, where, "");
-	if (row->min != row->max && (value->number < row->min || value->number > row->max)) {
+	if (is_outside(row, node, value->number)) {
 		append_range(range, row, "");
 		log_error("%s is %s, %s %s (%s)", where, show(shown, node),
 			  isinf(row->min) || isinf(row->max) ? "but must be" : "outside", range, row->meaning);

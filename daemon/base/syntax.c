@@ -23,6 +23,7 @@ struct scan {
 	int line;
 	int depth;
 	int given;                      /* settings so far */
+	char before;                    /* first byte of the token before, 0 at the start */
 	struct { char bracket; int line; } open[DEPTH_MAX];
 };
 
@@ -32,6 +33,12 @@ static void copy(struct scan *scan, size_t n)
 		scan->line += *scan->at == '\n';
 		*scan->to++ = *scan->at++;
 	}
+}
+
+/* Bytes of the file worth showing in a sentence. */
+static int shown(size_t n)
+{
+	return n < 60 ? (int)n : 60;
 }
 
 static int scan_comment(struct scan *scan)
@@ -52,8 +59,21 @@ static int scan_comment(struct scan *scan)
 	return 0;
 }
 
+/* A value, or one more piece of it.  libconfig would refuse others too, but loses the memory of such a text. */
+static bool text_may_stand(const struct scan *scan)
+{
+	bool in_list = scan->depth > 0 && scan->open[scan->depth - 1].bracket != '}';
+
+	return (scan->before && strchr("=:([\"", scan->before)) || (scan->before == ',' && in_list);
+}
+
 static int scan_text(struct scan *scan)
 {
+	if (!text_may_stand(scan)) {
+		log_error("%s line %d: syntax error: a text stands where no value can, %.*s", scan->name, scan->line,
+			  shown(1 + strcspn(scan->at + 1, "\"\r\n") + 1), scan->at);
+		return -EINVAL;
+	}
 	for (copy(scan, 1); *scan->at != '"'; copy(scan, *scan->at == '\\' ? 2 : 1)) {
 		if (*scan->at == '\0' || *scan->at == '\n' || (scan->at[0] == '\\' && scan->at[1] == '\n')) {
 			log_error("%s line %d: a text has no closing quote on its line", scan->name, scan->line);
@@ -94,7 +114,7 @@ static int scan_number(struct scan *scan)
 	}
 	if (errno == ERANGE) {
 		log_error("%s line %d: the whole number %.*s is outside %lld to %lld", scan->name, scan->line,
-			  (int)(digits + sign < 60 ? digits + sign : 60), scan->at, LLONG_MIN, LLONG_MAX);
+			  shown(sign + digits), scan->at, LLONG_MIN, LLONG_MAX);
 		return -EINVAL;
 	}
 	scan->to += sprintf(scan->to, "%lldL", value);
@@ -128,13 +148,11 @@ static int scan_bracket(struct scan *scan)
 	return 0;
 }
 
-static int scan_next(struct scan *scan)
+static int scan_token(struct scan *scan)
 {
 	static const char name_part[] = "abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ0123456789_-*";
 	const char *at = scan->at;
 
-	if (*at == '#' || (at[0] == '/' && (at[1] == '/' || at[1] == '*')))
-		return scan_comment(scan);
 	if (*at == '"')
 		return scan_text(scan);
 	if (strchr("(){}[]", *at))
@@ -151,6 +169,23 @@ static int scan_next(struct scan *scan)
 	}
 	copy(scan, isalpha((unsigned char)*at) ? strspn(at, name_part) : 1);
 	return 0;
+}
+
+static int scan_next(struct scan *scan)
+{
+	char first = *scan->at;
+	size_t blank = strspn(scan->at, " \t\r\n\f");
+	int ret;
+
+	if (blank > 0) {
+		copy(scan, blank);
+		return 0;
+	}
+	if (first == '#' || (first == '/' && (scan->at[1] == '/' || scan->at[1] == '*')))
+		return scan_comment(scan);
+	ret = scan_token(scan);
+	scan->before = first;
+	return ret;
 }
 
 /* The first byte that no text file holds; -EINVAL after saying so. */
