@@ -2,10 +2,11 @@
 #include "limbwatch/log.h"
 
 #include <errno.h>
-#include <stdbool.h>
 #include <stdio.h>
 #include <string.h>
 #include <unistd.h>
+
+#include "utf8.h"
 
 /* A pipe keeps writes of up to PIPE_BUF (4096 on Linux) whole, so sentences of several threads do not mix. */
 enum { LINE_MAX_BYTES = 4096 };
@@ -31,40 +32,15 @@ void log_set_sink(void (*sink)(void *context, enum log_level level, const char *
 	log_sink_context = context;
 }
 
-/* Bytes of the well-formed UTF-8 character at `s`, 0 when there is none (The Unicode Standard, Table 3-7). */
-static size_t utf8_length(const unsigned char *s)
-{
-	static const struct { unsigned char first, last, low, high, length; } shape[] = {
-		{ 0x00, 0x7f, 0x00, 0x00, 1 }, { 0xc2, 0xdf, 0x80, 0xbf, 2 }, { 0xe0, 0xe0, 0xa0, 0xbf, 3 },
-		{ 0xe1, 0xec, 0x80, 0xbf, 3 }, { 0xed, 0xed, 0x80, 0x9f, 3 }, { 0xee, 0xef, 0x80, 0xbf, 3 },
-		{ 0xf0, 0xf0, 0x90, 0xbf, 4 }, { 0xf1, 0xf3, 0x80, 0xbf, 4 }, { 0xf4, 0xf4, 0x80, 0x8f, 4 },
-	};
-
-	for (size_t k = 0; k < sizeof(shape) / sizeof(shape[0]); k++) {
-		if (s[0] < shape[k].first || s[0] > shape[k].last)
-			continue;
-		if (shape[k].length > 1 && (s[1] < shape[k].low || s[1] > shape[k].high))
-			return 0;
-		for (size_t i = 2; i < shape[k].length; i++)
-			if ((s[i] & 0xc0) != 0x80)
-				return 0;
-		return shape[k].length;
-	}
-	return 0;
-}
-
 /* A name from outside may hold line ends, terminal commands or no text at all: none of it reaches the log. */
 static void clean(char *sentence)
 {
-	unsigned char *s = (unsigned char *)sentence;
+	while (*sentence) {
+		size_t length = utf8_length(sentence);
 
-	while (*s) {
-		size_t length = utf8_length(s);
-		bool control = *s < 0x20 || *s == 0x7f || (*s == 0xc2 && length == 2 && s[1] < 0xa0);
-
-		if (length == 0 || control)
-			memset(s, '?', length ? length : 1);
-		s += length ? length : 1;
+		if (!utf8_is_plain(sentence))
+			memset(sentence, '?', length ? length : 1);
+		sentence += length ? length : 1;
 	}
 }
 

@@ -11,10 +11,10 @@
  * configuration and the manual.  A table ends with a row whose name is NULL.  The unit is in the name.
  */
 enum setting_type {
-	SETTING_NUMBER,         /* double; integers are accepted */
-	SETTING_INTEGER,
-	SETTING_BOOLEAN,
-	SETTING_TEXT,
+	SETTING_NUMBER,         /* finite double; integers are accepted */
+	SETTING_INTEGER,        /* 64 bits; a float that is whole (48e3) is accepted */
+	SETTING_BOOLEAN,        /* true or false */
+	SETTING_TEXT,           /* UTF-8 without control characters */
 	SETTING_CHOICE,         /* one word of `choices`, "immersion|emersion"; the value's integer is its index */
 	SETTING_INSTANT,        /* text, UTC in ISO 8601 with Z; checked by tai_parse_utc() */
 };
@@ -22,7 +22,9 @@ enum setting_type {
 struct setting {
 	const char *name;
 	enum setting_type type;
-	double fallback, min, max;      /* number, integer, boolean */
+	/* Number, integer, boolean.  fallback NAN: none.  min == max: no limits; an infinite one: open to that side.
+	 * Text: max > 0 is the largest length in bytes; min > 0, or `required`: not empty. */
+	double fallback, min, max;
 	const char *text;               /* fallback of text, choice and instant; NULL: none */
 	const char *choices;            /* SETTING_CHOICE: words parted by | */
 	bool required;
@@ -32,8 +34,8 @@ struct setting {
 };
 
 struct setting_value {
-	double number;
-	long long integer;              /* also: 0 or 1 of a boolean, index of a choice */
+	double number;                  /* of a number or integer; NAN when absent without fallback */
+	long long integer;              /* also: 0 or 1 of a boolean, index of a choice (-1: absent without fallback) */
 	const char *text;               /* lives as long as the struct settings; NULL when absent without fallback */
 	bool given;                     /* false: the fallback stands */
 	int line;                       /* where it was given; 0 when not */
@@ -44,12 +46,16 @@ struct setting_group {
 	const char *name;
 	const char *meaning;
 	bool list;
-	bool required;                  /* list: at least one element */
+	/* The group must be there; a list: with at least one element.  A plain group that is not required and left out
+	 * stands with its fallbacks, and its required rows are not asked for: settings_line() is 0 then. */
+	bool required;
 	const struct setting *settings;
 	/* The rows that follow `settings` depend on a choice among them (an intake's driver): given the values of
-	 * `settings` so far, returns a further table or NULL.  May be NULL.  The values stand behind those of `settings`. */
+	 * `settings` so far, returns a further table or NULL.  May be NULL.  The values stand behind those of `settings`.
+	 * It is asked only when every choice in `settings` is sound; other values that were wrong are fallbacks. */
 	const struct setting *(*more)(const struct setting_value *values);
-	/* For the sample and the manual: further table number k with its heading, NULL at the end.  May be NULL. */
+	/* For the sample, the manual and suggestions: further table number k with its heading (driver = "file": ...), NULL
+	 * at the end.  May be NULL. */
 	const struct setting *(*variant)(size_t k, const char **heading);
 };
 
@@ -59,7 +65,8 @@ struct settings;
 /**
  * Reads a configuration (libconfig syntax).  Everything wrong in the file is said through log_error, one
  * sentence each with file, line, setting, value and allowed range; an unknown name comes with the nearest
- * known one as a suggestion.
+ * known one as a suggestion, or with the group it belongs to.  A syntax error ends the reading.  Refused as well:
+ * @include, more than 1 MiB, 20000 settings or 16 brackets inside each other, anything but a regular file.
  *
  * @param out     the caller's to free with settings_free
  * @param groups  must outlive *out
@@ -78,10 +85,14 @@ const struct setting_value *settings_values(const struct settings *settings, con
 /** Line at which element k of the group begins; 0 when it was left out. */
 int settings_line(const struct settings *settings, const char *group, size_t k);
 
-/** Fills `values` with the fallbacks of `table`; for tests and for programs that need no file. @return rows */
+/** Fills `values` with the fallbacks of `table` (NULL: none); for tests and programs without a file.  @return rows */
 size_t settings_fallbacks(const struct setting *table, struct setting_value *values);
 
-/** The commented sample configuration, every setting in its group; it parses, with required ones filled by examples. */
+/**
+ * The commented sample configuration, every setting in its group, within 100 columns.  It parses: required ones are
+ * filled by examples, all others stand behind # with their fallbacks (or examples).  A group that is not required but
+ * has required rows stands behind "# " as a whole.
+ */
 void settings_write_sample(FILE *out, const struct setting_group *groups);
 /** The manual: every setting with unit, fallback, range and meaning, as plain text within 100 columns. */
 void settings_write_manual(FILE *out, const struct setting_group *groups);

@@ -5,6 +5,7 @@
  *
  *   fuzz_x FILE...                          runs each file once
  *   fuzz_x --mutate SEED COUNT FILE...      runs COUNT mutations of the files, the same ones for the same seed
+ *   fuzz_x --show SEED NUMBER FILE...       writes one of them to standard output
  *
  * When an input crashes, its seed and number are on standard output already: the last line is it.  One that takes
  * longer than FUZZ_SECONDS ends the program with SIGALRM.
@@ -126,6 +127,19 @@ static void fuzz_run(const uint8_t *data, size_t n)
 	free(copy);
 }
 
+/* Mutation `number` depends on the seed, the number and the files alone. */
+static void fuzz_make(struct fuzz_input *x, uint64_t seed, size_t number, const struct fuzz_input *corpus, size_t files)
+{
+	const struct fuzz_input *base;
+
+	fuzz_state = (seed * 0x9e3779b97f4a7c15 + number * 0xbf58476d1ce4e5b9) | 1;
+	base = &corpus[fuzz_random(files)];
+	memcpy(x->data, base->data, base->n);
+	x->n = base->n;
+	for (size_t steps = 1 + fuzz_random(FUZZ_STEPS); steps > 0; steps--)
+		fuzz_mutate(x, corpus, files);
+}
+
 static void fuzz_run_mutations(uint64_t seed, size_t count, const struct fuzz_input *corpus, size_t files)
 {
 	struct fuzz_input x = { malloc(FUZZ_ROOM), 0 };
@@ -133,14 +147,7 @@ static void fuzz_run_mutations(uint64_t seed, size_t count, const struct fuzz_in
 	if (!x.data)
 		exit(2);
 	for (size_t k = 0; k < count; k++) {
-		/* Each one depends on the seed and its number alone, so a crash can be run again by itself. */
-		fuzz_state = (seed * 0x9e3779b97f4a7c15 + k * 0xbf58476d1ce4e5b9) | 1;
-		const struct fuzz_input *base = &corpus[fuzz_random(files)];
-
-		memcpy(x.data, base->data, base->n);
-		x.n = base->n;
-		for (size_t steps = 1 + fuzz_random(FUZZ_STEPS); steps > 0; steps--)
-			fuzz_mutate(&x, corpus, files);
+		fuzz_make(&x, seed, k, corpus, files);
 		printf("\rseed %llu mutation %zu", (unsigned long long)seed, k);
 		fflush(stdout);
 		fuzz_run(x.data, x.n);
@@ -149,23 +156,37 @@ static void fuzz_run_mutations(uint64_t seed, size_t count, const struct fuzz_in
 	free(x.data);
 }
 
+static void fuzz_show(uint64_t seed, size_t number, const struct fuzz_input *corpus, size_t files)
+{
+	struct fuzz_input x = { malloc(FUZZ_ROOM), 0 };
+
+	if (!x.data)
+		exit(2);
+	fuzz_make(&x, seed, number, corpus, files);
+	fwrite(x.data, 1, x.n, stdout);
+	free(x.data);
+}
+
 int main(int argc, char **argv)
 {
 	int mutate = argc > 4 && strcmp(argv[1], "--mutate") == 0;
-	int first = mutate ? 4 : 1;
+	int show = argc > 4 && strcmp(argv[1], "--show") == 0;
+	int first = mutate || show ? 4 : 1;
 	size_t files = argc > first ? (size_t)(argc - first) : 0;
 	struct fuzz_input *corpus = calloc(files ? files : 1, sizeof(*corpus));
 
 	if (!files || !corpus) {
-		fprintf(stderr, "usage: %s [--mutate SEED COUNT] FILE...\n", argv[0]);
+		fprintf(stderr, "usage: %s [--mutate SEED COUNT | --show SEED NUMBER] FILE...\n", argv[0]);
 		return 2;
 	}
 	for (size_t i = 0; i < files; i++)
 		corpus[i] = fuzz_read(argv[first + (int)i]);
-	for (size_t i = 0; i < files && !mutate; i++)
+	for (size_t i = 0; i < files && !mutate && !show; i++)
 		fuzz_run(corpus[i].data, corpus[i].n);
 	if (mutate)
 		fuzz_run_mutations(strtoull(argv[2], NULL, 10), strtoull(argv[3], NULL, 10), corpus, files);
+	if (show)
+		fuzz_show(strtoull(argv[2], NULL, 10), strtoull(argv[3], NULL, 10), corpus, files);
 	for (size_t i = 0; i < files; i++)
 		free(corpus[i].data);
 	free(corpus);
