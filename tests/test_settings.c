@@ -488,12 +488,21 @@ static void texts_that_are_no_configuration_are_refused(void **state)
 static void endless_files_end_with_a_sentence(void **state)
 {
 	static char text[1 << 20];
+	struct settings *settings;
 	size_t n = 0;
 
 	(void)state;
 	for (int i = 0; i < 30000; i++)
 		n += (size_t)sprintf(text + n, "a%d=%d;", i, i);
-	assert_refused(text, "more than 20000 settings", "");
+	assert_refused(text, "more than 256 settings in one group", "");
+	n = (size_t)sprintf(text, SITE INTAKE "channels = (");
+	for (int i = 0; i < 2000; i++)
+		n += (size_t)sprintf(text + n, "%s{ name = \"channel %d\"; column = 1; }", i ? ", " : "", i);
+	sprintf(text + n, ");");
+	settings = accepted(text);
+	assert_int_equal(settings_count(settings, "channels"), 2000);
+	assert_string_equal(settings_values(settings, "channels", 1999)[CHANNEL_NAME].text, "channel 1999");
+	settings_free(settings);
 	n = (size_t)sprintf(text, "channels=(");
 	for (int i = 0; i < 100000; i++)
 		n += (size_t)sprintf(text + n, "1,");
