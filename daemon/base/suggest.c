@@ -55,8 +55,8 @@ void suggest_offer(struct suggestion *suggestion, const char *name, size_t lengt
 	size_t word_length = strlen(suggestion->word);
 	unsigned distance = suggest_distance(suggestion->word, word_length, name, length);
 
-	/* A unit left out ("cutoff" for "cutoff_hz") is the likeliest slip of all. */
-	if (word_length > 0 && word_length < length && name[word_length] == '_'
+	/* The end left out, a unit above all ("cutoff" for "cutoff_hz"), is the likeliest slip. */
+	if (word_length > 0 && word_length < length && (word_length >= 3 || name[word_length] == '_')
 	    && strncasecmp(suggestion->word, name, word_length) == 0)
 		distance = least(distance, 1);
 	if (distance < suggestion->distance) {

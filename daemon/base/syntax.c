@@ -13,7 +13,7 @@
 
 enum {
 	DEPTH_MAX = 16,                 /* a configuration needs four */
-	GIVEN_MAX = 20000,              /* libconfig's look for doubles grows with the square: 1 s here */
+	GIVEN_MAX = 256,                /* settings of a group: libconfig's look for doubles is quadratic, 32 s for 20000 */
 };
 
 struct scan {
@@ -22,7 +22,7 @@ struct scan {
 	const char *name;
 	int line;
 	int depth;
-	int given;                      /* settings so far */
+	int given[DEPTH_MAX + 1];       /* settings so far in the open groups; [0]: outside all */
 	char before;                    /* first byte of the token before, 0 at the start */
 	struct { char bracket; int line; } open[DEPTH_MAX];
 };
@@ -135,6 +135,7 @@ static int scan_bracket(struct scan *scan)
 	if (opens) {
 		scan->open[scan->depth].bracket = closing[opens - opening];
 		scan->open[scan->depth++].line = scan->line;
+		scan->given[scan->depth] = 0;
 	} else if (scan->depth == 0) {
 		log_error("%s line %d: %c closes nothing", scan->name, scan->line, *closes);
 		return -EINVAL;
@@ -159,8 +160,9 @@ static int scan_token(struct scan *scan)
 		return scan_bracket(scan);
 	if (strchr("0123456789+-.", *at))
 		return scan_number(scan);
-	if ((*at == '=' || *at == ':') && ++scan->given > GIVEN_MAX) {
-		log_error("%s line %d: more than %d settings: no configuration has as many", scan->name, scan->line, GIVEN_MAX);
+	if ((*at == '=' || *at == ':') && ++scan->given[scan->depth] > GIVEN_MAX) {
+		log_error("%s line %d: more than %d settings in one group: no group has as many", scan->name, scan->line,
+			  GIVEN_MAX);
 		return -EINVAL;
 	}
 	if (strncmp(at, "@include", 8) == 0) {

@@ -66,7 +66,7 @@ struct settings;
  * Reads a configuration (libconfig syntax).  Everything wrong in the file is said through log_error, one
  * sentence each with file, line, setting, value and allowed range; an unknown name comes with the nearest
  * known one as a suggestion, or with the group it belongs to.  A syntax error ends the reading.  Refused as well:
- * @include, more than 1 MiB, 20000 settings or 16 brackets inside each other, anything but a regular file.
+ * @include, more than 1 MiB, 256 settings in a group or 16 brackets inside each other, anything but a regular file.
  *
  * @param out     the caller's to free with settings_free
  * @param groups  must outlive *out

@@ -43,6 +43,8 @@ static const struct setting card_table[] = {
 	{ .name = "device", .type = SETTING_TEXT, .text = "hw:0", .min = 1, .meaning = "name of the sound device" },
 	{ .name = "rate_hz", .type = SETTING_INTEGER, .fallback = 48000, .min = 8000, .max = 192000,
 		.meaning = "frames per second" },
+	{ .name = "columns", .type = SETTING_INTEGER, .min = 1, .max = 8, .required = true, .example = "2",
+		.meaning = "channels of the card" },
 	{ .name = NULL }
 };
 static const struct setting *const intake_tables[] = { file_table, synthetic_table, card_table };
