@@ -160,13 +160,16 @@ static const struct setting *driver_settings(const struct setting_value *values)
 
 static const struct setting *driver_variant(size_t k, const char **heading)
 {
-	for (size_t i = 0; intake_drivers[i]; i++) {
-		if (i < k)
-			continue;
-		*heading = intake_drivers[i]->name;
-		return intake_drivers[i]->settings;
-	}
-	return NULL;
+	static char text[128];
+	size_t n = 0;
+
+	while (intake_drivers[n])
+		n++;
+	if (k >= n)
+		return NULL;
+	snprintf(text, sizeof(text), "driver = \"%s\": %s", intake_drivers[k]->name, intake_drivers[k]->summary);
+	*heading = text;
+	return intake_drivers[k]->settings;
 }
 
 const struct setting_group config_groups[] = {

@@ -1,0 +1,608 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/*
+ * An invented contact with noise, drift and pulse.  The one intake that knows the optics: it is a sky, not a device.
+ * Column 1 is the detector, column 2 the pulse.  Frame n is taken at a true time that follows from the card's clock error.
+ */
+#include <errno.h>
+#include <gsl/gsl_randist.h>
+#include <gsl/gsl_rng.h>
+#include <limits.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+#include <time.h>
+#include "limbwatch/log.h"
+#include "limbwatch/synthetic.h"
+
+#define MAS (M_PI / 180 / 3600e3)
+
+enum {
+	SEED, RATE, FORMAT, DURATION, PACE, START, START_SIGMA, START_ERROR, KIND, CONTACT, DISTANCE, SPEED, WAVELENGTH,
+	PASSBAND, FREQUENCY, BANDWIDTH, PASSBAND_SHAPE, APERTURE, OBSTRUCTION, DIAMETER, LIMB_DARKENING, SEPARATION,
+	COMPANION, INTEGRATION, LOW_PASS, HIGH_PASS, LEVEL, BACKGROUND, SNR, NOISE, RED_NOISE, RED_CORNER, SCINTILLATION,
+	GAIN_DRIFT, HUM, HUM_FREQUENCY, PULSE, PULSE_HEIGHT, PULSE_WIDTH, PULSE_POLARITY, PULSE_AC, PULSE_JITTER,
+	PULSE_MISSING, PULSE_SPURIOUS, PULSE_NOISE, CLOCK_ERROR, CLOCK_DRIFT, CLOCK_WANDER,
+};
+
+#define NUMBER(n, f, lo, hi, m) { .name = n, .type = SETTING_NUMBER, .fallback = f, .min = lo, .max = hi, .meaning = m }
+
+static const struct setting settings[] = {
+	[SEED] = { .name = "seed", .type = SETTING_INTEGER, .fallback = 1, .min = 0, .max = 4294967295.0,
+		.meaning = "another seed, another night" },
+	[RATE] = NUMBER("rate_hz", 48000, 1, 192000, "frames per second, nominal"),
+	[FORMAT] = { .name = "format", .type = SETTING_CHOICE, .text = "S24_3", .choices = "S16|S24_3|S24|S32|FLOAT",
+		.meaning = "sample type" },
+	[DURATION] = NUMBER("duration_s", 60, 0.1, 864000, "how long it plays"),
+	[PACE] = { .name = "real_time_pace", .type = SETTING_BOOLEAN, .fallback = 0, .min = 0, .max = 1,
+		.meaning = "deliver at the rate of a live device instead of as fast as it goes" },
+	[START] = { .name = "start_utc", .type = SETTING_INSTANT, .text = "2031-04-02T01:23:15.25Z",
+		.meaning = "true instant of the first frame" },
+	[START_SIGMA] = NUMBER("start_sigma_s", 0.05, 0, 86400, "standard uncertainty it claims for that; 0: it claims to know "
+	                       "nothing"),
+	[START_ERROR] = NUMBER("start_error_s", 0, -86400, 86400, "how wrong the claimed start is"),
+	[KIND] = { .name = "kind", .type = SETTING_CHOICE, .text = "immersion", .choices = "immersion|emersion|none",
+		.meaning = "the contact played" },
+	[CONTACT] = NUMBER("contact_s", 30, 0, 864000, "true instant of the contact after the start"),
+	[DISTANCE] = NUMBER("distance_km", 378000, 340000, 420000, "distance to the limb"),
+	[SPEED] = NUMBER("shadow_speed_mps", 600, 5, 5000, "speed of the shadow along the limb normal"),
+	[WAVELENGTH] = NUMBER("wavelength_nm", 620, 100, 20000, "centre of an optical passband"),
+	[PASSBAND] = NUMBER("passband_nm", 0, 0, 5000, "its width"),
+	[FREQUENCY] = NUMBER("frequency_mhz", 0, 1, 1e6, "centre of a radio passband, instead of wavelength_nm"),
+	[BANDWIDTH] = NUMBER("passband_mhz", 0, 0, 1e5, "its width"),
+	[PASSBAND_SHAPE] = { .name = "passband_shape", .type = SETTING_CHOICE, .text = "top_hat",
+		.choices = "top_hat|gaussian", .meaning = "its shape" },
+	[APERTURE] = NUMBER("aperture_m", 0, 0, 1000, "diameter of telescope or dish"),
+	[OBSTRUCTION] = NUMBER("obstruction", 0, 0, 0.95, "central obstruction over aperture_m"),
+	[DIAMETER] = NUMBER("diameter_mas", 0, 0, 3.6e6, "angular diameter of the source; 0: a point"),
+	[LIMB_DARKENING] = NUMBER("limb_darkening", 0, 0, 1, "linear coefficient u of its disc"),
+	[SEPARATION] = NUMBER("companion_separation_mas", 0, -3.6e6, 3.6e6, "companion along the limb normal; positive: its "
+	                      "contact is later"),
+	[COMPANION] = NUMBER("companion_flux", 0, 0, 1, "companion's flux over the source's"),
+	[INTEGRATION] = NUMBER("integration_s", 0, 0, 100, "boxcar integration of the detector"),
+	[LOW_PASS] = NUMBER("low_pass_s", 0, 0, 100, "time constant of the detector; its noise comes after"),
+	[HIGH_PASS] = NUMBER("high_pass_hz", 0, 0, 1000, "corner of the AC coupling of the card, acts on everything"),
+	[LEVEL] = NUMBER("level", 0.2, 1e-6, 1, "height of the source over full scale"),
+	[BACKGROUND] = NUMBER("background", 0.1, -1, 1, "level with the source covered over full scale"),
+	[SNR] = NUMBER("snr", 0, 0.1, 1e6, "sets noise_rms so that the ideal matched filter sees this; 0: as noise_rms says"),
+	[NOISE] = NUMBER("noise_rms", 0.01, 0, 10, "white noise of one sample over full scale"),
+	[RED_NOISE] = NUMBER("red_noise_rms", 0, 0, 10, "red noise (one pole) over full scale"),
+	[RED_CORNER] = NUMBER("red_corner_hz", 1, 1e-5, 1000, "corner of red noise and scintillation"),
+	[SCINTILLATION] = NUMBER("scintillation", 0, 0, 1, "rms of the source's own twinkling, relative"),
+	[GAIN_DRIFT] = NUMBER("gain_drift_per_hour", 0, -10, 10, "relative change of the detector's gain in an hour"),
+	[HUM] = NUMBER("hum_rms", 0, 0, 1, "mains hum over full scale"),
+	[HUM_FREQUENCY] = NUMBER("hum_hz", 50, 1, 1000, "its frequency"),
+	[PULSE] = { .name = "pulse", .type = SETTING_BOOLEAN, .fallback = 0, .min = 0, .max = 1,
+		.meaning = "a second column with the one-second pulse" },
+	[PULSE_HEIGHT] = NUMBER("pulse_height", 0.5, 0.001, 1, "height of the pulse over full scale"),
+	[PULSE_WIDTH] = NUMBER("pulse_width_s", 0.1, 0.001, 0.5, "length of the pulse"),
+	[PULSE_POLARITY] = { .name = "pulse_polarity", .type = SETTING_CHOICE, .text = "normal", .choices = "normal|inverted",
+		.meaning = "inverted: the falling edge leads" },
+	[PULSE_AC] = NUMBER("pulse_ac_hz", 0, 0, 1000, "corner of the AC coupling of the pulse channel; 0: DC"),
+	[PULSE_JITTER] = NUMBER("pulse_jitter_s", 50e-9, 0, 0.01, "jitter of one pulse, rms"),
+	[PULSE_MISSING] = NUMBER("pulse_missing", 0, 0, 1, "share of pulses missing"),
+	[PULSE_SPURIOUS] = NUMBER("pulse_spurious", 0, 0, 1, "spurious pulses a second"),
+	[PULSE_NOISE] = NUMBER("pulse_noise_rms", 1e-4, 0, 1, "white noise of the pulse channel over full scale"),
+	[CLOCK_ERROR] = NUMBER("clock_error_ppm", 0, -1000, 1000, "how fast the card's clock is"),
+	[CLOCK_DRIFT] = NUMBER("clock_drift_ppm_per_hour", 0, -100, 100, "and how that changes"),
+	[CLOCK_WANDER] = NUMBER("clock_wander", 0, 0, 100, "random walk of the card's clock, ppm after an hour, rms"),
+	{ .name = NULL },
+};
+
+enum { BLOCK = 4096, EDGES = 16, STEP_HALF = 32, STEP_FINE = 256 };
+
+struct edge { double frame, height; };
+
+struct synthetic {
+	struct intake intake;
+	double rate;
+	struct tai start;
+	/* The card: frame number at whole true seconds after the start. */
+	size_t seconds;
+	double *second_frame;
+	/* The detector. */
+	struct curve *curve;            /* NULL: no contact */
+	double contact, covered, level, background, noise, red, red_pole, twinkle, drift, hum, hum_rate;
+	double high_pass, high_pass_pole;
+	double red_state, twinkle_state, slow;  /* slow: low-passed signal of the AC coupling */
+	/* The pulse. */
+	bool pulse;
+	double pulse_height, pulse_idle, pulse_width, pulse_jitter, pulse_missing, pulse_spurious, pulse_noise;
+	double pulse_ac, pulse_pole, pulse_slow, settled;
+	size_t next_second, edges;
+	struct edge edge[EDGES];
+	/* Output. */
+	gsl_rng *rng, *pulse_rng;       /* apart, so that the noise does not depend on the pulse */
+	uint64_t next, total;
+	bool pace;
+	int64_t started_ns;
+	double detector[BLOCK], ticks[BLOCK];
+	unsigned char frames[BLOCK * 2 * 4];
+};
+
+/* Band-limited step, 0 to 1 about u = 0: the integral of a Blackman-windowed sinc, symmetric, so that its half height is
+ * the edge to the last digit.  Tabulated at 1/STEP_FINE sample, linear between. */
+static double step_table[2 * STEP_HALF * STEP_FINE + 1];
+
+static void make_step_table(void)
+{
+	enum { HALF = STEP_HALF * STEP_FINE };
+	double sum = 0, before = 0;
+
+	if (step_table[2 * HALF] != 0)
+		return;
+	for (int k = -HALF; k <= HALF; k++) {
+		double u = (double)k / STEP_FINE, phase = M_PI * u / STEP_HALF;
+		double window = 0.42 + 0.5 * cos(phase) + 0.08 * cos(2 * phase);
+		double sinc = k ? sin(0.9 * M_PI * u) / (0.9 * M_PI * u) : 1;      /* a card passes 0.45 of its rate */
+
+		sum += 0.5 * (before + window * sinc);
+		before = window * sinc;
+		step_table[k + HALF] = sum;
+	}
+	for (int k = 0; k <= 2 * HALF; k++)
+		step_table[k] /= sum;
+}
+
+static double step(double u)
+{
+	double x = (u + STEP_HALF) * STEP_FINE;
+	int k = (int)x;
+
+	if (u <= -STEP_HALF)
+		return 0;
+	if (u >= STEP_HALF)
+		return 1;
+	return step_table[k] + (x - k) * (step_table[k + 1] - step_table[k]);
+}
+
+/* ------------------------------------------------------------------ the event */
+
+void synthetic_curve(const struct setting_value *v, struct curve_parameters *out)
+{
+	double lambda = v[WAVELENGTH].number * 1e-9, width = v[PASSBAND].number * 1e-9;
+
+	if (v[FREQUENCY].number > 0) {
+		lambda = 299.792458 / v[FREQUENCY].number;
+		width = lambda * v[BANDWIDTH].number / v[FREQUENCY].number;
+	}
+	*out = (struct curve_parameters){
+		.kind = v[KIND].integer == 1 ? CONTACT_EMERSION : CONTACT_IMMERSION,
+		.distance_m = v[DISTANCE].number * 1e3, .speed_mps = v[SPEED].number,
+		.passband = {
+			.shape = width == 0 ? PASSBAND_LINE : v[PASSBAND_SHAPE].integer ? PASSBAND_GAUSSIAN : PASSBAND_TOP_HAT,
+			.wavelength_m = lambda, .width_m = width,
+		},
+		.aperture_m = v[APERTURE].number, .obstruction = v[OBSTRUCTION].number,
+		.integration_s = v[INTEGRATION].number, .low_pass_s = v[LOW_PASS].number,
+		.high_pass_hz = v[HIGH_PASS].number,
+		.components = v[COMPANION].number > 0 ? 2 : 1,
+		.component = {
+			{ .shape = v[DIAMETER].number == 0 ? SHAPE_POINT : v[LIMB_DARKENING].number > 0 ?
+				SHAPE_LIMB_DARKENED_DISC : SHAPE_UNIFORM_DISC,
+			  .size_rad = v[DIAMETER].number * MAS, .limb_darkening = v[LIMB_DARKENING].number, .flux = 1 },
+			{ .shape = SHAPE_POINT, .flux = v[COMPANION].number, .offset_rad = v[SEPARATION].number * MAS },
+		},
+	};
+}
+
+/*
+ * Root sum of squares over the frames of 16 T_F of the curve less its mean and slope: matched-filter SNR of unit level in unit
+ * white noise.  The edge stands 21% into the window, 79% for an immersion.
+ */
+static double edge_strength(const struct curve *curve, const struct curve_parameters *p, double rate)
+{
+	enum { POINTS = 8192 };
+	double window = 16 * curve_fresnel_time(p), dt = window / POINTS, sum = 0, slope = 0, squares = 0;
+	double begin = -window * (p->kind == CONTACT_IMMERSION ? 0.79 : 0.21);
+	double *s = malloc(POINTS * sizeof(*s));
+
+	if (!s)
+		return NAN;
+	curve_sample(curve, begin + dt / 2, dt, POINTS, s);
+	for (int k = 0; k < POINTS; k++) {
+		double x = (k + 0.5) / POINTS - 0.5;
+
+		sum += s[k];
+		slope += s[k] * x;
+		squares += s[k] * s[k];
+	}
+	free(s);
+	squares -= sum * sum / POINTS + slope * slope / (POINTS / 12.0);
+	return sqrt(fmax(squares, 0) * rate * dt);
+}
+
+static int make_curve(struct curve **out, const struct setting_value *v, double *strength)
+{
+	struct curve_parameters p;
+	int ret;
+
+	synthetic_curve(v, &p);
+	ret = curve_create(out, &p);
+	if (ret < 0) {
+		log_error("synthetic intake: the event's settings do not go together (sizes, passband and responses against a "
+		          "Fresnel time of %.4g s): %s", curve_fresnel_time(&p), strerror(-ret));
+		return ret;
+	}
+	*strength = edge_strength(*out, &p, v[RATE].number);
+	return 0;
+}
+
+static double noise_for(const struct setting_value *v, double strength)
+{
+	return v[SNR].number > 0 ? v[LEVEL].number * strength / v[SNR].number : v[NOISE].number;
+}
+
+/* ------------------------------------------------------------------ the card's clock */
+
+static double *make_card(const struct setting_value *v, size_t seconds)
+{
+	double *frame = malloc((seconds + 1) * sizeof(*frame)), wander = 0;
+	gsl_rng *rng = gsl_rng_alloc(gsl_rng_mt19937);
+
+	if (!frame || !rng) {
+		free(frame);
+		gsl_rng_free(rng);
+		return NULL;
+	}
+	gsl_rng_set(rng, (unsigned long)v[SEED].integer ^ 0x5ca1ab1eu);
+	frame[0] = 0;
+	for (size_t s = 0; s < seconds; s++) {
+		double ppm = v[CLOCK_ERROR].number + v[CLOCK_DRIFT].number * ((double)s + 0.5) / 3600 + wander;
+
+		wander += gsl_ran_gaussian(rng, v[CLOCK_WANDER].number / 60);
+		frame[s + 1] = frame[s] + v[RATE].number * (1 + ppm * 1e-6);
+	}
+	gsl_rng_free(rng);
+	return frame;
+}
+
+static size_t card_seconds(const struct setting_value *v)
+{
+	return (size_t)(v[DURATION].number * 1.002) + 3;
+}
+
+static double frame_at(const double *second_frame, size_t seconds, double t)
+{
+	size_t s = t <= 0 ? 0 : (size_t)t;
+
+	if (s >= seconds)
+		s = seconds - 1;
+	return second_frame[s] + (t - (double)s) * (second_frame[s + 1] - second_frame[s]);
+}
+
+double synthetic_frame(const struct setting_value *v, double t)
+{
+	size_t seconds = card_seconds(v);
+	double *card = make_card(v, seconds), frame;
+
+	if (!card)
+		return NAN;
+	frame = frame_at(card, seconds, t);
+	free(card);
+	return frame;
+}
+
+int synthetic_truth(const struct setting_value *v, struct synthetic_truth *out)
+{
+	struct curve_parameters p;
+	struct curve *curve;
+	struct tai start;
+	double strength;
+	int ret;
+
+	if (v[KIND].integer == 2) {
+		log_error("synthetic intake: kind is none: there is no contact");
+		return -EINVAL;
+	}
+	ret = make_curve(&curve, v, &strength);
+	if (ret < 0)
+		return ret;
+	curve_destroy(curve);
+	synthetic_curve(v, &p);
+	tai_parse_utc(&start, v[START].text);
+	*out = (struct synthetic_truth){
+		.contact = tai_add(start, v[CONTACT].number), .frame = synthetic_frame(v, v[CONTACT].number),
+		.fresnel_time_s = curve_fresnel_time(&p), .noise_rms = noise_for(v, strength), .rate = v[RATE].number,
+	};
+	out->snr = v[LEVEL].number * strength / out->noise_rms;
+	return 0;
+}
+
+/* ------------------------------------------------------------------ open and close */
+
+static double pole(double corner_hz, double rate)
+{
+	return corner_hz > 0 ? exp(-2 * M_PI * corner_hz / rate) : 0;
+}
+
+static int set_detector(struct synthetic *s, const struct setting_value *v)
+{
+	struct setting_value event[sizeof(settings) / sizeof(*settings)];
+	struct curve *curve;
+	double strength;
+	int ret;
+
+	ret = make_curve(&curve, v, &strength); /* as it will be seen, AC coupling included */
+	if (ret < 0)
+		return ret;
+	curve_destroy(curve);
+	s->noise = noise_for(v, strength);
+	s->contact = v[CONTACT].number;
+	s->covered = v[KIND].integer == 1 ? 0 : 1;      /* before an emersion it is covered */
+	s->level = v[LEVEL].number;
+	s->background = v[BACKGROUND].number;
+	s->red = v[RED_NOISE].number;
+	s->twinkle = v[SCINTILLATION].number;
+	s->red_pole = pole(v[RED_CORNER].number, s->rate);
+	s->drift = v[GAIN_DRIFT].number / 3600;
+	s->hum = v[HUM].number * M_SQRT2;
+	s->hum_rate = 2 * M_PI * v[HUM_FREQUENCY].number;
+	s->high_pass = v[HIGH_PASS].number;
+	s->high_pass_pole = pole(s->high_pass, s->rate);
+	if (v[KIND].integer == 2) {
+		s->covered = 1;
+		return 0;
+	}
+	/* The card's AC coupling acts on everything, sample by sample; so the curve itself goes without. */
+	memcpy(event, v, sizeof(settings) / sizeof(*settings) * sizeof(*v));
+	event[HIGH_PASS].number = 0;
+	return make_curve(&s->curve, event, &strength);
+}
+
+static int set_pulse(struct synthetic *s, const struct setting_value *v)
+{
+	s->pulse = v[PULSE].integer;
+	if (!s->pulse)
+		return 0;
+	if (s->rate < 1000) {
+		log_error("synthetic intake: rate_hz is %g; a pulse needs at least 1000", s->rate);
+		return -EINVAL;
+	}
+	s->pulse_idle = v[PULSE_POLARITY].integer ? v[PULSE_HEIGHT].number : 0;
+	s->pulse_height = v[PULSE_POLARITY].integer ? -v[PULSE_HEIGHT].number : v[PULSE_HEIGHT].number;
+	s->pulse_width = v[PULSE_WIDTH].number;
+	s->pulse_jitter = v[PULSE_JITTER].number;
+	s->pulse_missing = v[PULSE_MISSING].number;
+	s->pulse_spurious = v[PULSE_SPURIOUS].number;
+	s->pulse_noise = v[PULSE_NOISE].number;
+	s->pulse_ac = v[PULSE_AC].number;
+	s->pulse_pole = pole(s->pulse_ac, s->rate);
+	s->pulse_slow = s->settled = s->pulse_idle;
+	make_step_table();
+	return 0;
+}
+
+static void synthetic_close(struct intake *intake)
+{
+	struct synthetic *s = (struct synthetic *)intake;
+
+	if (!s)
+		return;
+	curve_destroy(s->curve);
+	free(s->second_frame);
+	gsl_rng_free(s->rng);
+	gsl_rng_free(s->pulse_rng);
+	free(s);
+}
+
+static void set_intake(struct synthetic *s, const struct setting_value *v)
+{
+	struct intake *in = &s->intake;
+
+	in->driver = &intake_synthetic;
+	in->format.type = (enum sample_type)v[FORMAT].integer;
+	in->format.channels = s->pulse ? 2 : 1;
+	in->rate = s->rate;
+	in->real_time = s->pace;
+	in->total_frames = s->total;
+	in->origin.quality = v[START_SIGMA].number > 0 ? TIME_HOST : TIME_FREE;
+	in->origin.when = tai_add(s->start, v[START_ERROR].number);
+	in->origin.sigma_s = v[START_SIGMA].number;
+	in->origin.source = "configuration";
+	snprintf(in->name, sizeof(in->name), "synthetic %s, seed %lld", v[KIND].integer == 2 ? "noise" :
+	         contact_kind_name(v[KIND].integer == 1 ? CONTACT_EMERSION : CONTACT_IMMERSION), v[SEED].integer);
+}
+
+static int synthetic_open(struct intake **out, const struct setting_value *v)
+{
+	struct synthetic *s = calloc(1, sizeof(*s));
+	int ret = -ENOMEM;
+
+	if (!s)
+		return -ENOMEM;
+	s->rate = v[RATE].number;
+	s->total = (uint64_t)(v[DURATION].number * s->rate);
+	s->pace = v[PACE].integer;
+	s->seconds = card_seconds(v);
+	s->second_frame = make_card(v, s->seconds);
+	s->rng = gsl_rng_alloc(gsl_rng_taus2);
+	s->pulse_rng = gsl_rng_alloc(gsl_rng_mt19937);
+	if (!s->second_frame || !s->rng || !s->pulse_rng)
+		goto close;
+	gsl_rng_set(s->rng, (unsigned long)v[SEED].integer + 1);
+	gsl_rng_set(s->pulse_rng, (unsigned long)v[SEED].integer ^ 0xb0a7u);
+	tai_parse_utc(&s->start, v[START].text);
+	ret = set_detector(s, v);
+	if (ret == 0)
+		ret = set_pulse(s, v);
+	if (ret < 0)
+		goto close;
+	set_intake(s, v);
+	*out = &s->intake;
+	return 0;
+close:
+	synthetic_close(&s->intake);
+	return ret;
+}
+
+static int64_t monotonic_ns(void)
+{
+	struct timespec now;
+
+	clock_gettime(CLOCK_MONOTONIC, &now);
+	return now.tv_sec * INT64_C(1000000000) + now.tv_nsec;
+}
+
+static int synthetic_start(struct intake *intake)
+{
+	((struct synthetic *)intake)->started_ns = monotonic_ns();
+	return 0;
+}
+
+static int synthetic_stop(struct intake *intake)
+{
+	(void)intake;
+	return 0;
+}
+
+/* ------------------------------------------------------------------ samples */
+
+/* True time of frame n, seconds after the start. */
+static double time_of(const struct synthetic *s, double n)
+{
+	size_t k = (size_t)(n / s->rate);
+
+	while (k > 0 && s->second_frame[k] > n)
+		k--;
+	while (k + 1 < s->seconds && s->second_frame[k + 1] <= n)
+		k++;
+	return (double)k + (n - s->second_frame[k]) / (s->second_frame[k + 1] - s->second_frame[k]);
+}
+
+static double red_step(gsl_rng *rng, double *state, double pole_, double rms)
+{
+	*state = pole_ * *state + sqrt(1 - pole_ * pole_) * gsl_ran_gaussian_ziggurat(rng, 1);
+	return rms * *state;
+}
+
+static void make_detector(struct synthetic *s, size_t count)
+{
+	double t0 = time_of(s, (double)s->next), t1 = time_of(s, (double)(s->next + count));
+	double dt = (t1 - t0) / (double)count;
+
+	if (s->curve)
+		curve_sample(s->curve, t0 - s->contact, dt, count, s->detector);
+	for (size_t k = 0; k < count; k++) {
+		double t = t0 + dt * (double)k, source = s->level * (s->curve ? s->detector[k] : s->covered), x;
+
+		if (s->twinkle > 0)
+			source *= fmax(0, 1 + red_step(s->rng, &s->twinkle_state, s->red_pole, s->twinkle));
+		x = (s->background + source) * (1 + s->drift * t);
+		if (s->red > 0)
+			x += red_step(s->rng, &s->red_state, s->red_pole, s->red);
+		if (s->hum > 0)
+			x += s->hum * sin(s->hum_rate * t);
+		if (s->noise > 0)
+			x += gsl_ran_gaussian_ziggurat(s->rng, s->noise);
+		if (s->high_pass > 0) {
+			if (s->next + k == 0)
+				s->slow = x;
+			s->slow = s->high_pass_pole * s->slow + (1 - s->high_pass_pole) * x;
+			x -= s->slow;
+		}
+		s->detector[k] = x;
+	}
+}
+
+static void put_edge(struct synthetic *s, double t, double height)
+{
+	if (s->edges < EDGES)
+		s->edge[s->edges++] = (struct edge){ frame_at(s->second_frame, s->seconds, t), height };
+}
+
+/* Edges of all pulses that begin before `frame`. */
+static void make_edges(struct synthetic *s, double frame)
+{
+	double fraction = (double)(s->start.ns % 1000000000) * 1e-9;
+
+	for (;; s->next_second++) {
+		double t = (double)s->next_second - fraction;   /* a whole second; the first may lie before the start */
+		double late = gsl_ran_gaussian(s->pulse_rng, s->pulse_jitter);
+
+		if (s->next_second + 1 >= s->seconds || frame_at(s->second_frame, s->seconds, t) > frame)
+			return;
+		if (gsl_rng_uniform(s->pulse_rng) >= s->pulse_missing) {
+			put_edge(s, t + late, s->pulse_height);
+			put_edge(s, t + late + s->pulse_width, -s->pulse_height);
+		}
+		if (gsl_rng_uniform(s->pulse_rng) < s->pulse_spurious) {
+			double at = t + 0.3 + 0.4 * gsl_rng_uniform(s->pulse_rng);
+
+			put_edge(s, at, s->pulse_height);
+			put_edge(s, at + 0.001 + 0.1 * gsl_rng_uniform(s->pulse_rng), -s->pulse_height);
+		}
+	}
+}
+
+static void retire_edges(struct synthetic *s, double frame)
+{
+	size_t kept = 0;
+
+	for (size_t k = 0; k < s->edges; k++) {
+		if (s->edge[k].frame + STEP_HALF < frame)
+			s->settled += s->edge[k].height;
+		else
+			s->edge[kept++] = s->edge[k];
+	}
+	s->edges = kept;
+}
+
+static void make_ticks(struct synthetic *s, size_t count)
+{
+	make_edges(s, (double)(s->next + count) + STEP_HALF);
+	retire_edges(s, (double)s->next);
+	for (size_t k = 0; k < count; k++) {
+		double n = (double)(s->next + k), x = s->settled;
+
+		for (size_t e = 0; e < s->edges; e++)
+			if (n > s->edge[e].frame - STEP_HALF)
+				x += s->edge[e].height * step(n - s->edge[e].frame);
+		if (s->pulse_ac > 0) {
+			s->pulse_slow = s->pulse_pole * s->pulse_slow + (1 - s->pulse_pole) * x;
+			x -= s->pulse_slow;
+		}
+		s->ticks[k] = x + gsl_ran_gaussian_ziggurat(s->pulse_rng, s->pulse_noise);
+	}
+}
+
+/* A live device's pace: waits until the block has been "taken". @return false: not within timeout_ms */
+static bool wait_for(const struct synthetic *s, uint64_t frame, int timeout_ms)
+{
+	int64_t due = s->started_ns + (int64_t)((double)frame / s->rate * 1e9), now = monotonic_ns();
+	int64_t wait = due - now < timeout_ms * INT64_C(1000000) ? due - now : timeout_ms * INT64_C(1000000);
+
+	if (wait > 0)
+		nanosleep(&(struct timespec){ wait / 1000000000, wait % 1000000000 }, NULL);
+	return wait == due - now || wait <= 0;
+}
+
+static int synthetic_read(struct intake *intake, struct block *block, int timeout_ms)
+{
+	struct synthetic *s = (struct synthetic *)intake;
+	size_t most = s->pace ? (size_t)fmax(1, fmin(BLOCK, s->rate / 100)) : BLOCK;
+	size_t count = s->total - s->next < most ? (size_t)(s->total - s->next) : most;
+
+	if (count == 0)
+		return -ENODATA;
+	if (s->pace && !wait_for(s, s->next + count, timeout_ms))
+		return 0;
+	make_detector(s, count);
+	frames_from_double(s->frames, intake->format, 0, s->detector, count);
+	if (s->pulse) {
+		make_ticks(s, count);
+		frames_from_double(s->frames, intake->format, 1, s->ticks, count);
+	}
+	*block = (struct block){
+		.frames = s->frames, .count = count, .first = s->next,
+		.host_ns = s->pace ? s->started_ns + (int64_t)((double)s->next / s->rate * 1e9) : INT64_MIN,
+	};
+	s->next += count;
+	return 1;
+}
+
+const struct intake_driver intake_synthetic = {
+	.name = "synthetic", .summary = "an invented contact with noise, drift and pulse",
+	.settings = settings,
+	.open = synthetic_open, .start = synthetic_start, .stop = synthetic_stop, .close = synthetic_close,
+	.read = synthetic_read,
+};

@@ -1,0 +1,255 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <errno.h>
+#include <math.h>
+#include <setjmp.h>
+#include <stdarg.h>
+#include <stddef.h>
+#include <stdint.h>
+#include <stdlib.h>
+#include <string.h>
+#include <cmocka.h>
+#include "limbwatch/fresnel.h"
+#include "limbwatch/synthetic.h"
+
+static struct setting_value values[128];
+
+static struct setting_value *value(const char *name)
+{
+	for (size_t k = 0; intake_synthetic.settings[k].name; k++)
+		if (!strcmp(intake_synthetic.settings[k].name, name))
+			return &values[k];
+	fail_msg("no setting %s", name);
+	return NULL;
+}
+
+static void set(const char *name, double x)
+{
+	value(name)->number = x;
+	value(name)->integer = llround(x);
+}
+
+static int reset(void **state)
+{
+	(void)state;
+	settings_fallbacks(intake_synthetic.settings, values);
+	set("format", 4);       /* FLOAT: nothing is lost to rounding */
+	return 0;
+}
+
+/* Everything it plays, by column. */
+static size_t play(double *column[2])
+{
+	struct intake *in;
+	struct block block;
+	size_t n = 0;
+	int ret;
+
+	assert_int_equal(intake_synthetic.open(&in, values), 0);
+	assert_int_equal(intake_synthetic.start(in), 0);
+	for (unsigned c = 0; c < in->format.channels; c++) {
+		column[c] = malloc(in->total_frames * sizeof(double));
+		assert_non_null(column[c]);
+	}
+	while ((ret = intake_synthetic.read(in, &block, 100)) == 1) {
+		assert_int_equal(block.first, n);
+		for (unsigned c = 0; c < in->format.channels; c++)
+			frames_to_double(column[c] + n, block.frames, in->format, c, block.count);
+		n += block.count;
+	}
+	assert_int_equal(ret, -ENODATA);
+	assert_int_equal(n, in->total_frames);
+	intake_synthetic.stop(in);
+	intake_synthetic.close(in);
+	return n;
+}
+
+/* A point in one wavelength is the straight-edge pattern itself: Born & Wolf, Principles of Optics, 8.7. */
+static void the_event_is_the_edge_pattern_at_the_true_time(void **state)
+{
+	double *column[2], scale, speed = 637;
+	size_t n;
+
+	(void)state;
+	set("duration_s", 4);
+	set("contact_s", 2.0123);
+	set("noise_rms", 0);
+	set("shadow_speed_mps", speed);
+	set("clock_error_ppm", 100);
+	n = play(column);
+	scale = fresnel_scale(620e-9, 378e6);
+	for (size_t k = 0; k < n; k++) {
+		double t = (double)k / (48000 * (1 + 100e-6)), w = -speed * (t - 2.0123) / scale;
+
+		assert_true(fabs(column[0][k] - (0.1 + 0.2 * edge_intensity(w))) < 1e-6);
+	}
+	free(column[0]);
+}
+
+static void the_truth_names_the_frame_of_the_contact(void **state)
+{
+	struct synthetic_truth truth;
+	char text[TAI_TEXT];
+
+	(void)state;
+	set("contact_s", 30.5);
+	set("clock_error_ppm", -40);
+	assert_int_equal(synthetic_truth(values, &truth), 0);
+	assert_true(fabs(truth.frame - 30.5 * 48000 * (1 - 40e-6)) < 1e-5);
+	assert_string_equal(tai_format_utc(text, truth.contact, 3), "2031-04-02T01:23:45.750Z");
+	set("kind", 2);
+	assert_int_equal(synthetic_truth(values, &truth), -EINVAL);
+}
+
+static double mean_of(const double *x, size_t n)
+{
+	double sum = 0;
+
+	for (size_t k = 0; k < n; k++)
+		sum += x[k];
+	return sum / (double)n;
+}
+
+static double rms_about(const double *x, size_t n, double mean)
+{
+	double sum = 0;
+
+	for (size_t k = 0; k < n; k++)
+		sum += (x[k] - mean) * (x[k] - mean);
+	return sqrt(sum / (double)n);
+}
+
+static void the_noise_has_the_rms_asked_for(void **state)
+{
+	double *column[2], mean;
+	size_t n;
+
+	(void)state;
+	set("kind", 2);
+	set("duration_s", 10);
+	set("noise_rms", 0.013);
+	set("rate_hz", 8000);
+	n = play(column);
+	mean = mean_of(column[0], n);
+	/* Standard errors: rms / sqrt(n) = 4.6e-5 and rms / sqrt(2 n) = 3.3e-5; five of them. */
+	assert_true(fabs(mean - 0.3) < 2.3e-4);
+	assert_true(fabs(rms_about(column[0], n, mean) - 0.013) < 1.6e-4);
+	free(column[0]);
+}
+
+/* Signal to noise of the ideal filter, s.x / |s| for the known shape less mean and slope: by definition, done again here. */
+static void snr_sets_the_noise_of_the_ideal_filter(void **state)
+{
+	struct synthetic_truth truth;
+	double *column[2], sum = 0, slope = 0, squares = 0, window;
+	size_t n, begin;
+
+	(void)state;
+	set("duration_s", 4);
+	set("contact_s", 2);
+	set("snr", 12);
+	assert_int_equal(synthetic_truth(values, &truth), 0);
+	assert_true(fabs(truth.snr - 12) < 1e-9);
+	set("snr", 0);
+	set("noise_rms", 0);
+	play(column);
+	window = 16 * truth.fresnel_time_s * 48000;
+	n = (size_t)window;
+	begin = (size_t)(truth.frame - 0.79 * window);
+	for (size_t k = 0; k < n; k++) {
+		double s = column[0][begin + k], x = ((double)k + 0.5) / (double)n - 0.5;
+
+		sum += s;
+		slope += s * x;
+		squares += s * s;
+	}
+	squares -= sum * sum / (double)n + slope * slope / ((double)n / 12);
+	assert_true(fabs(sqrt(squares) / truth.noise_rms - 12) < 0.01);
+	free(column[0]);
+}
+
+/* Half height of the band-limited leading edge, found by the symmetry of a linear-phase step: between frames, by sinc. */
+static double half_height(const double *x, size_t from, double half)
+{
+	double low = (double)from, high = (double)from + 1;
+
+	for (int bisection = 0; bisection < 60; bisection++) {
+		double middle = 0.5 * (low + high), sum = 0;
+
+		for (int k = -40; k <= 40; k++) {
+			double u = middle - (double)((long)from + k);
+			double window = fabs(u) < 40 ? 0.5 + 0.5 * cos(M_PI * u / 40) : 0;
+
+			sum += x[(long)from + k] * window * (fabs(u) < 1e-12 ? 1 : sin(M_PI * u) / (M_PI * u));
+		}
+		if (sum < half)
+			low = middle;
+		else
+			high = middle;
+	}
+	return 0.5 * (low + high);
+}
+
+static void pulses_stand_on_the_true_seconds_of_a_wrong_card(void **state)
+{
+	double *column[2];
+	size_t n, found = 0;
+
+	(void)state;
+	set("kind", 2);
+	set("duration_s", 12);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_jitter_s", 0);
+	set("clock_error_ppm", -73);
+	n = play(column);
+	for (size_t k = 100; k + 100 < n; k++) {
+		double truth, frame;
+
+		if (!(column[1][k] < 0.25 && column[1][k + 1] >= 0.25))
+			continue;
+		frame = half_height(column[1], k, 0.25);
+		truth = synthetic_frame(values, 0.75 + (double)found);  /* it starts a quarter second after a second */
+		assert_true(fabs(frame - truth) < 48e-6 * 1);   /* a nanosecond */
+		found++;
+	}
+	assert_int_equal(found, 12);
+	free(column[0]);
+	free(column[1]);
+}
+
+static void a_seed_gives_the_same_night_again_and_another_another(void **state)
+{
+	double *a[2], *b[2], *c[2];
+	size_t n;
+
+	(void)state;
+	set("duration_s", 2);
+	set("contact_s", 1);
+	set("pulse", 1);
+	n = play(a);
+	play(b);
+	assert_memory_equal(a[0], b[0], n * sizeof(double));
+	assert_memory_equal(a[1], b[1], n * sizeof(double));
+	set("seed", 2);
+	play(c);
+	assert_memory_not_equal(a[0], c[0], n * sizeof(double));
+	for (int k = 0; k < 2; k++) {
+		free(a[k]);
+		free(b[k]);
+		free(c[k]);
+	}
+}
+
+int main(void)
+{
+	const struct CMUnitTest tests[] = {
+		cmocka_unit_test_setup(the_event_is_the_edge_pattern_at_the_true_time, reset),
+		cmocka_unit_test_setup(the_truth_names_the_frame_of_the_contact, reset),
+		cmocka_unit_test_setup(the_noise_has_the_rms_asked_for, reset),
+		cmocka_unit_test_setup(snr_sets_the_noise_of_the_ideal_filter, reset),
+		cmocka_unit_test_setup(pulses_stand_on_the_true_seconds_of_a_wrong_card, reset),
+		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
+	};
+
+	return cmocka_run_group_tests(tests, NULL, NULL);
+}
