@@ -222,12 +222,21 @@ static int64_t frames_in(const struct disk *disk, const char *folder, const char
 	return ret < 0 ? ret : (shape.size - shape.data_begin) / shape.block;
 }
 
+/* NAME.wav, NAME_p2.wav; with -2 or -r2 before the ending where a name was taken. */
 static bool belongs(const char *file, const char *base)
 {
-	size_t n = strlen(base);
+	size_t n = strlen(base), digits;
 
-	return !strncmp(file, base, n) && ends_with(file, ".wav") &&
-		(!strcmp(file + n, ".wav") || !strncmp(file + n, "_p", 2) || file[n] == '-');
+	if (strncmp(file, base, n))
+		return false;
+	file += n;
+	if (!strncmp(file, "_p", 2) && (digits = strspn(file + 2, "0123456789")))
+		file += 2 + digits;
+	if (!strncmp(file, "-r", 2) && (digits = strspn(file + 2, "0123456789")))
+		file += 2 + digits;
+	else if (*file == '-' && (digits = strspn(file + 1, "0123456789")))
+		file += 1 + digits;
+	return !strcmp(file, ".wav");
 }
 
 /* Part k of base: NAME.wav, NAME_p2.wav ...: the order in which they were recorded. */

@@ -26,7 +26,7 @@ struct frame_clock_settings {
 int  frame_clock_create(struct frame_clock **out, const struct frame_clock_settings *settings);
 void frame_clock_destroy(struct frame_clock *clock);
 
-/** An edge at that frame; frames in ascending order.  The newest 86400 are remembered. */
+/** An edge at that frame; frames in ascending order.  The newest 30000 are remembered. */
 void frame_clock_add_pulse(struct frame_clock *clock, double frame, double sigma_frames);
 /** A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true). */
 void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai when, double sigma_s, bool late,
@@ -55,6 +55,15 @@ void frame_clock_at(const struct frame_clock *clock, double frame, struct clock_
 double frame_clock_frame(const struct frame_clock *clock, struct tai when);
 /** True frames per second about `frame` by the last solution (nominal before any). */
 double frame_clock_rate(const struct frame_clock *clock, double frame);
+
+/* What the clock is, for words. */
+struct clock_summary {
+	size_t accepted, rejected;      /* pulses */
+	double rms_residual_s;          /* of the accepted from the smooth */
+	double rate_error;              /* of the card at the newest pulse, relative; positive: fast */
+	bool second_confirmed;
+};
+void frame_clock_summarise(const struct frame_clock *clock, struct clock_summary *out);
 
 struct clock_pulse {
 	double frame;

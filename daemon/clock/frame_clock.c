@@ -1,0 +1,452 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/*
+ * Pulses are tracked as a comb of whole seconds, then smoothed: the state is the card's accumulated error x (seconds)
+ * and its relative frequency error y, y a random walk; Kalman filter forward, Rauch-Tung-Striebel (1965, AIAA J. 3, 1445)
+ * backward.  The strength of the walk is the one under which the pulses are most likely.
+ *
+ * Whole second k (counted from the first accepted pulse) begins at frame F with F / rate = k + x(k).
+ */
+#include <errno.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+#include "frame_clock_inner.h"
+#include "limbwatch/log.h"
+
+enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, SEED_WINDOW = 40, LOCK_PULSES = 5, PASSES = 3 };
+
+static const double gate_floor_s = 20e-6;       /* a pulse this near its place is never refused by tracking */
+static const double settled_ppm = 5e-6;         /* the rate is known this well after a few pulses */
+static const double longest_outage_s = 900;     /* pulses missing longer: the comb is found anew */
+static const double reject_sigmas = 5;
+/* Random walk of y, variance per second: 1e-11 to 3e-8 per root second.  Common practice for crystals: 1e-10 to 1e-9. */
+static const double walks[] = { 1e-22, 1e-21, 1e-20, 1e-19, 1e-18, 1e-17, 1e-16, 1e-15 };
+enum { WALKS = sizeof(walks) / sizeof(*walks) };
+
+int frame_clock_create(struct frame_clock **out, const struct frame_clock_settings *s)
+{
+	struct frame_clock *c;
+
+	if (!(s->rate >= 1e-3 && s->rate <= 1e9) || !(s->rate_tolerance > 0 && s->rate_tolerance < 0.1) ||
+	    !(s->pulse_sigma_s > 0 && s->pulse_sigma_s < 0.1) || !(fabs(s->pulse_delay_s) < 0.5) ||
+	    !(s->pulse_delay_sigma_s >= 0))
+		return -EINVAL;
+	c = calloc(1, sizeof(*c));
+	if (!c)
+		return -ENOMEM;
+	c->settings = *s;
+	*out = c;
+	return 0;
+}
+
+void frame_clock_destroy(struct frame_clock *clock)
+{
+	if (!clock)
+		return;
+	free(clock->node);
+	free(clock);
+}
+
+/* Room for one more pulse; the oldest quarter goes when the memory is full. */
+static bool make_room(struct frame_clock *c)
+{
+	struct node *grown;
+	size_t room;
+
+	if (c->nodes == REMEMBERED) {
+		c->nodes -= REMEMBERED / 4;
+		memmove(c->node, c->node + REMEMBERED / 4, c->nodes * sizeof(*c->node));
+	}
+	if (c->nodes < c->room)
+		return true;
+	room = c->room ? 2 * c->room : 64;
+	if (room > REMEMBERED)
+		room = REMEMBERED;
+	grown = realloc(c->node, room * sizeof(*grown));
+	if (!grown)
+		return false;
+	c->node = grown;
+	c->room = room;
+	return true;
+}
+
+void frame_clock_add_pulse(struct frame_clock *c, double frame, double sigma_frames)
+{
+	struct node *n;
+
+	if (!isfinite(frame) || !(sigma_frames >= 0) || (c->nodes && frame <= c->node[c->nodes - 1].frame) || !make_room(c))
+		return;
+	n = &c->node[c->nodes++];
+	*n = (struct node){ .frame = frame, .sigma_s = hypot(c->settings.pulse_sigma_s, sigma_frames / c->settings.rate) };
+	n->gap_s = c->gap_s;            /* uncertainty of the gaps since the pulse before */
+	n->gap_frame = c->gap_frame;
+	c->gap_s = 0;
+}
+
+void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frames)
+{
+	c->gap_s = hypot(c->gap_s, sigma_frames / c->settings.rate);
+	c->gap_frame = frame;
+	if (c->gaps < FRAME_CLOCK_GAPS)
+		c->gap_at[c->gaps++] = (struct gap_at){ frame, sigma_frames / c->settings.rate };
+}
+
+/* ------------------------------------------------------------------ the comb */
+
+/* Number of whole seconds from pulse a to pulse b, or 0 when they are not on one comb. */
+static double steps(const struct frame_clock *c, const struct node *a, const struct node *b, double rate,
+                    double tolerance)
+{
+	double seconds = (b->frame - a->frame) / rate, n = rint(seconds);
+	double gate = tolerance * n + gate_floor_s + 5 * (a->sigma_s + b->sigma_s) + 5 * b->gap_s;
+
+	(void)c;
+	return n >= 1 && n <= longest_outage_s && gate < 0.3 && fabs(seconds - n) <= gate ? n : 0;
+}
+
+/* Follows the comb that begins at node `seed` through at most `most` nodes; marks them when `mark`. @return length */
+static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark, size_t *last)
+{
+	struct node *from = &c->node[seed];
+	double rate = c->settings.rate, tolerance = c->settings.rate_tolerance, k = from->k;
+	const struct node *first = from;
+	size_t length = 1;
+
+	*last = seed;
+	if (mark)
+		from->accepted = true;
+	for (size_t i = seed + 1; i < c->nodes && i - seed <= most; i++) {
+		struct node *to = &c->node[i];
+		double n = steps(c, from, to, rate, tolerance);
+
+		if (n == 0 || (length == 1 && n > 10)) {
+			if (to->frame - from->frame > longest_outage_s * rate)
+				break;
+			continue;
+		}
+		k += n;
+		length++;
+		if (mark) {
+			to->accepted = true;
+			to->k = k;
+		}
+		/* The rate from the last half minute or so: the first pulse of the base moves along. */
+		if (to->gap_s > 0 || k - first->k > 40)
+			first = from;
+		if (k - first->k >= 3 && to->gap_s == 0) {
+			rate = (to->frame - first->frame) / rint((to->frame - first->frame) / rate);
+			tolerance = settled_ppm;
+		}
+		from = to;
+		if (mark)
+			*last = i;
+	}
+	return length;
+}
+
+/* Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */
+static void find_comb(struct frame_clock *c)
+{
+	size_t i = 0, last;
+	double k = 0;
+	bool any = false;
+
+	for (size_t j = 0; j < c->nodes; j++)
+		c->node[j].accepted = false;
+	while (i < c->nodes) {
+		size_t best = i, length = 0;
+
+		for (size_t seed = i; seed < c->nodes && seed < i + SEED_WINDOW; seed++) {
+			size_t here = follow(c, seed, SEED_WINDOW, false, &last);
+
+			if (here > length) {
+				length = here;
+				best = seed;
+			}
+			if (here >= SEED_WINDOW * 3 / 4)
+				break;
+		}
+		if (length < LOCK_PULSES) {
+			i += SEED_WINDOW / 2;
+			continue;
+		}
+		/* A further comb keeps the count of seconds as well as the nominal rate can. */
+		c->node[best].k = any ? rint(k + (c->node[best].frame - c->lock_frame) / c->settings.rate) : 0;
+		c->node[best].relock = any;
+		follow(c, best, c->nodes, true, &last);
+		any = true;
+		k = c->node[last].k;
+		c->lock_frame = c->node[last].frame;
+		i = last + 1;
+	}
+}
+
+/* ------------------------------------------------------------------ filter and smoother */
+
+static double measured(const struct frame_clock *c, const struct node *n)
+{
+	return n->frame / c->settings.rate - n->k;
+}
+
+static void predict(struct state *s, double dt, double walk, double jump)
+{
+	s->x += s->y * dt;
+	s->xx += 2 * dt * s->xy + dt * dt * s->yy + walk * dt * dt * dt / 3 + jump * jump;
+	s->xy += dt * s->yy + walk * dt * dt / 2;
+	s->yy += walk * dt;
+}
+
+static double jump_before(const struct node *n)
+{
+	/* A comb found anew: the phase says nothing about the old one. */
+	return n->relock ? 0.3 : n->gap_s;
+}
+
+static void start(const struct frame_clock *c, const struct node *n, struct state *s)
+{
+	double tolerance = c->settings.rate_tolerance;
+
+	*s = (struct state){ .x = measured(c, n), .xx = n->variance, .yy = tolerance * tolerance };
+}
+
+static void update(struct state *s, double z, double variance)
+{
+	double v = z - s->x, total = s->xx + variance, gain_x = s->xx / total, gain_y = s->xy / total;
+
+	s->x += gain_x * v;
+	s->y += gain_y * v;
+	s->yy -= gain_y * s->xy;
+	s->xy -= gain_x * s->xy;
+	s->xx -= gain_x * s->xx;
+}
+
+/* Twice the negative log likelihood of the newest pulses under a walk. */
+static double unlikelihood(const struct frame_clock *c, double walk)
+{
+	const struct node *before = NULL;
+	struct state s = { 0 };
+	double sum = 0;
+	size_t seen = 0;
+
+	for (size_t i = c->nodes > LIKELIHOOD_PULSES ? c->nodes - LIKELIHOOD_PULSES : 0; i < c->nodes; i++) {
+		const struct node *n = &c->node[i];
+
+		if (!n->accepted)
+			continue;
+		if (!before) {
+			start(c, n, &s);
+		} else {
+			double v, total;
+
+			predict(&s, n->k - before->k, walk, jump_before(n));
+			v = measured(c, n) - s.x;
+			total = s.xx + n->variance;
+			if (seen > 3 && n->gap_s == 0 && !n->relock)
+				sum += v * v / total + log(total);
+			update(&s, measured(c, n), n->variance);
+		}
+		before = n;
+		seen++;
+	}
+	return sum;
+}
+
+static double likely_walk(const struct frame_clock *c)
+{
+	double best = INFINITY, walk = walks[0];
+
+	for (size_t k = 0; k < WALKS; k++) {
+		double u = unlikelihood(c, walks[k]);
+
+		if (u < best) {
+			best = u;
+			walk = walks[k];
+		}
+	}
+	return walk;
+}
+
+static void filter(struct frame_clock *c)
+{
+	const struct node *before = NULL;
+	struct state s = { 0 };
+
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (!n->accepted)
+			continue;
+		if (!before) {
+			start(c, n, &s);
+		} else {
+			predict(&s, n->k - before->k, c->walk, jump_before(n));
+			update(&s, measured(c, n), n->variance);
+		}
+		n->filtered = s;
+		before = n;
+	}
+}
+
+static void smooth(struct frame_clock *c)
+{
+	struct node *after = NULL;
+
+	for (size_t i = c->nodes; i-- > 0; ) {
+		struct node *n = &c->node[i];
+		struct state p, f;
+		double dt, det, g[2][2], dxx, dxy, dyy, ex, ey;
+
+		if (!n->accepted)
+			continue;
+		n->smoothed = f = n->filtered;
+		if (after) {
+			dt = after->k - n->k;
+			p = f;
+			predict(&p, dt, c->walk, jump_before(after));
+			det = p.xx * p.yy - p.xy * p.xy;
+			/* G = P F' Pp^-1 */
+			g[0][0] = ((f.xx + dt * f.xy) * p.yy - f.xy * p.xy) / det;
+			g[0][1] = (-(f.xx + dt * f.xy) * p.xy + f.xy * p.xx) / det;
+			g[1][0] = ((f.xy + dt * f.yy) * p.yy - f.yy * p.xy) / det;
+			g[1][1] = (-(f.xy + dt * f.yy) * p.xy + f.yy * p.xx) / det;
+			ex = after->smoothed.x - p.x;
+			ey = after->smoothed.y - p.y;
+			dxx = after->smoothed.xx - p.xx;
+			dxy = after->smoothed.xy - p.xy;
+			dyy = after->smoothed.yy - p.yy;
+			n->smoothed.x += g[0][0] * ex + g[0][1] * ey;
+			n->smoothed.y += g[1][0] * ex + g[1][1] * ey;
+			n->smoothed.xx += g[0][0] * g[0][0] * dxx + 2 * g[0][0] * g[0][1] * dxy + g[0][1] * g[0][1] * dyy;
+			n->smoothed.xy += g[0][0] * g[1][0] * dxx + (g[0][0] * g[1][1] + g[0][1] * g[1][0]) * dxy +
+				g[0][1] * g[1][1] * dyy;
+			n->smoothed.yy += g[1][0] * g[1][0] * dxx + 2 * g[1][0] * g[1][1] * dxy + g[1][1] * g[1][1] * dyy;
+			n->smoothed.xx = fmax(n->smoothed.xx, 0);
+		}
+		after = n;
+	}
+}
+
+/* ------------------------------------------------------------------ solving */
+
+static int by_size(const void *a, const void *b)
+{
+	double x = *(const double *)a, y = *(const double *)b;
+
+	return (x > y) - (x < y);
+}
+
+/* How much larger the residuals are than stated, from their median; at least 1. */
+static double excess(const struct frame_clock *c)
+{
+	double *ratio = malloc((c->nodes + 1) * sizeof(*ratio)), median;
+	size_t n = 0;
+
+	if (!ratio)
+		return 1;
+	for (size_t i = 0; i < c->nodes; i++)
+		if (c->node[i].accepted)
+			ratio[n++] = fabs(c->node[i].residual) / c->node[i].sigma_s;
+	if (n < 10) {
+		free(ratio);
+		return 1;
+	}
+	qsort(ratio, n, sizeof(*ratio), by_size);
+	median = ratio[n / 2] / 0.6745;         /* of a Gaussian: 0.6745 sigma */
+	free(ratio);
+	return fmax(1, median);
+}
+
+static size_t judge(struct frame_clock *c, double scale, bool reject)
+{
+	size_t accepted = 0;
+	double squares = 0;
+
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (!n->accepted)
+			continue;
+		n->residual = measured(c, n) - n->smoothed.x;
+		if (reject && fabs(n->residual) > reject_sigmas * scale * n->sigma_s) {
+			n->accepted = false;
+			continue;
+		}
+		accepted++;
+		squares += n->residual * n->residual;
+	}
+	c->rms_residual_s = accepted ? sqrt(squares / (double)accepted) : NAN;
+	return accepted;
+}
+
+/* Pulses that were dropped by the smooth still have a residual to be shown. */
+static void residuals_of_the_rejected(struct frame_clock *c)
+{
+	for (size_t i = 0; i < c->nodes; i++)
+		if (!c->node[i].accepted) {
+			double k = clock_seconds(c, c->node[i].frame, NULL);
+
+			c->node[i].residual = k - rint(k);
+		}
+}
+
+size_t frame_clock_solve(struct frame_clock *c)
+{
+	double scale = 1;
+	size_t accepted = 0;
+
+	find_comb(c);
+	for (size_t i = 0; i < c->nodes; i++)
+		accepted += c->node[i].accepted;
+	c->accepted = 0;
+	if (accepted >= LOCK_PULSES) {
+		for (int pass = 0; pass < PASSES; pass++) {
+			for (size_t i = 0; i < c->nodes; i++)
+				c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
+			c->walk = likely_walk(c);
+			filter(c);
+			smooth(c);
+			judge(c, 1, false);
+			scale = excess(c);
+			accepted = judge(c, scale, pass < PASSES - 1);
+			if (accepted < LOCK_PULSES)
+				break;
+		}
+		c->accepted = accepted >= LOCK_PULSES ? accepted : 0;
+	}
+	if (c->accepted)
+		residuals_of_the_rejected(c);
+	label_seconds(c);
+	return c->accepted;
+}
+
+size_t frame_clock_pulses(const struct frame_clock *c, double from, double to, struct clock_pulse *out, size_t max)
+{
+	size_t given = 0;
+
+	for (size_t i = 0; i < c->nodes && given < max; i++) {
+		const struct node *n = &c->node[i];
+		bool accepted = n->accepted && c->accepted;
+
+		if (n->frame < from || n->frame >= to)
+			continue;
+		out[given++] = (struct clock_pulse){
+			.frame = n->frame, .accepted = accepted, .residual_s = c->accepted ? n->residual : NAN,
+			.second.ns = accepted && c->labelled ? (int64_t)(c->second_zero + n->k) * 1000000000 : INT64_MIN,
+		};
+	}
+	return given;
+}
+
+void frame_clock_summarise(const struct frame_clock *c, struct clock_summary *out)
+{
+	const struct node *newest = NULL;
+
+	for (size_t i = c->nodes; !newest && i-- > 0; )
+		if (c->node[i].accepted)
+			newest = &c->node[i];
+	*out = (struct clock_summary){
+		.accepted = c->accepted, .rejected = c->nodes - c->accepted, .rms_residual_s = c->rms_residual_s,
+		.rate_error = c->accepted && newest ? newest->smoothed.y : NAN,
+		.second_confirmed = c->second_confirmed,
+	};
+}

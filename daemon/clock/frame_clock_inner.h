@@ -1,0 +1,57 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef FRAME_CLOCK_INNER_H
+#define FRAME_CLOCK_INNER_H
+
+#include "limbwatch/frame_clock.h"
+
+/* What frame_clock.c (pulses) and frame_labels.c (labels, readings) share. */
+
+enum { FRAME_CLOCK_LABELS = 512, FRAME_CLOCK_GAPS = 256 };
+
+/* The card's accumulated error x, seconds, and relative frequency error y, with their covariance. */
+struct state { double x, y, xx, xy, yy; };
+
+struct node {
+	double frame, sigma_s;
+	double gap_s, gap_frame;        /* uncertainty of frames lost since the pulse before, and where */
+	double k;                       /* whole seconds from the first accepted pulse */
+	double variance, residual;
+	bool accepted, relock;          /* relock: first of a comb found anew */
+	struct state filtered, smoothed;
+};
+
+struct label {
+	double frame, sigma_s;
+	struct tai when;
+	bool late;
+	enum time_quality quality;
+};
+
+struct gap_at { double frame, sigma_s; };
+
+struct frame_clock {
+	struct frame_clock_settings settings;
+	size_t nodes, room;
+	struct node *node;
+	double gap_s, gap_frame, lock_frame;    /* since the newest pulse */
+	size_t gaps;
+	struct gap_at gap_at[FRAME_CLOCK_GAPS];
+	size_t labels;
+	struct label label[FRAME_CLOCK_LABELS];
+	/* The last solution. */
+	size_t accepted;
+	double walk, rms_residual_s;
+	bool labelled, second_confirmed, contradiction_said;
+	double second_zero;             /* TAI second of k = 0 */
+	double label_sigma_s;           /* of the label that decided */
+	/* Without pulses: TAI seconds = base + frame / rate * (1 + slope), about frame `pivot`. */
+	double line_pivot, line_slope, line_sigma_s, line_slope_sigma;
+	struct tai line_base;
+};
+
+/** Seconds from k = 0 at a frame, by the pulses; `sigma` (may be NULL) of the smooth alone. Needs accepted pulses. */
+double clock_seconds(const struct frame_clock *clock, double frame, double *sigma);
+/** Decides which second k = 0 is, and fits the line through the labels. */
+void label_seconds(struct frame_clock *clock);
+
+#endif

@@ -1,0 +1,361 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/*
+ * Blocks of about a millisecond are screened by their largest difference over a few frames; where it stands far above
+ * what is usual, the edge is located: levels before and after are followed to the edge by parabolas (an AC-coupled
+ * pulse sags), and the instant is where the band-limited signal, rebuilt between frames by a windowed sinc (Shannon 1949, Proc. IRE
+ * 37, 10), passes half way.  For an edge of the full band the slope there is nearly all the information the samples hold:
+ * a fit of the whole edge would gain 5%.
+ *
+ * A leading edge is followed by the opposite one within half a second; what is not a pulse after all is the frame
+ * clock's to judge.
+ */
+#include <errno.h>
+#include <math.h>
+#include <stdbool.h>
+#include <stdlib.h>
+#include <string.h>
+#include "limbwatch/pulse.h"
+
+enum {
+	LAG = 2,                        /* the screening difference is x[k + LAG] - x[k - LAG] */
+	SINC = 24,                      /* half width of the interpolation */
+	INNER = 8, OUTER = 48,          /* frames from the edge where levels are taken */
+	REACH = OUTER + SINC + 8,       /* frames needed on both sides of a block */
+	EDGES = 64,                     /* held until their opposite comes */
+	CHUNK = 4096,
+	LEVEL_POINTS = OUTER - INNER,
+};
+
+static const double screening = 4;              /* times the usual largest difference of a block */
+static const double least_difference = 2e-5;    /* full scale = 1: below this nothing is a pulse */
+static const double widest_s = 0.5;
+
+struct edge { double frame, sigma, height; bool opposed; };
+
+struct pulse_detector {
+	struct pulse_settings settings;
+	size_t block;                   /* frames screened at once */
+	double usual;                   /* median of the blocks' largest difference, tracked */
+	unsigned blocks;
+	/* Samples [base, base + filled); everything before `screened` has been looked at. */
+	uint64_t base, screened, expected;
+	size_t filled;
+	double x[2 * CHUNK + 4 * REACH];
+	size_t edges;
+	struct edge edge[EDGES];
+	double newest;                  /* frame of the newest edge, so that none is found twice */
+	double parabola[3][LEVEL_POINTS];       /* value at the edge from the level points; see make_parabola() */
+};
+
+/*
+ * Weights that give the value at 0 of the least-squares parabola through points at INNER + 1/2 ... OUTER - 1/2: only the
+ * first row is used for levels; the others check the residual.
+ */
+static void make_parabola(struct pulse_detector *d)
+{
+	double m[3][6] = { { 0 } };
+
+	for (int k = 0; k < LEVEL_POINTS; k++) {
+		double u = (INNER + k + 0.5) / OUTER, power[3] = { 1, u, u * u };
+
+		for (int i = 0; i < 3; i++)
+			for (int j = 0; j < 3; j++)
+				m[i][j] += power[i] * power[j];
+	}
+	for (int i = 0; i < 3; i++)
+		m[i][3 + i] = 1;
+	for (int i = 0; i < 3; i++) {           /* Gauss-Jordan; the matrix is small and positive definite */
+		double pivot = m[i][i];
+
+		for (int j = 0; j < 6; j++)
+			m[i][j] /= pivot;
+		for (int r = 0; r < 3; r++) {
+			double f = m[r][i];
+
+			for (int j = 0; r != i && j < 6; j++)
+				m[r][j] -= f * m[i][j];
+		}
+	}
+	for (int i = 0; i < 3; i++)
+		for (int k = 0; k < LEVEL_POINTS; k++) {
+			double u = (INNER + k + 0.5) / OUTER;
+
+			d->parabola[i][k] = m[i][3] + m[i][4] * u + m[i][5] * u * u;
+		}
+}
+
+int pulse_detector_create(struct pulse_detector **out, const struct pulse_settings *settings)
+{
+	struct pulse_detector *d;
+
+	if (!(settings->rate >= 1000 && settings->rate <= 1e7) || !(settings->width_s >= 0 && settings->width_s <= 0.5) ||
+	    settings->polarity < -1 || settings->polarity > 1)
+		return -EINVAL;
+	d = calloc(1, sizeof(*d));
+	if (!d)
+		return -ENOMEM;
+	d->settings = *settings;
+	d->block = (size_t)fmax(16, settings->rate / 1000);
+	if (d->block > CHUNK / 4)
+		d->block = CHUNK / 4;
+	d->newest = -INFINITY;
+	make_parabola(d);
+	*out = d;
+	return 0;
+}
+
+void pulse_detector_destroy(struct pulse_detector *detector)
+{
+	free(detector);
+}
+
+/* ------------------------------------------------------------------ one edge */
+
+/*
+ * Level from the frames INNER to OUTER after (side +1) or before (-1) the middle of frames `at` and `at` + 1, followed to
+ * `beyond` frames after that middle; and the residual's variance.
+ */
+static double level(const struct pulse_detector *d, const double *x, long at, int side, double beyond, double *variance)
+{
+	double value[3] = { 0 }, squares = 0;
+
+	for (int k = 0; k < LEVEL_POINTS; k++) {
+		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
+
+		for (int i = 0; i < 3; i++)
+			value[i] += d->parabola[i][k] * y;
+	}
+	for (int k = 0; k < LEVEL_POINTS; k++) {
+		double u = (INNER + k + 0.5) / OUTER;
+		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
+		double r = y - value[0] - value[1] * u - value[2] * u * u;
+
+		squares += r * r;
+	}
+	*variance = squares / (LEVEL_POINTS - 3);
+	return value[0] + value[1] * side * beyond / OUTER;
+}
+
+static double interpolate(const double *x, double at)
+{
+	long middle = lrint(at);
+	double sum = 0, phase = M_PI * (at - (double)middle), s = sin(phase);
+
+	if (fabs(phase) < 1e-12)
+		return x[middle];
+	for (long k = -SINC; k <= SINC; k++) {
+		double u = at - (double)(middle + k), window = cos(M_PI_2 * u / (SINC + 1));
+
+		/* sin(pi u) alternates with k. */
+		sum += x[middle + k] * window * window * (k & 1 ? -s : s) / (M_PI * u);
+	}
+	return sum;
+}
+
+/* Where the signal passes `half` between frames low and low + 1. */
+static double crossing(const double *x, long low, double half, double sign)
+{
+	double a = (double)low, b = (double)low + 1;
+
+	for (int k = 0; k < 40; k++) {
+		double middle = 0.5 * (a + b);
+
+		if (sign * (interpolate(x, middle) - half) < 0)
+			a = middle;
+		else
+			b = middle;
+	}
+	return 0.5 * (a + b);
+}
+
+/* Low frame of the two between which x passes `half`, within the reach of the screening difference; -1: none. */
+static long bracket(const double *x, long at, double half, double sign)
+{
+	for (long low = at - LAG - 1; low < at + LAG + 1; low++)
+		if (sign * (x[low] - half) < 0 && sign * (x[low + 1] - half) >= 0)
+			return low;
+	return -1;
+}
+
+/* `at`: index of the largest difference. @return false: no edge there after all */
+static bool locate(const struct pulse_detector *d, long at, struct edge *out)
+{
+	const double *x = d->x;
+	double variance[2], before, after, sign, beyond = 0, frame = 0;
+
+	for (int pass = 0; pass < 2; pass++) {
+		long low;
+
+		before = level(d, x, at, -1, beyond, &variance[0]);
+		after = level(d, x, at, 1, beyond, &variance[1]);
+		sign = after > before ? 1 : -1;
+		low = bracket(x, at, 0.5 * (before + after), sign);
+		if (low < 0)
+			return false;
+		frame = crossing(x, low, 0.5 * (before + after), sign);
+		beyond = frame - ((double)at + 0.5);
+	}
+	out->frame = (double)d->base + frame;
+	out->height = after - before;
+	out->sigma = sqrt(0.5 * (variance[0] + variance[1])) / (0.9 * fabs(out->height));
+	/* An edge stands out of its surroundings; a click or a burst does not. */
+	return out->sigma < 0.25;
+}
+
+/* ------------------------------------------------------------------ edges into pulses */
+
+static void drop_oldest(struct pulse_detector *d)
+{
+	d->edges--;
+	memmove(d->edge, d->edge + 1, d->edges * sizeof(*d->edge));
+}
+
+static void keep_edge(struct pulse_detector *d, const struct edge *edge)
+{
+	struct edge e = *edge;
+
+	if (e.frame - d->newest < INNER)
+		return;
+	d->newest = e.frame;
+	for (size_t k = 0; k < d->edges; k++)
+		if (d->edge[k].height * e.height < 0 && e.frame - d->edge[k].frame < widest_s * d->settings.rate)
+			d->edge[k].opposed = true;
+	if (d->edges == EDGES)
+		drop_oldest(d);
+	e.opposed = false;
+	d->edge[d->edges++] = e;
+}
+
+static bool leads(const struct pulse_detector *d, const struct edge *e)
+{
+	if (d->settings.polarity && (e->height > 0) != (d->settings.polarity > 0))
+		return false;
+	/* Pulses of half a second lead with either edge: only the setting can tell, or else the rising one is taken. */
+	if (!d->settings.polarity && d->settings.width_s > 0.45)
+		return e->height > 0;
+	return e->opposed;
+}
+
+/* Edges old enough to be judged. */
+static size_t release(struct pulse_detector *d, struct pulse_edge *out, size_t max, bool all)
+{
+	double judged = (double)d->screened - widest_s * d->settings.rate;
+	size_t given = 0;
+
+	while (d->edges && given < max && (all || d->edge[0].frame < judged)) {
+		const struct edge *e = &d->edge[0];
+
+		if (leads(d, e))
+			out[given++] = (struct pulse_edge){ e->frame, e->sigma, e->height };
+		drop_oldest(d);
+	}
+	return given;
+}
+
+/* ------------------------------------------------------------------ screening */
+
+static void track(struct pulse_detector *d, double largest)
+{
+	double step = d->blocks < 200 ? 0.2 : 0.02;
+
+	if (d->blocks++ == 0)
+		d->usual = largest;
+	d->usual *= largest > d->usual ? 1 + step : 1 / (1 + step);
+	if (d->usual < 1e-8)
+		d->usual = 1e-8;
+}
+
+static double largest_difference(const double *x, size_t n)
+{
+	double a = 0, b = 0, c = 0, e = 0;
+	size_t k = 0;
+
+	for (; k + 3 < n; k += 4) {
+		double p = fabs(x[k + LAG] - x[(long)k - LAG]), q = fabs(x[k + 1 + LAG] - x[(long)k + 1 - LAG]);
+		double r = fabs(x[k + 2 + LAG] - x[(long)k + 2 - LAG]), s = fabs(x[k + 3 + LAG] - x[(long)k + 3 - LAG]);
+
+		a = p > a ? p : a;
+		b = q > b ? q : b;
+		c = r > c ? r : c;
+		e = s > e ? s : e;
+	}
+	for (; k < n; k++)
+		a = fmax(a, fabs(x[k + LAG] - x[(long)k - LAG]));
+	return fmax(fmax(a, b), fmax(c, e));
+}
+
+static void screen(struct pulse_detector *d, size_t from)
+{
+	const double *x = d->x + from;
+	double largest = largest_difference(x, d->block), limit;
+	struct edge edge;
+
+	limit = fmax(screening * d->usual, least_difference);
+	if (largest > limit && d->blocks > 20) {
+		/* Each local maximum of the difference in the block. */
+		for (long k = 0; k < (long)d->block; k++) {
+			double here = fabs(x[k + LAG] - x[k - LAG]);
+
+			if (here > limit && here >= fabs(x[k + 1 + LAG] - x[k + 1 - LAG]) &&
+			    here > fabs(x[k - 1 + LAG] - x[k - 1 - LAG]) && locate(d, (long)from + k, &edge))
+				keep_edge(d, &edge);
+		}
+	}
+	if (isfinite(largest))
+		track(d, largest);
+}
+
+static void screen_all(struct pulse_detector *d)
+{
+	while (d->screened + d->block + REACH <= d->base + d->filled) {
+		screen(d, (size_t)(d->screened - d->base));
+		d->screened += d->block;
+	}
+}
+
+static void begin(struct pulse_detector *d, uint64_t first)
+{
+	d->base = first;
+	d->filled = 0;
+	d->screened = first + REACH;    /* an edge needs its surroundings */
+}
+
+/* Forgets what has been screened, but for the surroundings of what comes. */
+static void shift(struct pulse_detector *d)
+{
+	uint64_t keep = d->screened - REACH;
+	size_t gone = (size_t)(keep - d->base);
+
+	if (keep <= d->base || gone > d->filled)
+		return;
+	memmove(d->x, d->x + gone, (d->filled - gone) * sizeof(*d->x));
+	d->base = keep;
+	d->filled -= gone;
+}
+
+size_t pulse_detector_execute(struct pulse_detector *d, const double *samples, size_t count, uint64_t first,
+                              struct pulse_edge *out, size_t max)
+{
+	if (count && first != d->expected)
+		begin(d, first);
+	else if (count && d->expected == 0)
+		begin(d, 0);
+	if (count)
+		d->expected = first + count;
+	while (count) {
+		size_t room = sizeof(d->x) / sizeof(*d->x) - d->filled, n = count < room ? count : room;
+
+		memcpy(d->x + d->filled, samples, n * sizeof(*d->x));
+		d->filled += n;
+		samples += n;
+		count -= n;
+		screen_all(d);
+		shift(d);
+	}
+	return release(d, out, max, false);
+}
+
+size_t pulse_detector_finish(struct pulse_detector *d, struct pulse_edge *out, size_t max)
+{
+	return release(d, out, max, true);
+}
