@@ -79,11 +79,12 @@ static int make_plan(struct plan *plan, const struct pattern *pattern)
 		plan->fringes *= 1.02;
 	if (extent > WIDE && plan->width < plan->fringes)
 		plan->width = plan->fringes;
-	double reach = fmin(plan->width + 1.0, plan->fringes);
+	/* what the kernels carry in from beyond the table must be there too */
+	double reach = fmin(plan->width + extent + half_box + 1.0, plan->fringes);
 
 	plan->h = finest_step(spectrum, reach, shortest);
 	plan->fade = FADE;
-	plan->cut = (0.5 * reach + extent) / shortest + 5.0 * FADE / sqrt(shortest);
+	plan->cut = 0.5 * reach / shortest + 5.0 * FADE / sqrt(shortest);
 	top = 2.0 * longest * (plan->cut + 5.0 * FADE) + extent + half_box;
 	plan->h = fmin(plan->h, 0.5 / (plan->cut + 5.0 * FADE));
 	period = plan->width + fmax(top, plan->width) + 24.0;
