@@ -366,11 +366,11 @@ static void detector_delays_both_kinds(void **state)
 	curve_destroy(emersion);
 }
 
-/* tau^2 times the energy of dI/dw over the energy of I about its mean, -reach to reach. */
+/* tau^2 times the energy of dI/dw over the energy of I, each about its mean, -reach to reach. */
 static double differentiated_share(double reach, double tau)
 {
 	enum { SAMPLES = 20000 };
-	double slope_square = 0.0, sum = 0.0, square = 0.0;
+	double slope_sum = 0.0, slope_square = 0.0, sum = 0.0, square = 0.0;
 
 	for (int k = 0; k < SAMPLES; k++) {
 		double w = ((k + 0.5) / SAMPLES * 2.0 - 1.0) * reach, phase = M_PI_2 * w * w, c, s, value = edge_intensity(w);
@@ -378,11 +378,12 @@ static double differentiated_share(double reach, double tau)
 		fresnel_integrals(w, &c, &s);
 		double slope = (0.5 + c) * cos(phase) + (0.5 + s) * sin(phase);
 
+		slope_sum += slope;
 		slope_square += slope * slope;
 		sum += value;
 		square += value * value;
 	}
-	return tau * tau * slope_square / (square - sum * sum / SAMPLES);
+	return tau * tau * (slope_square - slope_sum * slope_sum / SAMPLES) / (square - sum * sum / SAMPLES);
 }
 
 /* A high-pass far slower than the pattern turns the step into exp(-t / tau). */
