@@ -7,13 +7,16 @@
 
 #include "pattern.h"
 
-#define TAIL (0.5 * M_1_PI * M_1_PI)
+/* What the sum of cosines may cost, in intensity. */
+#define NODE_ERROR 1e-9
+enum { MIN_NODES = 8 };
 
-/*
- * Around nu0 = w / 2 the transform is int exp(-2 pi i s^2) G(nu0 + s) ds; a kernel at distance u turns up in G as
- * exp(2 pi i u s) and in the integral as exp(i pi u^2 / 2).  That function is written as a sum of cosines over the extent of the
- * kernels, so that G is needed at a few real nu only.  Collocation at Chebyshev points of the extent.
- */
+static double chebyshev(double reach, size_t n, size_t i)
+{
+	return reach * cos(M_PI * (2 * i + 1) / (4.0 * n));
+}
+
+/* Collocation at Chebyshev points of the extent: node_j of the sum, one part at a time. */
 static int solve_nodes(struct pattern *pattern, double reach)
 {
 	size_t n = pattern->nodes;
@@ -24,28 +27,21 @@ static int solve_nodes(struct pattern *pattern, double reach)
 
 	if (!matrix || !side || !answer || !order)
 		goto free_all;
-	for (size_t i = 0; i < n; i++) {
-		double u = reach * cos(M_PI * (2 * i + 1) / (4.0 * n));
-
+	for (size_t i = 0; i < n; i++)
 		for (size_t j = 0; j < n; j++)
-			gsl_matrix_set(matrix, i, j, cos(2.0 * M_PI * j * pattern->spacing * u));
-		gsl_vector_set(side, i, u);
-	}
+			gsl_matrix_set(matrix, i, j, cos(2.0 * M_PI * j * pattern->spacing * chebyshev(reach, n, i)));
 	gsl_linalg_LU_decomp(matrix, order, &sign);
 	for (int part = 0; part < 2; part++) {
-		gsl_vector *chirp = gsl_vector_alloc(n);
+		double *node = part ? pattern->node_imaginary : pattern->node_real;
 
-		if (!chirp)
-			goto free_all;
 		for (size_t i = 0; i < n; i++) {
-			double u = gsl_vector_get(side, i), phase = M_PI_2 * u * u;
+			double u = chebyshev(reach, n, i), phase = M_PI_2 * u * u;
 
-			gsl_vector_set(chirp, i, part ? sin(phase) : cos(phase));
+			gsl_vector_set(side, i, part ? sin(phase) : cos(phase));
 		}
-		gsl_linalg_LU_solve(matrix, order, chirp, answer);
-		gsl_vector_free(chirp);
+		gsl_linalg_LU_solve(matrix, order, side, answer);
 		for (size_t j = 0; j < n; j++)
-			(part ? pattern->node_imaginary : pattern->node_real)[j] = gsl_vector_get(answer, j);
+			node[j] = gsl_vector_get(answer, j);
 	}
 	ret = 0;
 free_all:
@@ -56,16 +52,45 @@ free_all:
 	return ret;
 }
 
+/* Largest error of the sum of cosines over the extent. */
+static double node_error(const struct pattern *pattern, double reach)
+{
+	enum { PROBES = 64 };
+	double worst = 0.0;
+
+	for (int i = 0; i <= PROBES; i++) {
+		double u = reach * i / PROBES;
+		double real = -cos(M_PI_2 * u * u), imaginary = -sin(M_PI_2 * u * u);
+
+		for (size_t j = 0; j < pattern->nodes; j++) {
+			double cosine = cos(2.0 * M_PI * j * pattern->spacing * u);
+
+			real += pattern->node_real[j] * cosine;
+			imaginary += pattern->node_imaginary[j] * cosine;
+		}
+		worst = fmax(worst, hypot(real, imaginary));
+	}
+	return worst;
+}
+
+/*
+ * Around nu0 = w / 2 the transform is int exp(-2 pi i s^2) G(nu0 + s) ds; a kernel at distance u turns up in G as
+ * exp(2 pi i u s) and in the integral as exp(i pi u^2 / 2).  That function is written as a sum of cosines over the extent of the
+ * kernels, so that G is needed at a few real nu only.
+ */
 int far_init(struct pattern *pattern, double extent)
 {
+	/* half a unit for the detector, the passband and 1 / nu, which are smooth */
 	double reach = extent / sqrt(1.0 - 0.5 * pattern->spectrum.top_hat) + 0.5;
+	double allowed = NODE_ERROR / fringe_bound(&pattern->spectrum, pattern->limit);
 
-	/* period of the cosines 3 reaches; the highest of them faster than the chirp gets */
-	pattern->spacing = 1.0 / (3.0 * reach);
-	pattern->nodes = 6 + (size_t)(1.5 * reach * reach / 2.0 * 1.5);
-	if (pattern->nodes > MAX_NODES)
-		pattern->nodes = MAX_NODES;
-	return solve_nodes(pattern, reach);
+	pattern->spacing = 1.0 / ((reach < 1.2 ? 4.0 : 3.0) * reach);
+	for (pattern->nodes = MIN_NODES;; pattern->nodes += 4) {
+		int ret = solve_nodes(pattern, reach);
+
+		if (ret || pattern->nodes == MAX_NODES || node_error(pattern, reach) <= allowed)
+			return ret;
+	}
 }
 
 /* What the fringe that comes from one edge of passband and integration is multiplied by at nu. */
@@ -122,7 +147,7 @@ double far_fringe(const struct pattern *pattern, const struct response *response
 	bool box = M_PI * w * pattern->spectrum.box > 2.0;
 	double sum = 0.0;
 
-	if (w <= 0.0 || !pattern->fringes)
+	if (w <= 0.0 || w > pattern->fringes)
 		return 0.0;
 	for (int i = band ? -1 : 0; i <= (band ? 1 : 0); i += 2)
 		for (int j = box ? -1 : 0; j <= (box ? 1 : 0); j += 2)

@@ -17,6 +17,9 @@
 /* Below this the power series is shorter, and keeps relative accuracy down to the denormals. */
 #define SERIES_W 1.0
 
+/* Deep in the shadow the intensity is TAIL / w^2. */
+#define TAIL (0.5 * M_1_PI * M_1_PI)
+
 enum { NODES = 12 };
 
 /* One w taken apart: phase pi w^2 / 2 reduced exactly, and the auxiliary functions. */
@@ -180,7 +183,7 @@ double edge_intensity(double w)
 		return 0.5 * (x.f * x.f + x.g * x.g);
 	}
 	if (a > FAR_W)
-		return w > 0.0 ? 1.0 : 0.5 / (M_PI * a) / (M_PI * a);
+		return w > 0.0 ? 1.0 : TAIL / a / a;
 
 	double c, s;
 
@@ -195,23 +198,27 @@ double edge_intensity(double w)
  *
  * which in the shadow is f(|w|) / pi - |w| (f^2 + g^2) / 2.
  */
-double edge_intensity_integral(double w)
+double edge_intensity_excess(double w)
 {
 	double a = fabs(w);
 
 	if (isnan(w))
 		return w;
 	if (a > FAR_W)
-		return w > 0.0 ? w : 0.5 / (M_PI * M_PI) / a;
+		return w > 0.0 ? 0.0 : TAIL / a;
 
 	struct auxiliary x = auxiliary_functions(a);
 	double square = x.f * x.f + x.g * x.g;
 
 	if (w < 0.0)
 		return x.f / M_PI - 0.5 * a * square;
-	/* w + fringes: w f is 1 / pi at large w, so the bracket is taken first and loses nothing. */
-	return w + (x.sine - x.cosine) * (w * x.f - M_1_PI) - w * x.g * (x.cosine + x.sine)
-	       + (0.5 * w * square - x.f / M_PI);
+	/* w f is 1 / pi at large w, so that bracket is taken first and loses nothing. */
+	return (x.sine - x.cosine) * (w * x.f - M_1_PI) - w * x.g * (x.cosine + x.sine) + (0.5 * w * square - x.f / M_PI);
+}
+
+double edge_intensity_integral(double w)
+{
+	return fmax(w, 0.0) + edge_intensity_excess(w);
 }
 
 double fresnel_scale(double wavelength, double distance)

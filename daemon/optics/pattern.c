@@ -9,13 +9,14 @@
 #include "limbwatch/fresnel.h"
 #include "pattern.h"
 
-#define TAIL (0.5 * M_1_PI * M_1_PI)
 /* A fringe weaker than this does not count. */
 #define NEGLIGIBLE 1e-7
 /* Kernels wider than this leave no fringes beyond the table; narrower ones are within reach of stationary phase. */
 #define WIDE 4.0
 /* Width in nu over which frequencies are faded out that belong to fringes beyond the table. */
 #define FADE 1.5
+/* Out here not even a bare fringe counts. */
+#define BEYOND 1e7
 enum { MAX_POINTS = 1 << 19 };
 
 /* The plan of one table, in Fresnel units. */
@@ -45,8 +46,7 @@ void lagrange_weights(double s, double weight[STENCIL])
 	}
 }
 
-/* Bound of the fringe's amplitude at w for the shortest wavelength. */
-static double fringe_bound(const struct spectrum *spectrum, double w)
+double fringe_bound(const struct spectrum *spectrum, double w)
 {
 	return M_SQRT2 * M_1_PI / fmax(w, 1.0) * spectrum_bound(spectrum, 0.5 * w);
 }
@@ -75,15 +75,16 @@ static int make_plan(struct plan *plan, const struct pattern *pattern)
 
 	plan->width = 24.0 + 6.0 * extent + 4.0 * half_box;
 	plan->fringes = 1.0;
-	while (plan->fringes < 1e7 && fringe_bound(spectrum, plan->fringes) > NEGLIGIBLE)
+	while (plan->fringes < BEYOND && fringe_bound(spectrum, plan->fringes) > NEGLIGIBLE)
 		plan->fringes *= 1.02;
 	if (extent > WIDE && plan->width < plan->fringes)
 		plan->width = plan->fringes;
-	double reach = fmin(plan->width + 1.0, plan->fringes);
+	/* what the kernels carry in from beyond the table must be there too */
+	double reach = fmin(plan->width + extent + half_box + 1.0, plan->fringes);
 
 	plan->h = finest_step(spectrum, reach, shortest);
 	plan->fade = FADE;
-	plan->cut = (0.5 * reach + extent) / shortest + 5.0 * FADE / sqrt(shortest);
+	plan->cut = 0.5 * reach / shortest + 5.0 * FADE / sqrt(shortest);
 	top = 2.0 * longest * (plan->cut + 5.0 * FADE) + extent + half_box;
 	plan->h = fmin(plan->h, 0.5 / (plan->cut + 5.0 * FADE));
 	period = plan->width + fmax(top, plan->width) + 24.0;
@@ -153,6 +154,7 @@ static int apply_response(struct pattern *pattern)
 	const struct response *response = &pattern->response;
 	size_t n = 2 * (size_t)pattern->half + 1;
 	double *in, *out;
+	int ret = 0;
 
 	if (!response->poles)
 		return 0;
@@ -164,12 +166,14 @@ static int apply_response(struct pattern *pattern)
 	for (size_t k = 0; k < n; k++)
 		pattern->table[k] *= response->direct;
 	for (size_t i = 0; i < response->poles; i++) {
-		response_run(pattern, i, in, out);
+		ret = response_run(pattern, i, in, out);
+		if (ret)
+			break;
 		for (size_t k = 0; k < n; k++)
 			pattern->table[k] += response->pole[i].gain * out[k];
 	}
 	free(in);
-	return 0;
+	return ret;
 }
 
 int pattern_init(struct pattern *pattern, const struct spectrum *spectrum, const struct response *response)
@@ -186,11 +190,11 @@ int pattern_init(struct pattern *pattern, const struct spectrum *spectrum, const
 	ret = make_plan(&plan, pattern);
 	if (ret)
 		return ret;
-	pattern->fringes = plan.fringes > plan.width;
+	pattern->fringes = plan.fringes;
 	pattern->h = plan.h;
 	pattern->half = (ptrdiff_t)ceil(plan.width / plan.h) + STENCIL;
 	pattern->limit = plan.width;
-	ret = pattern->fringes ? far_init(pattern, spectrum_extent(spectrum)) : 0;
+	ret = plan.fringes > plan.width ? far_init(pattern, spectrum_extent(spectrum)) : 0;
 	if (ret)
 		return ret;
 	pattern->table = malloc((2 * (size_t)pattern->half + 1) * sizeof(*pattern->table));
@@ -215,11 +219,12 @@ void pattern_release(struct pattern *pattern)
 
 static double bare_value(const struct spectrum *spectrum, double w)
 {
-	double half = 0.5 * spectrum->box;
+	double end = w + 0.5 * spectrum->box, begin = w - 0.5 * spectrum->box;
+	double lit = fmin(fmax(end, 0.0), spectrum->box);
 
-	if (spectrum->box < SHORT_BOX)
+	if (spectrum->box < SHORT_BOX || fabs(w) > BEYOND)
 		return edge_intensity(w);
-	return (edge_intensity_integral(w + half) - edge_intensity_integral(w - half)) / spectrum->box;
+	return (lit + edge_intensity_excess(end) - edge_intensity_excess(begin)) / spectrum->box;
 }
 
 double pattern_value(const struct pattern *pattern, double w)
@@ -228,7 +233,9 @@ double pattern_value(const struct pattern *pattern, double w)
 
 	if (pattern->bare)
 		return bare_value(&pattern->spectrum, w);
-	if (!(fabs(w) < pattern->limit))
+	if (isnan(w))
+		return w;
+	if (fabs(w) >= pattern->limit)
 		return far_value(pattern, w);
 	place = w / pattern->h;
 	floor_place = floor(place);

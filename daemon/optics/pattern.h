@@ -2,6 +2,7 @@
 #ifndef LIMBWATCH_OPTICS_PATTERN_H
 #define LIMBWATCH_OPTICS_PATTERN_H
 
+#include <math.h>
 #include <stdbool.h>
 #include <stddef.h>
 
@@ -56,7 +57,7 @@ void response_init(struct response *response, int direction, double low_pass, do
 /* Transfer at nu, for a fringe travelling in w. */
 void response_transfer(const struct response *response, double nu, double *real, double *imaginary);
 
-enum { MAX_NODES = 24 };
+enum { MAX_NODES = 32 };
 
 struct pattern {
 	struct spectrum spectrum;
@@ -70,7 +71,7 @@ struct pattern {
 	double *table;
 
 	/* Stationary phase: exp(i pi u^2 / 2) as a sum of node_j cos(2 pi j spacing u) over the extent of the kernels. */
-	bool fringes;                   /* beyond the table fringes matter */
+	double fringes;                 /* w beyond which no fringe matters; up to here outside the table: */
 	size_t nodes;
 	double spacing;
 	double node_real[MAX_NODES], node_imaginary[MAX_NODES];
@@ -78,6 +79,12 @@ struct pattern {
 	/* What each pole still remembers where the table ends in time, and where that is. */
 	double memory[MAX_POLES], memory_w;
 };
+
+/* Non-oscillating part of the edge far from the contact: TAIL / w^2. */
+#define TAIL (0.5 * M_1_PI * M_1_PI)
+
+/* Bound of the fringe's amplitude at w. */
+double fringe_bound(const struct spectrum *spectrum, double w);
 
 int pattern_init(struct pattern *pattern, const struct spectrum *spectrum, const struct response *response);
 void pattern_release(struct pattern *pattern);
@@ -90,7 +97,8 @@ double far_value(const struct pattern *pattern, double w);
 double far_tail(const struct pattern *pattern, double w);
 
 /* response.c: one pole run along the table; out has the table's length. */
-void response_run(struct pattern *pattern, size_t pole, const double *in, double *out);
+/* 0, -ENOMEM */
+int response_run(struct pattern *pattern, size_t pole, const double *in, double *out);
 /* One pole's answer to the level and the tail before and after the table. */
 double response_before(const struct pattern *pattern, size_t pole, double w);
 double response_after(const struct pattern *pattern, size_t pole, double w);

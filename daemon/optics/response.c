@@ -1,5 +1,6 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /* The detector's one-pole filters, run along a tabulated pattern in the direction of time. */
+#include <errno.h>
 #include <gsl/gsl_integration.h>
 #include <gsl/gsl_sf_expint.h>
 #include <math.h>
@@ -8,25 +9,23 @@
 
 /* Two equal poles have no partial fractions; parted by this they have, and the error is its square. */
 #define PARTED 1e-4
-/* Non-oscillating part of the edge far from the contact: TAIL / w^2. */
-#define TAIL (0.5 * M_1_PI * M_1_PI)
 
 void response_init(struct response *response, int direction, double low_pass, double high_pass)
 {
 	*response = (struct response){ .direction = direction };
 	if (low_pass > 0.0 && high_pass > 0.0) {
-		/* s t2 / ((1 + s t1)(1 + s t2)) = t2 / (t2 - t1) [1 / (1 + s t1) - 1 / (1 + s t2)] */
-		double t1 = low_pass, t2 = high_pass;
+		/* s h / ((1 + s t1)(1 + s t2)) = h / (t2 - t1) [1 / (1 + s t1) - 1 / (1 + s t2)], h = t2 = high_pass */
+		double t1 = low_pass, t2 = high_pass, mean = 0.5 * (t1 + t2);
 
-		if (fabs(t2 - t1) < PARTED * t1) {
-			t1 = low_pass * (1.0 - PARTED);
-			t2 = low_pass * (1.0 + PARTED);
+		if (fabs(t2 - t1) < 2.0 * PARTED * mean) {
+			t1 = mean * (1.0 - PARTED);
+			t2 = mean * (1.0 + PARTED);
 		}
 		response->poles = 2;
 		response->pole[0].tau = t1;
-		response->pole[0].gain = t2 / (t2 - t1);
+		response->pole[0].gain = high_pass / (t2 - t1);
 		response->pole[1].tau = t2;
-		response->pole[1].gain = -t2 / (t2 - t1);
+		response->pole[1].gain = -high_pass / (t2 - t1);
 	} else if (low_pass > 0.0) {
 		response->poles = 1;
 		response->pole[0].tau = low_pass;
@@ -56,7 +55,7 @@ void response_transfer(const struct response *response, double nu, double *real,
 	*imaginary = im;
 }
 
-/* x^2 exp(x) E2(x) / x -> 1 for large x: the tail 1 / w^2 seen through a pole before the contact. */
+/* int_0^inf exp(-v) / (x + v)^2 dv = exp(x) E2(x) / x: the tail 1 / w^2 seen through a pole before the contact. */
 static double tail_before(double x)
 {
 	if (x > 60.0)
@@ -92,18 +91,17 @@ double response_after(const struct pattern *pattern, size_t pole, double w)
 }
 
 /* weight[i] = int_0^1 exp(-z (1 - s)) l_i(s) ds z, l_i the stencil's Lagrange polynomials. */
-static void step_weights(double z, double weight[STENCIL])
+static int step_weights(double z, double weight[STENCIL])
 {
 	/* Gauss-Legendre over the last 40 / z of the step: before that the exponential has forgotten. */
 	enum { POINTS = 32 };
-	gsl_integration_glfixed_table *table = NULL;
+	gsl_integration_glfixed_table *table = gsl_integration_glfixed_table_alloc(POINTS);
 	double span = fmin(1.0, 40.0 / z);
 
+	if (!table)
+		return -ENOMEM;
 	for (int i = 0; i < STENCIL; i++)
 		weight[i] = 0.0;
-	table = gsl_integration_glfixed_table_alloc(POINTS);
-	if (!table)
-		return;
 	for (size_t k = 0; k < POINTS; k++) {
 		double s, share, l[STENCIL];
 
@@ -113,9 +111,10 @@ static void step_weights(double z, double weight[STENCIL])
 			weight[i] += share * z * exp(-z * (1.0 - s)) * l[i];
 	}
 	gsl_integration_glfixed_table_free(table);
+	return 0;
 }
 
-void response_run(struct pattern *pattern, size_t pole, const double *in, double *out)
+int response_run(struct pattern *pattern, size_t pole, const double *in, double *out)
 {
 	ptrdiff_t n = 2 * pattern->half + 1, d = pattern->response.direction;
 	/* index in time: k = 0 .. n-1 is in[at + d k] */
@@ -125,7 +124,8 @@ void response_run(struct pattern *pattern, size_t pole, const double *in, double
 	double weight[STENCIL], keep = exp(-z), state = 0.0;
 	struct response one = { .direction = (int)d, .poles = 1, .pole = { { 1.0, tau } } };
 
-	step_weights(z, weight);
+	if (step_weights(z, weight))
+		return -ENOMEM;
 	for (ptrdiff_t k = 0; k < STENCIL / 2; k++) {
 		double w = w0 + k * h;
 
@@ -147,4 +147,5 @@ void response_run(struct pattern *pattern, size_t pole, const double *in, double
 
 		out[at + d * k] = response_after(pattern, pole, w) + far_fringe(pattern, &one, w);
 	}
+	return 0;
 }

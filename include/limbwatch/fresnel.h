@@ -24,6 +24,9 @@ double edge_intensity(double w);
  */
 double edge_intensity_integral(double w);
 
+/** edge_intensity_integral(w) - max(w, 0), kept apart so that short differences far in the light lose nothing. */
+double edge_intensity_excess(double w);
+
 /**
  * Fresnel scale at the observer, sqrt(wavelength * distance / 2): the length of one unit of w.
  *

@@ -43,6 +43,7 @@ struct intake_driver {
 	/*
 	 * Main thread, after read returned negative and the acquisition thread has stopped: one clear sentence on how the
 	 * data ended ("NAME ended in the middle of a frame: 3 bytes left over"), empty when there is nothing to say.
+	 * NULL: a driver that never has.
 	 */
 	void (*explain)(struct intake *intake, char *sentence, size_t size);
 };

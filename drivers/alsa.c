@@ -1,0 +1,306 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <errno.h>
+#include <inttypes.h>
+#include <poll.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include "alsa_device.h"
+#include "limbwatch/intake.h"
+#include "limbwatch/log.h"
+#include "origin.h"
+#include "stamp_line.h"
+
+/*
+ * A sound card or any other PCM that ALSA knows.  Nothing on the way may touch the samples: no rate is converted, and
+ * by default the widest format the device has is taken.
+ */
+
+static const struct setting alsa_settings[] = {
+	[ALSA_DEVICE] = { "device", SETTING_TEXT, .text = "default",
+		.meaning = "PCM as ALSA names it; only hw: devices are free of plug-ins and have stamps of their own",
+		.example = "hw:1,0" },
+	[ALSA_RATE] = { "rate_hz", SETTING_INTEGER, 48000, 8000, 192000,
+		.meaning = "frames per second, which the device must have itself" },
+	[ALSA_CHANNELS] = { "channels", SETTING_INTEGER, 2, 1, MAX_CHANNELS,
+		.meaning = "samples in a frame, one of each channel" },
+	[ALSA_FORMAT] = { "format", SETTING_CHOICE, .text = "auto", .choices = "auto|S16|S24_3|S24|S32|FLOAT",
+		.meaning = "sample format; auto: the widest the device has" },
+	[ALSA_PERIOD] = { "period_s", SETTING_NUMBER, 0.01, 0.0005, 1,
+		.meaning = "time between deliveries: shorter delays a trigger less, longer costs less" },
+	[ALSA_BUFFER] = { "buffer_s", SETTING_NUMBER, 0.5, 0.002, 10,
+		.meaning = "what the device may hold back before frames are lost" },
+	[ALSA_PACED] = { "paced", SETTING_BOOLEAN, 1, 0, 1,
+		.meaning = "the device delivers at its rate; false: a plug-in that gives a file's samples at once" },
+	{ .name = NULL },
+};
+
+/* A card has one descriptor, a multi many. */
+enum { MAX_DESCRIPTORS = 32 };
+
+struct alsa_intake {
+	struct intake intake;           /* first */
+	struct alsa_device device;
+	snd_pcm_status_t *status;
+	struct pollfd descriptors[MAX_DESCRIPTORS];
+	unsigned descriptor_count;
+	void *buffer;
+	uint64_t next;                  /* number of the next frame, counting those lost */
+	bool restarted;                 /* the next block follows a gap of a length still unknown */
+	struct stamp_line line;
+	int error;                      /* errno of a failed read */
+};
+
+static void alsa_close(struct intake *intake)
+{
+	struct alsa_intake *alsa = (struct alsa_intake *)intake;
+
+	if (!alsa)
+		return;
+	snd_pcm_close(alsa->device.pcm);
+	if (alsa->status)
+		snd_pcm_status_free(alsa->status);
+	free(alsa->buffer);
+	free(alsa);
+}
+
+static int alsa_open(struct intake **out, const struct setting_value *values)
+{
+	struct alsa_intake *alsa = calloc(1, sizeof(*alsa));
+	int ret;
+
+	if (!alsa)
+		return -ENOMEM;
+	ret = alsa_device_open(&alsa->device, values);
+	if (ret < 0)
+		goto free_alsa;
+	alsa->intake.driver = &intake_alsa;
+	alsa->intake.format = alsa->device.format;
+	alsa->intake.rate = alsa->device.rate;
+	alsa->intake.real_time = values[ALSA_PACED].integer;
+	intake_rename(&alsa->intake, alsa->device.name);
+	alsa->device.name = alsa->intake.name;  /* the settings need not live as long */
+	alsa->buffer = calloc(alsa->device.block_frames, frame_bytes(alsa->intake.format));
+	if (!alsa->buffer || snd_pcm_status_malloc(&alsa->status) < 0) {
+		alsa_close(&alsa->intake);
+		return -ENOMEM;
+	}
+	log_detail("\"%s\", %s, gives %u channels of %s at %.9g Hz every %.1f ms and holds %.0f ms", alsa->intake.name,
+		alsa->device.own_stamps ? "a device with stamps of its own" : "a plug-in dated by the arrival of its frames",
+		alsa->intake.format.channels, sample_type_name(alsa->intake.format.type), alsa->intake.rate,
+		alsa->device.period_us * 1e-3, alsa->device.buffer_us * 1e-3);
+	*out = &alsa->intake;
+	return 0;
+
+free_alsa:
+	free(alsa);
+	return ret;
+}
+
+/* Empties the device and lets it run. */
+static int restart(struct alsa_intake *alsa)
+{
+	const int ret = snd_pcm_prepare(alsa->device.pcm);
+
+	return ret < 0 ? ret : snd_pcm_start(alsa->device.pcm);
+}
+
+static int alsa_start(struct intake *intake)
+{
+	struct alsa_intake *alsa = (struct alsa_intake *)intake;
+	const int ret = restart(alsa);
+
+	if (ret < 0) {
+		log_error("device: \"%s\" does not start: %s", intake->name, snd_strerror(ret));
+		return ret;
+	}
+	const int count = snd_pcm_poll_descriptors(alsa->device.pcm, alsa->descriptors, MAX_DESCRIPTORS);
+	alsa->descriptor_count = count > 0 ? (unsigned)count : 0;
+	alsa->next = 0;
+	alsa->restarted = false;
+	alsa->error = 0;
+	stamp_line_create(&alsa->line, intake->rate);
+	return 0;
+}
+
+static int alsa_stop(struct intake *intake)
+{
+	struct alsa_intake *alsa = (struct alsa_intake *)intake;
+
+	snd_pcm_drop(alsa->device.pcm);        /* of a device that has gone this fails, and it stands still all the same */
+	return 0;
+}
+
+static void alsa_nap(int timeout_ms)
+{
+	poll(NULL, 0, timeout_ms < 10 ? timeout_ms : 10);
+}
+
+/*
+ * Brings the device back after `error` of a call.
+ *
+ * @return 0: try again, later; -errno: it is not to be had any more
+ */
+static int recover(struct alsa_intake *alsa, int error, int timeout_ms)
+{
+	int ret = error;
+
+	if (error == -EAGAIN || error == -EINTR) {
+		alsa_nap(timeout_ms < 1 ? timeout_ms : 1);
+		return 0;
+	}
+	if (error == -ESTRPIPE) {
+		/* EAGAIN: still asleep.  Frames are missing however it wakes up. */
+		ret = snd_pcm_resume(alsa->device.pcm);
+		if (ret == -EAGAIN) {
+			alsa_nap(timeout_ms);
+			return 0;
+		}
+		if (ret < 0)
+			ret = restart(alsa);
+	} else if (error == -EPIPE) {
+		ret = restart(alsa);
+	}
+	if (ret >= 0) {
+		alsa->restarted = true;
+		return 0;
+	}
+	/* What a card pulled out of its socket answers depends on the call. */
+	const bool gone = ret == -ENODEV || ret == -ENXIO || ret == -ENOTTY ||
+		snd_pcm_state(alsa->device.pcm) == SND_PCM_STATE_DISCONNECTED;
+	alsa->error = gone ? ENODEV : -ret;
+	return -alsa->error;
+}
+
+/*
+ * When the next frame to be read was taken.  A stamp that is zero, of another clock or older than the device can hold
+ * is none; then the moment of asking stands for it.  Either errs late only.
+ */
+static int64_t stamp_next_frame(struct alsa_intake *alsa, int64_t now, bool *late)
+{
+	const snd_pcm_sframes_t avail = (snd_pcm_sframes_t)snd_pcm_status_get_avail(alsa->status);
+	const snd_pcm_sframes_t delay = snd_pcm_status_get_delay(alsa->status);
+	/* The delay of a card counts what is on the way to the buffer, too; a plug-in's is an estimate, perhaps too long. */
+	const double frames = (double)(alsa->device.own_stamps && delay > avail ? delay : avail);
+	const double oldest_ns = alsa->device.buffer_us * 1e3 + 1e9;
+	snd_htimestamp_t own;
+
+	snd_pcm_status_get_htstamp(alsa->status, &own);
+	const int64_t stamp = (int64_t)own.tv_sec * 1000000000 + own.tv_nsec;
+	const bool valid = stamp > 0 && stamp <= now && (double)(now - stamp) < oldest_ns;
+	*late = !valid || !alsa->device.own_stamps;
+	return (valid ? stamp : now) - (int64_t)(frames / alsa->intake.rate * 1e9);
+}
+
+static int state_error(snd_pcm_t *pcm)
+{
+	switch (snd_pcm_state(pcm)) {
+	case SND_PCM_STATE_XRUN:
+		return -EPIPE;
+	case SND_PCM_STATE_SUSPENDED:
+		return -ESTRPIPE;
+	case SND_PCM_STATE_DISCONNECTED:
+		return -ENODEV;
+	default:
+		return -EIO;
+	}
+}
+
+/*
+ * Waits for a block: 1, 0 when the time is over, or -errno.  Not snd_pcm_wait: it goes round and round, past its
+ * timeout, while a plug-in's descriptor is ready and its frames are not (seen with PulseAudio's), which at real-time
+ * priority would take a core away.  Woken in vain, this naps.
+ */
+static int await_block(struct alsa_intake *alsa, int timeout_ms)
+{
+	const int64_t deadline = host_now() + (int64_t)timeout_ms * 1000000;
+
+	for (bool in_vain = false;;) {
+		const snd_pcm_sframes_t avail = snd_pcm_avail_update(alsa->device.pcm);
+		unsigned short events = 0;
+		if (avail < 0)
+			return (int)avail;
+		if (avail >= (snd_pcm_sframes_t)alsa->device.block_frames)
+			return 1;
+		const int64_t left_ns = deadline - host_now();
+		if (left_ns <= 0)
+			return 0;
+		if (in_vain)
+			poll(NULL, 0, 1);
+		const int ready = poll(alsa->descriptors, alsa->descriptor_count, (int)((left_ns + 999999) / 1000000));
+		if (ready < 0 && errno != EINTR)
+			return -errno;
+		in_vain = ready > 0;
+		if (in_vain)
+			snd_pcm_poll_descriptors_revents(alsa->device.pcm, alsa->descriptors, alsa->descriptor_count, &events);
+		if (events & (POLLERR | POLLHUP | POLLNVAL))
+			return state_error(alsa->device.pcm);
+	}
+}
+
+/* The device's next frames into the buffer: their number, 0 or -errno. */
+static int fetch(struct alsa_intake *alsa, struct block *block, int timeout_ms)
+{
+	bool late;
+	int ret = await_block(alsa, timeout_ms);
+
+	if (ret <= 0)
+		return ret;
+	ret = snd_pcm_status(alsa->device.pcm, alsa->status);
+	if (ret < 0)
+		return ret;
+	const int64_t stamp = stamp_next_frame(alsa, host_now(), &late);
+	const snd_pcm_sframes_t count = snd_pcm_readi(alsa->device.pcm, alsa->buffer, alsa->device.block_frames);
+	if (count <= 0)
+		return (int)count;
+	*block = (struct block){ alsa->buffer, (size_t)count, alsa->next, stamp, late ? BLOCK_STAMP_LATE : 0 };
+	return 1;
+}
+
+static int alsa_read(struct intake *intake, struct block *block, int timeout_ms)
+{
+	struct alsa_intake *alsa = (struct alsa_intake *)intake;
+	int ret;
+
+	if (alsa->error)
+		return -alsa->error;
+	alsa_acquiring = true;
+	ret = fetch(alsa, block, timeout_ms);
+	if (ret < 0)
+		ret = recover(alsa, ret, timeout_ms);
+	alsa_acquiring = false;
+	if (ret <= 0)
+		return ret;
+	if (alsa->restarted) {
+		block->first += stamp_line_gap(&alsa->line, alsa->next, block->host_ns);
+		block->flags |= BLOCK_GAP;
+		alsa->restarted = false;
+	} else {
+		stamp_line_add(&alsa->line, block->first, block->host_ns);
+	}
+	alsa->next = block->first + block->count;
+	if (!intake->real_time) {
+		block->host_ns = INT64_MIN;
+		block->flags &= ~(unsigned)BLOCK_STAMP_LATE;
+	}
+	return 1;
+}
+
+static void alsa_explain(struct intake *intake, char *sentence, size_t size)
+{
+	const struct alsa_intake *alsa = (const struct alsa_intake *)intake;
+
+	sentence[0] = 0;
+	if (alsa->error == ENODEV)
+		snprintf(sentence, size, "\"%s\" has gone after %" PRIu64 " frames: was it unplugged?", intake->name,
+			alsa->next);
+	else if (alsa->error)
+		snprintf(sentence, size, "\"%s\" failed after %" PRIu64 " frames: %s", intake->name, alsa->next,
+			snd_strerror(-alsa->error));
+}
+
+const struct intake_driver intake_alsa = {
+	.name = "alsa", .summary = "a sound card, or any other PCM of ALSA",
+	.settings = alsa_settings,
+	.open = alsa_open, .start = alsa_start, .stop = alsa_stop, .close = alsa_close,
+	.read = alsa_read, .explain = alsa_explain,
+};

@@ -1,0 +1,35 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef LIMBWATCH_ALSA_DEVICE_H
+#define LIMBWATCH_ALSA_DEVICE_H
+
+#include <alsa/asoundlib.h>
+#include <stdbool.h>
+#include "limbwatch/frames.h"
+#include "limbwatch/settings.h"
+
+/* The half of the alsa intake that opens a PCM and agrees with it on format, rate and buffer. */
+
+/* Rows of its settings. */
+enum { ALSA_DEVICE, ALSA_RATE, ALSA_CHANNELS, ALSA_FORMAT, ALSA_PERIOD, ALSA_BUFFER, ALSA_PACED };
+
+struct alsa_device {
+	snd_pcm_t *pcm;
+	const char *name;
+	struct frame_format format;
+	double rate;                    /* frames per second, as the device states it */
+	bool own_stamps;                /* the driver's, not a plug-in's */
+	unsigned period_us, buffer_us;  /* as granted */
+	snd_pcm_uframes_t block_frames; /* what to wait for and read at once */
+};
+
+/** While true, what alsa-lib has to say in this thread is dropped: the acquisition thread logs nothing. */
+extern _Thread_local bool alsa_acquiring;
+
+/**
+ * Opens and configures values[ALSA_DEVICE], whose text must live as long as the device.  Main thread.
+ *
+ * @return 0; -errno after log_error, with nothing left open
+ */
+int alsa_device_open(struct alsa_device *device, const struct setting_value *values);
+
+#endif
