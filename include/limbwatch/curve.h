@@ -44,7 +44,8 @@ struct curve;
  * Tabulates the curve.  Absolute error of values below 1e-6 of the source's total flux.
  *
  * Besides the ranges above: sizes and aperture up to 500 Fresnel units, integration up to 100 T_F, low-pass up to 1e9 T_F, a top hat
- * up to 1 and a Gaussian up to 0.5 of the centre wavelength.  A millisecond and some 50 KiB a component; more for wide sources.
+ * up to 1 and a Gaussian up to 0.5 of the centre wavelength.  A millisecond and some 60 KiB a component; where source or integration
+ * spans hundreds of units, up to 50 ms and 2 MiB.
  *
  * @param out  the caller's to destroy; untouched on failure
  * @return 0; -EINVAL when a parameter is out of range or not finite; -ENOMEM
