@@ -510,6 +510,37 @@ static void sample_is_value_on_a_grid(void **state)
 	curve_destroy(curve);
 }
 
+/* Corners far outside the pattern's own frequencies: a filter that does nothing, or leaves nothing. */
+static void extreme_time_constants_stay_finite(void **state)
+{
+	static const double tiny[] = { 1e-300, 1e-12, 1e-8 }, huge[] = { 1e300, 1e12, 1e9 };
+
+	(void)state;
+	for (size_t i = 0; i < 6; i++) {
+		struct curve_parameters p = unit_edge(i & 1 ? CONTACT_EMERSION : CONTACT_IMMERSION);
+		double sign = i & 1 ? 1.0 : -1.0;
+
+		p.low_pass_s = tiny[i / 2];
+		struct curve *low = make(&p);
+
+		p.low_pass_s = 0.0;
+		p.high_pass_hz = huge[i / 2];
+		struct curve *high = make(&p);
+
+		p.high_pass_hz = 1.0 / huge[i / 2];
+		struct curve *slow = make(&p);
+
+		for (double t = -40.0; t < 41.0; t += 1.37) {
+			assert_true(fabs(curve_value(low, t) - edge_intensity(sign * t)) < PROMISE);
+			assert_true(fabs(curve_value(high, t)) < PROMISE);
+			assert_true(fabs(curve_value(slow, t) - (edge_intensity(sign * t) - (i & 1 ? 0.0 : 1.0))) < PROMISE);
+		}
+		curve_destroy(low);
+		curve_destroy(high);
+		curve_destroy(slow);
+	}
+}
+
 static double draw(uint64_t *seed)
 {
 	*seed = *seed * 6364136223846793005u + 1442695040888963407u;
@@ -596,6 +627,7 @@ int main(void)
 		cmocka_unit_test(real_rigs_look_as_they_should),
 		cmocka_unit_test(rejects_what_is_out_of_range),
 		cmocka_unit_test(sample_is_value_on_a_grid),
+		cmocka_unit_test(extreme_time_constants_stay_finite),
 		cmocka_unit_test(table_meets_the_far_field_for_any_parameters),
 	};
 

@@ -57,7 +57,7 @@ static double finest_step(const struct spectrum *spectrum, double reach, double 
 	double h = 0.25;
 
 	for (double w = 1.0; w <= reach * 1.1; w *= 1.05) {
-		/* error 35^2 / 2^15 / ... : (h omega)^8 prod / 8! = 1.07e-3 (h omega)^8 */
+		/* largest error of the stencil: (h omega)^8 (1/2 3/2 5/2 7/2)^2 / 8! */
 		double room = NEGLIGIBLE / (1.07e-3 * fringe_bound(spectrum, w));
 
 		h = fmin(h, pow(room, 0.125) / (M_PI * w) * kappa);

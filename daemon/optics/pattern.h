@@ -70,8 +70,9 @@ struct pattern {
 	ptrdiff_t half;
 	double *table;
 
-	/* Stationary phase: exp(i pi u^2 / 2) as a sum of node_j cos(2 pi j spacing u) over the extent of the kernels. */
-	double fringes;                 /* w beyond which no fringe matters; up to here outside the table: */
+	/* Up to here fringes matter.  Outside the table they come by stationary phase: exp(i pi u^2 / 2) as a sum of
+	 * node_j cos(2 pi j spacing u) over the extent of the kernels. */
+	double fringes;
 	size_t nodes;
 	double spacing;
 	double node_real[MAX_NODES], node_imaginary[MAX_NODES];

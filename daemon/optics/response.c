@@ -9,10 +9,16 @@
 
 /* Two equal poles have no partial fractions; parted by this they have, and the error is its square. */
 #define PARTED 1e-4
+#define SHORTEST 1e-9
 
 void response_init(struct response *response, int direction, double low_pass, double high_pass)
 {
 	*response = (struct response){ .direction = direction };
+	/* Shorter than this a time constant changes nothing by more than 1e-8. */
+	if (low_pass < SHORTEST)
+		low_pass = 0.0;
+	if (high_pass > 0.0)
+		high_pass = fmax(high_pass, SHORTEST);
 	if (low_pass > 0.0 && high_pass > 0.0) {
 		/* s h / ((1 + s t1)(1 + s t2)) = h / (t2 - t1) [1 / (1 + s t1) - 1 / (1 + s t2)], h = t2 = high_pass */
 		double t1 = low_pass, t2 = high_pass, mean = 0.5 * (t1 + t2);

@@ -43,7 +43,11 @@ struct curve;
 /**
  * Tabulates the curve.  Absolute error of values below 1e-6 of the source's total flux.
  *
- * @param out  the caller's to destroy
+ * Besides the ranges above: sizes and aperture up to 500 Fresnel units, integration up to 100 T_F, low-pass up to 1e9 T_F, a top hat
+ * up to 1 and a Gaussian up to 0.5 of the centre wavelength.  A millisecond and some 60 KiB a component; where source or integration
+ * spans hundreds of units, up to 50 ms and 2 MiB.
+ *
+ * @param out  the caller's to destroy; untouched on failure
  * @return 0; -EINVAL when a parameter is out of range or not finite; -ENOMEM
  */
 int curve_create(struct curve **out, const struct curve_parameters *parameters);
@@ -65,6 +69,7 @@ double curve_fresnel_time(const struct curve_parameters *parameters);
 
 /**
  * Share of the edge's energy about its mean over `window_s` centred on the contact that survives high_pass_hz; 1 without it.
+ * NAN when a parameter or the window is out of range.
  */
 double curve_surviving_energy(const struct curve_parameters *parameters, double window_s);
 
