@@ -19,6 +19,7 @@ static const double gate_floor_s = 20e-6;       /* a pulse this near its place i
 static const double settled_ppm = 5e-6;         /* the rate is known this well after a few pulses */
 static const double longest_outage_s = 900;     /* pulses missing longer: the comb is found anew */
 static const double reject_sigmas = 5;
+static const double found_sigma = 1e-6;
 /* Random walk of y, variance per second: 1e-11 to 3e-8 per root second.  Common practice for crystals: 1e-10 to 1e-9. */
 static const double walks[] = { 1e-22, 1e-21, 1e-20, 1e-19, 1e-18, 1e-17, 1e-16, 1e-15 };
 enum { WALKS = sizeof(walks) / sizeof(*walks) };
@@ -202,11 +203,27 @@ static double jump_before(const struct node *n)
 	return n->relock ? 0.3 : n->gap_s;
 }
 
+/*
+ * The first pass knows the rate to the tolerance.  That is so much more than the pulses leave of it that the covariances lose
+ * their digits; so later passes start from the rate found, with a sigma that is still wide beside what five pulses say.
+ */
 static void start(const struct frame_clock *c, const struct node *n, struct state *s)
 {
-	double tolerance = c->settings.rate_tolerance;
+	double sigma = c->rate_found ? found_sigma : c->settings.rate_tolerance;
 
-	*s = (struct state){ .x = measured(c, n), .xx = n->variance, .yy = tolerance * tolerance };
+	*s = (struct state){
+		.x = measured(c, n), .y = c->rate_found ? c->first_rate : 0, .xx = n->variance, .yy = sigma * sigma,
+	};
+}
+
+static void find_rate(struct frame_clock *c)
+{
+	c->rate_found = false;
+	for (size_t i = 0; !c->rate_found && i < c->nodes; i++)
+		if (c->node[i].accepted) {
+			c->first_rate = c->node[i].smoothed.y;
+			c->rate_found = true;
+		}
 }
 
 static void update(struct state *s, double z, double variance)
@@ -398,6 +415,7 @@ size_t frame_clock_solve(struct frame_clock *c)
 	for (size_t i = 0; i < c->nodes; i++)
 		accepted += c->node[i].accepted;
 	c->accepted = 0;
+	c->rate_found = false;
 	if (accepted >= LOCK_PULSES) {
 		for (int pass = 0; pass < PASSES; pass++) {
 			for (size_t i = 0; i < c->nodes; i++)
@@ -405,6 +423,7 @@ size_t frame_clock_solve(struct frame_clock *c)
 			c->walk = likely_walk(c);
 			filter(c);
 			smooth(c);
+			find_rate(c);
 			judge(c, 1, false);
 			scale = excess(c);
 			accepted = judge(c, scale, pass < PASSES - 1);

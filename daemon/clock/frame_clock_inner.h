@@ -40,7 +40,8 @@ struct frame_clock {
 	struct label label[FRAME_CLOCK_LABELS];
 	/* The last solution. */
 	size_t accepted;
-	double walk, rms_residual_s;
+	double walk, rms_residual_s, first_rate;
+	bool rate_found;
 	bool labelled, second_confirmed, contradiction_said;
 	double second_zero;             /* TAI second of k = 0 */
 	double label_sigma_s;           /* of the label that decided */

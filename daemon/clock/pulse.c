@@ -19,7 +19,7 @@
 enum {
 	LAG = 2,                        /* the screening difference is x[k + LAG] - x[k - LAG] */
 	SINC = 24,                      /* half width of the interpolation */
-	INNER = 8, OUTER = 48,          /* frames from the edge where levels are taken */
+	INNER = 8, OUTER = 64,          /* frames from the edge where levels are taken */
 	REACH = OUTER + SINC + 8,       /* frames needed on both sides of a block */
 	EDGES = 64,                     /* held until their opposite comes */
 	CHUNK = 4096,
@@ -44,23 +44,26 @@ struct pulse_detector {
 	size_t edges;
 	struct edge edge[EDGES];
 	double newest;                  /* frame of the newest edge, so that none is found twice */
-	double parabola[3][LEVEL_POINTS];       /* value at the edge from the level points; see make_parabola() */
+	double weight[LEVEL_POINTS], weights;   /* of the level points, and their sum */
+	double parabola[3][LEVEL_POINTS];       /* coefficients from the level points; see make_parabola() */
 };
 
 /*
- * Weights that give the value at 0 of the least-squares parabola through points at INNER + 1/2 ... OUTER - 1/2: only the
- * first row is used for levels; the others check the residual.
+ * Rows that give the coefficients of the weighted least-squares parabola through points at INNER + 1/2 ... OUTER - 1/2.  The weights
+ * rise and fall smoothly, so that the fast ripple which an anti-alias filter leaves beside an edge averages out.
  */
 static void make_parabola(struct pulse_detector *d)
 {
 	double m[3][6] = { { 0 } };
 
 	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double u = (INNER + k + 0.5) / OUTER, power[3] = { 1, u, u * u };
+		double u = (INNER + k + 0.5) / OUTER, power[3] = { 1, u, u * u }, s = sin(M_PI * (k + 0.5) / LEVEL_POINTS);
 
+		d->weight[k] = s * s;
+		d->weights += s * s;
 		for (int i = 0; i < 3; i++)
 			for (int j = 0; j < 3; j++)
-				m[i][j] += power[i] * power[j];
+				m[i][j] += s * s * power[i] * power[j];
 	}
 	for (int i = 0; i < 3; i++)
 		m[i][3 + i] = 1;
@@ -80,7 +83,7 @@ static void make_parabola(struct pulse_detector *d)
 		for (int k = 0; k < LEVEL_POINTS; k++) {
 			double u = (INNER + k + 0.5) / OUTER;
 
-			d->parabola[i][k] = m[i][3] + m[i][4] * u + m[i][5] * u * u;
+			d->parabola[i][k] = d->weight[k] * (m[i][3] + m[i][4] * u + m[i][5] * u * u);
 		}
 }
 
@@ -130,9 +133,9 @@ static double level(const struct pulse_detector *d, const double *x, long at, in
 		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
 		double r = y - value[0] - value[1] * u - value[2] * u * u;
 
-		squares += r * r;
+		squares += d->weight[k] * r * r;
 	}
-	*variance = squares / (LEVEL_POINTS - 3);
+	*variance = squares / d->weights;
 	return value[0] + value[1] * side * beyond / OUTER;
 }
 
