@@ -12,7 +12,7 @@ station='station = { name = "Brackenfold"; };'
 # The event of every run here: 20 s, truly at 01:23:45.812345 UTC, by a card 40 ppm off.
 synthetic='driver = "synthetic"; seed = 5; duration_s = 26; start_utc = "2031-04-02T01:23:30.25Z"; start_sigma_s = 0.05;
   kind = "immersion"; contact_s = 15.562345; distance_km = 371500; shadow_speed_mps = 640; wavelength_nm = 620;
-  passband_nm = 120; aperture_m = 0.28; snr = 30; pulse = true; clock_error_ppm = 40;'
+  passband_nm = 120; aperture_m = 0.28; snr = 30; level = 0.02; pulse = true; clock_error_ppm = 40;'
 
 run "$build/limbwatchd" --version
 [ "$status" -eq 0 ] && grep -q '^limbwatchd [0-9]' "$work/out"

@@ -16,6 +16,8 @@
 
 #define MAS (M_PI / 180 / 3600e3)
 
+static const double noise_room = 0.1;           /* rms of one sample, over full scale */
+
 /* An invented evening: used when no configuration is given. */
 static const char scenario[] =
 	"station = { name = \"Brackenfold\"; latitude_deg = 51.3; longitude_deg = -2.9; height_m = 210; };\n"
@@ -248,6 +250,11 @@ static int stage(struct rehearsal *r, char start[TAI_TEXT])
 	set_receiver(r, detector);
 	set_pulse(r, pulse);
 	set_event(r, e, curve_fresnel_time(&curve), start);
+	if (synthetic_truth(r->values, &r->truth) < 0)
+		return -EINVAL;
+	/* A faint source in much noise must not reach full scale. */
+	if (r->truth.noise_rms > noise_room)
+		set(r, "level", value(r, "level")->number * noise_room / r->truth.noise_rms);
 	config->channel[0] = *detector;
 	config->channel[0].column = 0;
 	config->channel[0].polarity = 1;

@@ -207,9 +207,56 @@ static json_t *build(const struct sidecar *s)
 	json_object_set_new(o, "channels", channels(s));
 	json_object_set_new(o, "expected", expected(s));
 	json_object_set_new(o, "contacts", contacts(s));
-	json_object_set_new(o, "clock", json_pack("{s:o,s:o,s:o,s:o}", "true_rate_hz", number(s->true_rate),
-		"start", reading(&s->start), "end", reading(&s->end), "pulses", pulses(s)));
+	json_object_set_new(o, "clock", json_pack("{s:o,s:o,s:o}", "true_rate_hz", number(s->true_rate),
+		"start", reading(&s->start), "end", reading(&s->end)));
+	json_object_set_new(o, "pulses", pulses(s));
 	return o;
+}
+
+/* ------------------------------------------------------------------ to text */
+
+/* For people: a member a line, and in a list an element a line. */
+static void put_value(FILE *out, const json_t *value)
+{
+	const size_t flags = JSON_ENCODE_ANY | JSON_COMPACT | JSON_REAL_PRECISION(17);
+	json_t *element;
+	size_t k;
+
+	if (!json_is_array(value) || json_array_size(value) == 0) {
+		json_dumpf(value, out, flags);
+		return;
+	}
+	json_array_foreach(value, k, element) {
+		fputs(k ? ",\n  " : "[\n  ", out);
+		json_dumpf(element, out, flags);
+	}
+	fputc(']', out);
+}
+
+/* The caller's to free. */
+static char *to_text(json_t *o)
+{
+	char *text = NULL;
+	size_t size = 0;
+	FILE *out = open_memstream(&text, &size);
+	const char *name, *between = "{\n";
+	json_t *value;
+	bool failed;
+
+	if (!out)
+		return NULL;
+	json_object_foreach(o, name, value) {
+		fprintf(out, "%s\"%s\": ", between, name);
+		put_value(out, value);
+		between = ",\n";
+	}
+	fputs("\n}\n", out);
+	failed = ferror(out);
+	if (fclose(out) || failed) {
+		free(text);
+		return NULL;
+	}
+	return text;
 }
 
 /* ------------------------------------------------------------------ to disk */
@@ -245,7 +292,7 @@ int sidecar_write(const struct sidecar *sidecar, const struct disk *disk, const 
 	char temporary[4096], folder[4096];
 	const char *slash = strrchr(path, '/');
 	json_t *o = build(sidecar);
-	char *text = json_dumps(o, JSON_INDENT(1) | JSON_REAL_PRECISION(17));
+	char *text = to_text(o);
 	int ret = -ENOMEM;
 
 	json_decref(o);

@@ -306,7 +306,7 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 	s->true_rate = number(r, clock, "true_rate_hz", 0, 1e9, true);
 	read_reading(r, clock, "start", &s->start);
 	read_reading(r, clock, "end", &s->end);
-	s->pulse = array(r, clock, "pulses", 2000000, sizeof(*s->pulse), &s->pulses, read_pulse);
+	s->pulse = array(r, root, "pulses", 2000000, sizeof(*s->pulse), &s->pulses, read_pulse);
 }
 
 int sidecar_parse(struct sidecar *out, const char *text_, size_t size, const char *name)

@@ -9,6 +9,7 @@
 /* A window of 16 T_F is 256 series samples: see detector.h. */
 static const double samples_per_fresnel_time = DETECTOR_WINDOW / 16.0;
 static const double bank_min = 0.6, bank_max = 1.6;     /* scales of one bank, relative to the expected T_F */
+static const double least_tolerance = 0.01;     /* nobody knows the slope of the limb better */
 static const double least_samples = 4;                  /* per T_F: fewer do not show fringes */
 static const double least_energy = 0.05;                /* of the edge behind an AC-coupled input */
 
@@ -57,9 +58,12 @@ static void plan_curve(struct lane_shape *shape, const struct lane_settings *set
 		config_curve(&shape->curve, channel, &unexpected);
 		shape->scale_min = settings->scale_min;
 		shape->scale_max = settings->scale_max;
+		/* Any speed between the least and the greatest is as likely: standard deviation of a uniform distribution. */
+		shape->scale_sigma = fmax(log(settings->scale_max / settings->scale_min) / sqrt(12), least_tolerance);
 		return;
 	}
 	config_curve(&shape->curve, channel, &config->expected[settings->expected]);
+	shape->scale_sigma = fmax(config->expected[settings->expected].speed_tolerance, least_tolerance);
 	tolerance = 3 * config->expected[settings->expected].speed_tolerance;
 	shape->scale_min = fmin(bank_min, 1 / (1 + tolerance));
 	shape->scale_max = fmax(bank_max, 1 / fmax(1 - tolerance, 0.25));
@@ -104,6 +108,7 @@ static int create_detector(struct lane *lane)
 	struct detector_settings d = {
 		.rate = lane->shape.series_rate, .curve = lane->shape.curve,
 		.scale_min = lane->shape.scale_min, .scale_max = lane->shape.scale_max,
+		.scale_sigma = lane->shape.scale_sigma,
 		.false_alarms_per_night = config->watch.false_alarms_per_night,
 		.false_alarms_per_vigil = config->watch.false_alarms_per_vigil,
 		.threshold = config->watch.threshold, .scintillation = config->watch.scintillation,
@@ -222,6 +227,11 @@ void lane_expect(struct lane *lane, double frame, double sigma_frames)
 double lane_latency(const struct lane *lane)
 {
 	return (detector_latency(lane->detector) + 1) * lane->shape.decimation;
+}
+
+double lane_startup(const struct lane *lane)
+{
+	return (detector_startup(lane->detector) + 1) * lane->shape.decimation;
 }
 
 uint64_t lane_clipped(const struct lane *lane)

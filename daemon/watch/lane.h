@@ -23,7 +23,7 @@ struct lane_shape {
 	double fresnel_time_s;
 	unsigned decimation;
 	double series_rate;
-	double scale_min, scale_max;
+	double scale_min, scale_max, scale_sigma;
 	double surviving;               /* share of the edge's energy that an AC-coupled input leaves */
 };
 /** -EINVAL when the event cannot be seen through this channel: `why` says it. */
@@ -40,6 +40,8 @@ size_t lane_finish(struct lane *lane, struct contact *out, size_t max);
 void lane_expect(struct lane *lane, double frame, double sigma_frames);
 /** Frames from a contact until lane_execute gives it. */
 double lane_latency(const struct lane *lane);
+/** Frames held back at the beginning. */
+double lane_startup(const struct lane *lane);
 uint64_t lane_clipped(const struct lane *lane);
 unsigned lane_channel(const struct lane *lane);
 double lane_series_rate(const struct lane *lane);

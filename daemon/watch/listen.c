@@ -45,6 +45,8 @@ static int create_outside(struct listener *l, unsigned channel)
 			return ret;
 		if (lane_latency(l->lane[l->lanes]) > (double)l->hold)
 			l->hold = (uint64_t)ceil(lane_latency(l->lane[l->lanes]));
+		if (lane_startup(l->lane[l->lanes]) > (double)l->startup)
+			l->startup = (uint64_t)ceil(lane_startup(l->lane[l->lanes]));
 		l->lanes++;
 	}
 	return 0;
@@ -158,7 +160,7 @@ uint64_t listener_lookback(const struct listener *l)
 /* A plan is final only when contacts at its very end have settled. */
 uint64_t listener_backlog(const struct listener *l)
 {
-	return listener_lookback(l) + l->hold + l->settle + 4 * CHUNK;
+	return listener_lookback(l) + l->hold + l->settle + l->startup + 4 * CHUNK;
 }
 
 void listener_attach(struct listener *l, struct ring_reader *reader)
@@ -269,9 +271,13 @@ static void hear(struct listener *l, size_t count, const struct ring_news *news)
 
 static void decide(struct listener *l, bool ended)
 {
-	uint64_t lookback = listener_lookback(l);
+	uint64_t lookback = listener_lookback(l), decided = 0;
 
-	plans_decide(l->settings.plans, ended ? UINT64_MAX : l->next_frame > lookback ? l->next_frame - lookback : 0, ended);
+	if (ended)
+		decided = UINT64_MAX;
+	else if (l->next_frame > lookback + l->startup)         /* until then the lanes have not spoken at all */
+		decided = l->next_frame - lookback;
+	plans_decide(l->settings.plans, decided, ended);
 	atomic_store(&l->heard, l->next_frame);
 }
 

@@ -41,6 +41,7 @@ struct listener {
 	uint64_t solved;                /* frame at the last solution */
 	bool dated;                     /* some label says what time it is */
 	uint64_t hold, settle;          /* frames: until all lanes have spoken; until later pulses are in */
+	uint64_t startup;               /* frames the lanes hold back at the beginning */
 	size_t sightings;
 	struct sighting sighting[SIGHTINGS];
 	size_t plans;                   /* not final yet, oldest first */

@@ -26,6 +26,7 @@ struct detector_settings {
 	struct curve_parameters curve;
 	bool   kind[CONTACT_KINDS];     /* which kinds to watch for */
 	double scale_min, scale_max;    /* span of T_F watched, relative to the expected; 0.6, 1.6 */
+	double scale_sigma;             /* standard uncertainty of ln(T_F) about the expected: a prior of the fit; 0: none */
 	double false_alarms_per_night;  /* outside vigils; a night is ten hours */
 	double false_alarms_per_vigil;
 	double threshold;               /* fixed rho threshold; 0: from the false alarms */
@@ -69,11 +70,16 @@ void detector_expect(struct detector *detector, enum contact_kind kind, double c
  */
 size_t detector_execute(struct detector *detector, const float *series, size_t n, uint64_t index,
                         struct candidate *out, size_t max);
-/** End of the data: decides about what is left, with windows cut short where that still makes sense. */
+/**
+ * End of the data: decides about what is left.  A contact whose window (16 T_F, 79% of it after an emersion, 21% after an
+ * immersion) is not whole by then is not given.
+ */
 size_t detector_finish(struct detector *detector, struct candidate *out, size_t max);
 
-/** Samples from a contact to the call that gives it, at most. */
+/** Samples from a contact to the call that gives it, at most, once the detector has started. */
 double detector_latency(const struct detector *detector);
+/** Samples held back at the beginning until the noise has been measured from them; their contacts come then. */
+double detector_startup(const struct detector *detector);
 /** Rms of the series' noise over one T_F at the last measurement, units of the series; NAN before. */
 double detector_noise(const struct detector *detector);
 /** Threshold in force outside vigils. */

@@ -12,7 +12,7 @@ start = datetime.fromisoformat("2031-04-02T01:23:30.250000+00:00").timestamp()
 text = """station = { name = "Brackenfold"; };
 intake = { driver = "synthetic"; seed = %d; rate_hz = 8000; duration_s = %g; start_utc = "2031-04-02T01:23:30.250Z";
   start_sigma_s = 0.05; kind = "%s"; contact_s = %.7f; distance_km = 371500; shadow_speed_mps = %.3f; wavelength_nm = 620;
-  passband_nm = 120; aperture_m = 0.28; snr = %g; pulse = true; clock_error_ppm = %.2f; %s };
+  passband_nm = 120; aperture_m = 0.28; %s level = 0.01; pulse = true; clock_error_ppm = %.2f; %s };
 channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );
 %s
@@ -23,7 +23,7 @@ keep = { folder = "%s"; free_mib = 0; };
 def run(work, case, duration, kind, contact, speed, snr, ppm, extra="", expected=""):
     name = "%s/%s" % (work, case)
     open(name + ".conf", "w").write(text % (int(case.split("-")[-1]) + 1, duration, kind,
-                                            contact, speed, snr, ppm, extra, expected, name))
+                                            contact, speed, 'snr = %g;' % snr if snr else '', ppm, extra, expected, name))
     out = subprocess.run([build + "/limbwatchd", "--quiet", "--json", "--config", name + ".conf"], check=True,
                          capture_output=True, text=True).stdout
     return [json.loads(line) for line in out.splitlines()]
@@ -61,6 +61,6 @@ with tempfile.TemporaryDirectory(prefix="limbwatch-recovery-") as work, ThreadPo
                                          1e3 * sum(s for e, s in hits) / max(1, len(hits)), 100 * inside,
                                          sum(r[1] for r in results)), flush=True)
     for noise in ("", "red_noise_rms = 0.02; red_corner_hz = 5;"):
-        found = run(work, "noise-%d" % len(noise), hours * 3600, "none", 1, 612, 0, 40, "noise_rms = 0.02; " + noise)
+        found = run(work, "noise-%d" % len(noise), hours * 3600, "none", 1, 612, None, 40, "noise_rms = 0.02; " + noise)
         print("%g h of %s noise, always watching: %d false triggers (0.5 per ten hours set)"
               % (hours, "red" if noise else "white", len(found)), flush=True)

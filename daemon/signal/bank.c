@@ -1,0 +1,360 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <errno.h>
+#include <gsl/gsl_errno.h>
+#include <gsl/gsl_linalg.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+#include "bank_inner.h"
+
+/* Diameters of the discs, Fresnel units; the second is one to detect with. */
+static const double fit_size[FIT_SIZES] = { 0, 1.2, 2, 3 };
+
+/* Edge this far into the window, so that most fringes are inside: an emersion's come after it, an immersion's before. */
+static const double edge_at[CONTACT_KINDS] = { [CONTACT_IMMERSION] = 0.79, [CONTACT_EMERSION] = 0.21 };
+
+double bank_contact(enum contact_kind kind)
+{
+	return edge_at[kind] * N;
+}
+
+double bank_fit_scale(const struct bank *bank, size_t k)
+{
+	return bank->scale_min * exp((double)k * bank->scale_step);
+}
+
+double bank_fit_size(size_t k)
+{
+	return fit_size[k];
+}
+
+/* ------------------------------------------------------------------ templates */
+
+/* The expected event with another T_F and a disc of `size` Fresnel units on top of the expected source. */
+static void shape_curve(const struct bank *bank, enum contact_kind kind, double scale, double size,
+                        struct curve_parameters *out)
+{
+	double unit;
+
+	*out = bank->settings.curve;
+	out->kind = kind;
+	out->speed_mps /= scale;
+	if (size > 0) {
+		unit = curve_fresnel_time(out) * out->speed_mps / out->distance_m;
+		out->components = 1;
+		out->component[0] = (struct source_component){
+			.shape = SHAPE_UNIFORM_DISC, .flux = 1,
+			.size_rad = hypot(size * unit, bank->settings.curve.component[0].size_rad),
+		};
+	}
+	/* One boxcar is the curve's own business: the detector's, or else the series' integrate-and-dump. */
+	if (out->integration_s == 0)
+		out->integration_s = 1 / bank->settings.rate;
+}
+
+int bank_curve(const struct bank *bank, enum contact_kind kind, double scale, double size, struct curve **out)
+{
+	struct curve_parameters p;
+
+	shape_curve(bank, kind, scale, size, &p);
+	return curve_create(out, &p);
+}
+
+/* Value at t with the boxcars that the curve does not have: Gauss-Legendre, four points over one series sample. */
+double bank_curve_value(const struct bank *bank, const struct curve *curve, double t)
+{
+	static const double x[4] = { -0.8611363115940526, -0.3399810435848563, 0.3399810435848563, 0.8611363115940526 };
+	static const double w[4] = { 0.1739274225687269, 0.3260725774312731, 0.3260725774312731, 0.1739274225687269 };
+	double sum = 0;
+
+	if (bank->settings.curve.integration_s == 0)
+		return curve_value(curve, t);
+	for (int k = 0; k < 4; k++)
+		sum += w[k] * curve_value(curve, t + 0.5 * x[k] / bank->settings.rate);
+	return sum;
+}
+
+static int make_fine(struct bank *bank, enum contact_kind kind, size_t scale, size_t size)
+{
+	struct curve *curve;
+	float *fine = bank->fine[kind] + (scale * FIT_SIZES + size) * FINE;
+	int ret = bank_curve(bank, kind, bank_fit_scale(bank, scale), fit_size[size], &curve);
+
+	if (ret < 0)
+		return ret;
+	for (int k = 0; k < FINE; k++) {
+		double sample = (double)k / OVERSAMPLING - MARGIN + 0.5 - bank_contact(kind);
+
+		fine[k] = (float)bank_curve_value(bank, curve, sample / bank->settings.rate);
+	}
+	curve_destroy(curve);
+	return 0;
+}
+
+static int make_kind(struct bank *bank, enum contact_kind kind)
+{
+	int ret = 0;
+
+	bank->fine[kind] = malloc(FIT_SCALES * FIT_SIZES * FINE * sizeof(float));
+	if (!bank->fine[kind])
+		return -ENOMEM;
+	for (size_t scale = 0; ret == 0 && scale < FIT_SCALES; scale++)
+		for (size_t size = 0; ret == 0 && size < FIT_SIZES; size++)
+			ret = make_fine(bank, kind, scale, size);
+	for (size_t scale = 0; scale < BANK_SCALES; scale++)
+		for (size_t size = 0; size < BANK_SIZES; size++) {
+			struct detecting *d = &bank->detecting[bank->count++];
+
+			d->scale = scale * (FIT_SCALES / BANK_SCALES) + 1;
+			d->size = size;
+			d->what = (struct bank_template){
+				.kind = kind, .scale = bank_fit_scale(bank, d->scale), .size = fit_size[size],
+				.contact = bank_contact(kind),
+			};
+		}
+	return ret;
+}
+
+/* Template s of the fit grid with its contact `lag` quarter samples late. */
+void bank_fine(const struct bank *bank, enum contact_kind kind, size_t scale, size_t size, int lag, double s[N])
+{
+	const float *fine = bank->fine[kind] + (scale * FIT_SIZES + size) * FINE;
+
+	for (int j = 0; j < N; j++)
+		s[j] = (double)fine[OVERSAMPLING * (j + MARGIN) - lag];
+}
+
+int bank_create(struct bank **out, const struct detector_settings *settings)
+{
+	struct bank *bank = calloc(1, sizeof(*bank));
+	struct noise_model white;
+	int ret = 0;
+
+	if (!bank)
+		return -ENOMEM;
+	gsl_set_error_handler_off();    /* results are looked at */
+	bank->settings = *settings;
+	bank->scale_min = settings->scale_min;
+	bank->scale_step = log(settings->scale_max / settings->scale_min) / (FIT_SCALES - 1);
+	for (int kind = 0; ret == 0 && kind < CONTACT_KINDS; kind++)
+		if (settings->kind[kind])
+			ret = make_kind(bank, (enum contact_kind)kind);
+	noise_assume(1, &white);
+	if (ret == 0)
+		ret = bank_whiten(bank, &white);
+	if (ret < 0) {
+		bank_destroy(bank);
+		return ret;
+	}
+	*out = bank;
+	return 0;
+}
+
+void bank_destroy(struct bank *bank)
+{
+	if (!bank)
+		return;
+	for (int kind = 0; kind < CONTACT_KINDS; kind++)
+		free(bank->fine[kind]);
+	free(bank);
+}
+
+size_t bank_templates(const struct bank *bank)
+{
+	return bank->count;
+}
+
+const struct bank_template *bank_template(const struct bank *bank, size_t k)
+{
+	return &bank->detecting[k].what;
+}
+
+const float *bank_weights(const struct bank *bank, size_t k)
+{
+	return bank->weights[k];
+}
+
+const double *bank_projector(const struct bank *bank)
+{
+	return bank->projector;
+}
+
+/* ------------------------------------------------------------------ whitening */
+
+/* y = P s */
+void bank_project(const struct bank *bank, const double s[N], double y[N])
+{
+	for (int i = 0; i < N; i++) {
+		const double *row = bank->projector + (size_t)i * N;
+		double a = 0, b = 0, c = 0, d = 0;
+
+		for (int j = 0; j < N; j += 4) {
+			a += row[j] * s[j];
+			b += row[j + 1] * s[j + 1];
+			c += row[j + 2] * s[j + 2];
+			d += row[j + 3] * s[j + 3];
+		}
+		y[i] = (a + b) + (c + d);
+	}
+}
+
+double bank_product(const double a[N], const double b[N])
+{
+	double p = 0, q = 0;
+
+	for (int j = 0; j < N; j += 2) {
+		p += a[j] * b[j];
+		q += a[j + 1] * b[j + 1];
+	}
+	return p + q;
+}
+
+static size_t baseline_columns(const struct noise_model *noise, double column[2 + 2 * NOISE_LINES][N])
+{
+	size_t n = 2;
+
+	for (int j = 0; j < N; j++) {
+		double t = (j - (N - 1) / 2.0) / N;
+
+		column[0][j] = 1;
+		column[1][j] = t;
+		for (size_t k = 0; k < noise->lines; k++) {
+			column[2 + 2 * k][j] = sin(2 * M_PI * noise->line[k] * j);
+			column[3 + 2 * k][j] = cos(2 * M_PI * noise->line[k] * j);
+		}
+	}
+	n += 2 * noise->lines;
+	return n;
+}
+
+/* Takes the part of P = C^-1 along each baseline column out, one after the other (P stays symmetric). */
+static void project_out(double *p, const double b[N])
+{
+	double y[N], norm = 0;
+
+	for (int i = 0; i < N; i++) {
+		y[i] = 0;
+		for (int j = 0; j < N; j++)
+			y[i] += p[i * N + j] * b[j];
+	}
+	for (int i = 0; i < N; i++)
+		norm += b[i] * y[i];
+	if (!(norm > 0))
+		return;
+	for (int i = 0; i < N; i++)
+		for (int j = 0; j < N; j++)
+			p[i * N + j] -= y[i] * y[j] / norm;
+}
+
+static void weigh_templates(struct bank *bank)
+{
+	double s[N], y[N];
+
+	for (size_t k = 0; k < bank->count; k++) {
+		const struct detecting *d = &bank->detecting[k];
+		double norm;
+
+		bank_fine(bank, d->what.kind, d->scale, d->size, 0, s);
+		bank_project(bank, s, y);
+		norm = sqrt(bank_product(s, y));
+		for (int j = 0; j < N; j++)
+			bank->weights[k][j] = norm > 0 ? (float)(y[j] / norm) : 0;
+	}
+}
+
+/* Curvature of rho's autocorrelation over lag and over ln(scale), for bank_alarm_rate(). */
+static void measure_field(struct bank *bank, enum contact_kind kind)
+{
+	double s[N], near[N], y[N], norm, lag = 0, scale = 0;
+	size_t n = 0;
+
+	for (size_t k = 1; k + 1 < FIT_SCALES; k += 3, n++) {
+		double along, across, near_norm, py[N];
+
+		bank_fine(bank, kind, k, 0, 0, s);
+		bank_project(bank, s, y);
+		norm = sqrt(bank_product(s, y));
+		bank_fine(bank, kind, k, 0, OVERSAMPLING / 2, near);
+		bank_project(bank, near, py);
+		near_norm = sqrt(bank_product(near, py));
+		along = bank_product(near, y) / (norm * near_norm);
+		bank_fine(bank, kind, k + 1, 0, 0, near);
+		bank_project(bank, near, py);
+		near_norm = sqrt(bank_product(near, py));
+		across = bank_product(near, y) / (norm * near_norm);
+		lag += sqrt(2 * fmax(0, 1 - along)) / 0.5;
+		scale += sqrt(2 * fmax(0, 1 - across)) / bank->scale_step;
+	}
+	bank->lag_speed[kind] = lag / (double)n;
+	bank->scale_speed[kind] = scale / (double)n;
+}
+
+int bank_whiten(struct bank *bank, const struct noise_model *noise)
+{
+	static const double jitter = 1e-9;      /* of the variance: keeps rounding from spoiling a steep spectrum */
+	double column[2 + 2 * NOISE_LINES][N], *p = malloc((size_t)N * N * sizeof(*p));
+	gsl_matrix_view matrix;
+	size_t columns;
+
+	if (!p)
+		return -ENOMEM;
+	for (int i = 0; i < N; i++)
+		for (int j = 0; j < N; j++)
+			p[i * N + j] = noise->covariance[abs(i - j)] + (i == j ? jitter * noise->covariance[0] : 0);
+	matrix = gsl_matrix_view_array(p, N, N);
+	if (gsl_linalg_cholesky_decomp1(&matrix.matrix) || gsl_linalg_cholesky_invert(&matrix.matrix)) {
+		free(p);
+		return -EDOM;
+	}
+	columns = baseline_columns(noise, column);
+	for (size_t k = 0; k < columns; k++)
+		project_out(p, column[k]);
+	memcpy(bank->projector, p, sizeof(bank->projector));
+	free(p);
+	bank->columns = columns;
+	weigh_templates(bank);
+	for (int kind = 0; kind < CONTACT_KINDS; kind++)
+		if (bank->fine[kind])
+			measure_field(bank, (enum contact_kind)kind);
+	return 0;
+}
+
+/* ------------------------------------------------------------------ the hot path */
+
+typedef float lanes __attribute__((vector_size(32)));
+
+static float dot(const float *a, const float *b)
+{
+	lanes sum[4] = { { 0 } };
+	float total = 0;
+
+	for (int j = 0; j < N; j += 32)
+		for (int k = 0; k < 4; k++) {
+			lanes x, y;
+
+			memcpy(&x, a + j + 8 * k, sizeof(x));
+			memcpy(&y, b + j + 8 * k, sizeof(y));
+			sum[k] += x * y;
+		}
+	sum[0] = (sum[0] + sum[1]) + (sum[2] + sum[3]);
+	for (int k = 0; k < 8; k++)
+		total += sum[0][k];
+	return total;
+}
+
+void bank_execute(const struct bank *bank, const float *window, float *rho)
+{
+	for (size_t k = 0; k < bank->count; k++)
+		rho[k] = dot(bank->weights[k], window);
+}
+
+double bank_alarm_rate(const struct bank *bank, enum contact_kind kind, double u)
+{
+	/* Two sizes are nearly one: what the second adds was measured with bench_recovery's noise. */
+	static const double sizes = 1.4;
+	double span = log(bank_fit_scale(bank, FIT_SCALES - 1) / bank->scale_min), gauss = exp(-0.5 * u * u);
+	double area = bank->lag_speed[kind] * bank->scale_speed[kind] * span * u / pow(2 * M_PI, 1.5);
+	double edge = bank->lag_speed[kind] / (2 * M_PI);
+
+	return sizes * (area + edge) * gauss;
+}

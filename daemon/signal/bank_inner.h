@@ -1,0 +1,39 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+#ifndef BANK_INNER_H
+#define BANK_INNER_H
+
+#include "limbwatch/bank.h"
+
+/* What bank.c (templates, whitening, detection) and fit.c share. */
+
+enum {
+	N = DETECTOR_WINDOW,
+	OVERSAMPLING = 4,               /* lags of the fit grid are quarters of a sample */
+	MARGIN = 13,                    /* samples a template can be shifted either way */
+	FINE = (N + 2 * MARGIN) * OVERSAMPLING,
+	DETECTING = CONTACT_KINDS * BANK_SCALES * BANK_SIZES,
+};
+
+struct detecting { struct bank_template what; size_t scale, size; };
+
+struct bank {
+	struct detector_settings settings;
+	double scale_min, scale_step;   /* of the fit grid; step in ln(scale) */
+	float *fine[CONTACT_KINDS];     /* the fit grid's templates, oversampled; NULL: kind not watched for */
+	size_t count, columns;          /* columns: of the baseline */
+	struct detecting detecting[DETECTING];
+	double lag_speed[CONTACT_KINDS], scale_speed[CONTACT_KINDS];
+	float weights[DETECTING][N];
+	double projector[N * N];
+};
+
+double bank_contact(enum contact_kind kind);
+double bank_fit_scale(const struct bank *bank, size_t k);
+double bank_fit_size(size_t k);
+void bank_fine(const struct bank *bank, enum contact_kind kind, size_t scale, size_t size, int lag, double s[N]);
+int bank_curve(const struct bank *bank, enum contact_kind kind, double scale, double size, struct curve **out);
+double bank_curve_value(const struct bank *bank, const struct curve *curve, double t);
+void bank_project(const struct bank *bank, const double s[N], double y[N]);
+double bank_product(const double a[N], const double b[N]);
+
+#endif
