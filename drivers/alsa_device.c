@@ -80,7 +80,7 @@ static int open_pcm(struct alsa_device *device)
 	list_devices(known, sizeof(known));
 	log_error("device: \"%s\" cannot be opened: %s; ALSA knows %s", device->name, snd_strerror(ret),
 		*known ? known : "no device to record from");
-	return ret;
+	return ret == -EINVAL ? -ENODEV : ret;  /* a card that is not there is no fault of the configuration */
 }
 
 static int refused(const struct alsa_device *device, const char *what, int error)

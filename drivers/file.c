@@ -230,6 +230,7 @@ static int check_path(const char *path)
 	} else if (!S_ISREG(status.st_mode)) {
 		log_error("path: \"%s\" is not a file; samples from a pipe, socket or device need the pipe intake", path);
 	} else if (status.st_size == 0) {
+		ret = -ENODATA;
 		log_error("path: \"%s\" is empty (0 bytes)", path);
 	} else {
 		return 0;
@@ -247,11 +248,12 @@ static int check_info(const char *path, const SF_INFO *info, double rate_hz)
 	else if (info->frames <= 0)
 		log_error("path: \"%s\" says it holds not a single frame (sox --ignore-length repairs a WAV file whose header was "
 			"never completed)", path);
-	else if (rate_hz != 0 && rate_hz != info->samplerate)
+	else if (rate_hz != 0 && rate_hz != info->samplerate) {
 		log_error("rate_hz: %.9g was asked for, but \"%s\" was sampled at %d Hz", rate_hz, path, info->samplerate);
-	else
+		return -EINVAL;         /* the configuration contradicts the file; the rest is the file's own fault */
+	} else
 		return 0;
-	return -EINVAL;
+	return -EILSEQ;
 }
 
 static void describe(struct file_intake *file, const char *path, const SF_INFO *info)
@@ -298,7 +300,7 @@ static int file_open(struct intake **out, const struct setting_value *values)
 	file->sound = sf_open(path, SFM_READ, &info);
 	if (!file->sound) {
 		log_error("path: \"%s\" is no sound file that can be read: %s", path, sf_strerror(NULL));
-		ret = -EINVAL;
+		ret = -EILSEQ;
 		goto free_file;
 	}
 	ret = check_info(path, &info, values[FILE_RATE].number);

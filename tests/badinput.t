@@ -38,7 +38,7 @@ record folder
 refused 1 "$work" "a folder in the place of a sound file is refused"
 config rate "driver = \"file\"; path = \"$work/good.wav\"; rate_hz = 48000;"
 record rate
-refused 1 '48000' "a sound file of another rate than the configured one is refused"
+refused 2 '48000' "a sound file of another rate than the configured one is refused"
 config truncated "driver = \"file\"; path = \"$work/truncated.wav\";" "folder = \"$work/cut\"; everything = true; free_mib = 0;"
 record truncated
 refused 1 'truncated.wav' "a truncated sound file is said"

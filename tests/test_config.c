@@ -54,9 +54,13 @@ static size_t put_required(char *text, size_t size, const struct setting *table,
 	size_t n = 0;
 
 	text[0] = 0;
-	for (; table && table->name; table++)
+	for (; table && table->name; table++) {
+		bool quoted = table->type == SETTING_TEXT || table->type == SETTING_CHOICE || table->type == SETTING_INSTANT;
+		const char *quote = quoted && table->example && table->example[0] != '"' ? "\"" : "";
+
 		if (table->required && table != except)
-			n += (size_t)snprintf(text + n, size - n, "%s = %s; ", table->name, table->example);
+			n += (size_t)snprintf(text + n, size - n, "%s = %s%s%s; ", table->name, quote, table->example, quote);
+	}
 	return n;
 }
 

@@ -338,14 +338,14 @@ static void what_is_no_sound_file_is_said_in_one_sentence(void **state)
 	(void)state;
 	refuse(probe_path(&probe, "missing.wav"), -ENOENT, "No such file");
 	refuse(probe.folder, -EISDIR, "is a folder");
-	refuse(probe_file(&probe, "empty.wav", "", 0), -EINVAL, "is empty (0 bytes)");
-	refuse(probe_file(&probe, "notes.txt", text, strlen(text)), -EINVAL, "no sound file that can be read");
+	refuse(probe_file(&probe, "empty.wav", "", 0), -ENODATA, "is empty (0 bytes)");
+	refuse(probe_file(&probe, "notes.txt", text, strlen(text)), -EILSEQ, "no sound file that can be read");
 	char beyond[300];
 	snprintf(beyond, sizeof(beyond), "%s/deeper.wav", probe_path(&probe, "notes.txt"));
 	refuse(beyond, -ENOTDIR, "Not a directory");
-	refuse(wave_file(WAVE_PCM, 9, 48000, 16, samples, sizeof(samples)), -EINVAL, "has 9 channels; 1 to 8 are allowed");
-	refuse(wave_file(WAVE_PCM, 1, 20000000, 16, samples, sizeof(samples)), -EINVAL, "20000000 Hz; 1 to 10000000");
-	refuse(wave_file(WAVE_PCM, 1, 48000, 16, samples, 0), -EINVAL, "not a single frame");
+	refuse(wave_file(WAVE_PCM, 9, 48000, 16, samples, sizeof(samples)), -EILSEQ, "has 9 channels; 1 to 8 are allowed");
+	refuse(wave_file(WAVE_PCM, 1, 20000000, 16, samples, sizeof(samples)), -EILSEQ, "20000000 Hz; 1 to 10000000");
+	refuse(wave_file(WAVE_PCM, 1, 48000, 16, samples, 0), -EILSEQ, "not a single frame");
 	assert_int_equal(mkfifo(probe_path(&probe, "fifo"), 0600), 0);
 	refuse(probe_path(&probe, "fifo"), -EINVAL, "need the pipe intake");
 }
@@ -369,7 +369,7 @@ static void a_cut_file_gives_what_is_there_and_counts_the_rest(void **state)
 		probe_reset(&probe);
 		probe_text(&probe, "path", probe_file(&probe, "cut.wav", draft.bytes, size));
 		if (whole == 0) {
-			assert_int_equal(probe_open(&probe), -EINVAL);
+			assert_int_equal(probe_open(&probe), -EILSEQ);
 			assert_true(strlen(probe.said) > 10);
 			continue;
 		}
@@ -431,7 +431,7 @@ static void a_header_never_completed_promises_nothing(void **state)
 	assert_int_equal(probe.frames, 500);
 	assert_string_equal(probe.explanation, "");
 	memcpy(draft.bytes + 40, &none, 4);
-	refuse(probe_file(&probe, "open.wav", draft.bytes, draft.size), -EINVAL, "header was never completed");
+	refuse(probe_file(&probe, "open.wav", draft.bytes, draft.size), -EILSEQ, "header was never completed");
 }
 
 static void a_failing_disk_is_told_from_the_end(void **state)

@@ -60,12 +60,12 @@ static void describe(char sentence[SENTENCE], const char *front, const struct se
 static void sample_row(const struct page *page, const char *indent, const struct setting *row, bool active)
 {
 	char prefix[16], sentence[SENTENCE], value[CHECK_TEXT];
-	const char *shown = row->required ? NULL : check_fallback_text(value, row);
+	const char *shown = row->required || row->shown ? NULL : check_fallback_text(value, row);
 
 	describe(sentence, row->meaning, row, false);
 	snprintf(prefix, sizeof(prefix), "%s# ", indent);
 	put_wrapped(page, prefix, sentence);
-	fprintf(page->out, "%s%s%s%s = %s;\n", page->margin, indent, active && row->required ? "" : "# ", row->name,
+	fprintf(page->out, "%s%s%s%s = %s;\n", page->margin, indent, active && (row->required || row->shown) ? "" : "# ", row->name,
 		shown ? shown : check_example_text(value, row));
 }
 

@@ -34,7 +34,8 @@ const struct setting channel_settings[] = {
 		.meaning = "normal: more light, higher voltage; a pulse's leading edge rises; auto: normal for a "
 			"detector, found out for a pulse" },
 	[CHANNEL_WAVELENGTH] = { "wavelength_nm", SETTING_NUMBER, 0, 100, 20000,
-		.meaning = "effective wavelength of an optical detector (follows the star's colour)", .example = "620" },
+		.meaning = "effective wavelength of an optical detector (follows the star's colour); each detector "
+			"needs this or frequency_mhz", .example = "620", .shown = true },
 	[CHANNEL_PASSBAND] = { "passband_nm", SETTING_NUMBER, 0, 0, 5000,
 		.meaning = "width of the optical passband (full width of a top hat, FWHM of a Gaussian)" },
 	[CHANNEL_FREQUENCY] = { "frequency_mhz", SETTING_NUMBER, 0, 1, 1e6,

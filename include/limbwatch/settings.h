@@ -30,6 +30,7 @@ struct setting {
 	bool required;
 	const char *meaning;            /* one clause, with what an unusual value means */
 	const char *example;            /* as it would stand in the file; NULL: the fallback */
+	bool shown;                     /* not required, but stands active in the sample with its example */
 	const char *was;                /* an earlier name that is still understood, with a warning; or NULL */
 };
 
