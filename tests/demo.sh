@@ -9,7 +9,7 @@ mkdir -p "$folder"
 echo
 echo "== 1. An invented evening through the real recorder"
 echo
-"$build/limbwatch" rehearse --folder "$folder"
+"$build/limbwatch" rehearse --snr 50 --folder "$folder"
 
 segment=$(ls "$folder"/*.wav)
 cat > "$folder/replay.conf" <<END
