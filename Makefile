@@ -44,24 +44,26 @@ tests      := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/test_*.c))
 benches    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/bench/bench_*.c))
 fuzzers    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/fuzz/fuzz_*.c))
 
+# V=1 shows the commands.
+say = $(if $(V),,@printf '  %-6s %s\n' $(1) $(2);)
+
 all: $(programs)
 
 $(BUILD)/%.o: %.c
 	@mkdir -p $(@D)
-	$(CC) $(CPPFLAGS) $(pkg_cflags) $(CFLAGS) -c -o $@ $<
+	$(call say,CC,$<)$(CC) $(CPPFLAGS) $(pkg_cflags) $(CFLAGS) -c -o $@ $<
 
 $(library): $(lib_obj)
-	rm -f $@
-	$(AR) rcs $@ $^
+	$(call say,AR,$@)rm -f $@ && $(AR) rcs $@ $^
 
 $(BUILD)/limbwatchd $(BUILD)/limbwatch: $(BUILD)/%: $(BUILD)/daemon/%.o $(library)
-	$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
+	$(call say,LD,$@)$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
 
 $(tests): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
-	$(CC) $(LDFLAGS) -o $@ $^ -lcmocka $(pkg_libs) -lm
+	$(call say,LD,$@)$(CC) $(LDFLAGS) -o $@ $^ -lcmocka $(pkg_libs) -lm
 
 $(benches) $(fuzzers): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
-	$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
+	$(call say,LD,$@)$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
 
 tests: all $(tests) $(fuzzers)
 

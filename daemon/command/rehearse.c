@@ -294,10 +294,10 @@ static const char *interval(char text[32], double s)
 {
 	double size = fabs(s);
 
-	if (size < 1e-3)
+	if (size < 1e-4)
 		snprintf(text, 32, "%.1f \xc2\xb5s", s * 1e6);
 	else if (size < 1)
-		snprintf(text, 32, "%.3f ms", s * 1e3);
+		snprintf(text, 32, "%.2f ms", s * 1e3);
 	else
 		snprintf(text, 32, "%.3f s", s);
 	return text;

@@ -83,9 +83,9 @@ void report_json(FILE *out, const struct config *config, const struct contact *c
 /* An uncertainty with two figures in the unit that suits it. */
 static const char *spread(char text[32], double sigma)
 {
-	if (sigma < 1e-3)
+	if (sigma < 1e-4)
 		snprintf(text, 32, "%.2g \xc2\xb5s", sigma * 1e6);
-	else if (sigma < 1)
+	else if (sigma < 0.1)
 		snprintf(text, 32, "%.2g ms", sigma * 1e3);
 	else
 		snprintf(text, 32, "%.2g s", sigma);
