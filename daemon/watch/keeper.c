@@ -99,7 +99,7 @@ static int create_segment(struct work *w, struct piece *piece, uint64_t first)
 {
 	const struct keeper *keeper = w->keeper;
 	const struct plan *plan = w->plan;
-	double seconds = ((double)first - (double)plan->from) / keeper->intake->rate;
+	double seconds = ((double)first - (double)plan->start_frame) / keeper->intake->rate;
 	struct segment_header header = {
 		.folder = keeper->config->keep.folder, .name = piece->name,
 		.format = keeper->intake->format, .rate = keeper->intake->rate,

@@ -251,7 +251,7 @@ static void handle_gap(struct listener *l, const struct ring_news *news)
 	if (news->lost > news->overrun)
 		frame_clock_add_gap(l->clock, (double)news->first, gap_sigma_s * l->rate);
 	if ((double)news->lost > fill_s * l->rate)
-		plans_break(l, l->next_frame);
+		plans_break(l, l->next_frame, news->first);
 }
 
 static void hear(struct listener *l, size_t count, const struct ring_news *news)

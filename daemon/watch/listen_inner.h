@@ -44,6 +44,7 @@ struct listener {
 	uint64_t startup;               /* frames the lanes hold back at the beginning */
 	size_t sightings;
 	struct sighting sighting[SIGHTINGS];
+	uint64_t resumed;               /* first frame after the last break */
 	size_t plans;                   /* not final yet, oldest first */
 	struct plan *plan[16];
 	uint64_t clipped;               /* of lanes already gone */
@@ -73,7 +74,7 @@ void sightings_update(struct listener *l, bool ending);
 void plans_keep(struct listener *l, uint64_t from, uint64_t to, enum segment_reason reason, const char *what);
 /** Closes plans whose frames and settling time have passed. */
 void plans_update(struct listener *l, bool ending);
-/** After a gap too long to fill: every plan ends at `frame`. */
-void plans_break(struct listener *l, uint64_t frame);
+/** After a gap too long to fill: every plan ends at `frame`; what is still wanted begins anew at `resumed`. */
+void plans_break(struct listener *l, uint64_t frame, uint64_t resumed);
 
 #endif

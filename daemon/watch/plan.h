@@ -17,7 +17,8 @@ struct plan {
 	unsigned version;               /* of the sidecar, grows */
 	char name[SIDECAR_TEXT];
 	char description[256];
-	struct tai start;               /* of frame `from`, when the plan was made */
+	uint64_t start_frame;           /* `from` when the plan was made */
+	struct tai start;               /* of that frame, as known then */
 	enum time_quality quality;
 	struct sidecar sidecar;
 	struct plan *next;

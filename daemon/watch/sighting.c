@@ -220,7 +220,7 @@ static struct plan *append_plan(struct listener *l, uint64_t from, uint64_t to, 
 		return NULL;
 	}
 	frame_clock_at(l->clock, (double)from, &reading);
-	plan->from = from;
+	plan->from = plan->start_frame = from;
 	plan->to = to;
 	plan->reason = reason;
 	plan->start = reading.when;
@@ -362,7 +362,7 @@ static void keep_everything(struct listener *l)
 {
 	uint64_t length = (uint64_t)(everything_s * l->rate);
 	struct plan *newest = l->plans ? l->plan[l->plans - 1] : NULL;
-	uint64_t from = newest ? newest->to : l->next_frame / length * length;
+	uint64_t from = newest ? newest->to : l->resumed;
 
 	if (!newest || l->next_frame >= newest->to)
 		append_plan(l, from, from + length, REASON_ALL, "");
@@ -381,10 +381,14 @@ void plans_update(struct listener *l, bool ending)
 			describe(l, l->plan[k], false);
 }
 
-void plans_break(struct listener *l, uint64_t frame)
+void plans_break(struct listener *l, uint64_t frame, uint64_t resumed)
 {
 	for (size_t k = 0; k < l->plans; k++)
 		plans_cut(l->settings.plans, l->plan[k], frame);
 	while (l->plans)
 		finish_oldest(l);
+	l->resumed = resumed;
+	for (size_t k = 0; !l->config->keep.everything && k < l->config->expecteds; k++)
+		if (l->vigil[k].state == VIGIL_OPEN && l->vigil[k].last > resumed)
+			plans_keep(l, resumed, l->vigil[k].last, REASON_VIGIL, l->config->expected[k].source);
 }

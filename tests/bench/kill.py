@@ -8,7 +8,7 @@ from concurrent.futures import ThreadPoolExecutor
 
 build, count, seed = sys.argv[1], int(sys.argv[2]), int(sys.argv[3])
 jobs = int(sys.argv[4]) if len(sys.argv) > 4 else 4
-rate = 8000
+rate, pace_s = 8000, 0.01
 configuration = """
 station = {{ name = "Brackenfold"; }};
 intake = {{ driver = "pipe"; path = "{path}"; rate_hz = %d; channels = 1; format = "S16"; start_utc = "2031-04-02T01:23:30Z"; }};
@@ -35,7 +35,7 @@ def one(case):
                     daemon.stdin.write(struct.pack("<%dh" % due, *((fed + k) % 30011 for k in range(due))))
                     daemon.stdin.flush()
                     fed += due
-                time.sleep(0.01)
+                time.sleep(pace_s)
         except BrokenPipeError:
             pass
         timer.join()

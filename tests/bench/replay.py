@@ -6,7 +6,7 @@ import numpy as np
 from scipy.signal import oaconvolve
 
 build, seconds = sys.argv[1], float(sys.argv[2]) if len(sys.argv) > 2 else 600.0
-core = {0}
+core, probe_s = {0}, 0.05
 channels = """channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );"""
 event = """driver = "synthetic"; seed = 3; duration_s = %g; start_utc = "2031-04-02T01:00:00.25Z"; start_sigma_s = 0.05;
@@ -54,7 +54,7 @@ with tempfile.TemporaryDirectory(prefix="limbwatch-bench-") as work:
                 peak = max(peak, int(re.search(r"^Pss:\s+(\d+)", text, re.M).group(1)) * 1024)
             except (OSError, AttributeError):
                 pass
-            time.sleep(0.05)
+            time.sleep(probe_s)
     print("replay, recording everything: %.0f x real time by the wall clock, %.0f x by processor time "
           "(one core, median of 3; %.0f s of 48 kHz stereo 24 bit with pulse)" % (seconds / wall, seconds / cpu, seconds))
     print("share of this core at real time: %.2f%%" % (100 * cpu / seconds))
