@@ -3,7 +3,7 @@
 # A paced feeder writes numbered frames into the recorder's standard input and counts them, so what should be on disk
 # is known independently of the recorder.  Prints one line; exit status 1 when anything is unreadable or more than
 # 1 s of what was fed is missing.
-import json, os, random, signal, struct, subprocess, sys, tempfile, threading, time, wave
+import array, fcntl, json, os, random, signal, struct, subprocess, sys, tempfile, termios, threading, time, wave
 from concurrent.futures import ThreadPoolExecutor
 
 build, count, seed = sys.argv[1], int(sys.argv[2]), int(sys.argv[3])
@@ -17,6 +17,18 @@ keep = {{ folder = "{folder}"; everything = true; free_mib = 0; }};
 """ % rate
 
 
+def frames(first, count):
+    return struct.pack("<%dh" % count, *((first + k) % 30011 for k in range(count)))
+
+
+def wait_until_read(pipe):
+    """The clock starts when the recorder takes its first frames: before that nothing is being recorded."""
+    waiting = array.array("i", [1])
+    while waiting[0]:
+        fcntl.ioctl(pipe, termios.FIONREAD, waiting)
+        time.sleep(pace_s)
+
+
 def one(case):
     rng = random.Random(seed * 100003 + case)
     after = 0.2 + 3.0 * rng.random()
@@ -26,13 +38,16 @@ def one(case):
         daemon = subprocess.Popen([build + "/limbwatchd", "--quiet", "--config", config], stdin=subprocess.PIPE,
                                   stdout=subprocess.DEVNULL, stderr=subprocess.PIPE)
         timer = threading.Timer(after, daemon.send_signal, (signal.SIGKILL,))
-        start, fed = time.monotonic(), 0
+        daemon.stdin.write(frames(0, 100))
+        daemon.stdin.flush()
+        wait_until_read(daemon.stdin)
+        start, fed = time.monotonic(), 100
         timer.start()
         try:
             while True:
-                due = int((time.monotonic() - start) * rate) - fed
+                due = int((time.monotonic() - start) * rate) + 100 - fed
                 if due > 0:
-                    daemon.stdin.write(struct.pack("<%dh" % due, *((fed + k) % 30011 for k in range(due))))
+                    daemon.stdin.write(frames(fed, due))
                     daemon.stdin.flush()
                     fed += due
                 time.sleep(pace_s)
