@@ -41,15 +41,23 @@ struct ring_reader {
 	uint64_t overrun;               /* since the last frames given */
 };
 
+size_t ring_round(size_t frames)
+{
+	size_t capacity = 4096;
+
+	while (capacity < frames)
+		capacity *= 2;
+	return capacity;
+}
+
 int ring_create(struct ring **out, size_t frame_bytes, size_t frames)
 {
 	struct ring *ring;
-	size_t capacity = 4096;
+	size_t capacity;
 
 	if (frame_bytes == 0 || frames > SIZE_MAX / 4 / frame_bytes)
 		return -EINVAL;
-	while (capacity < frames)
-		capacity *= 2;
+	capacity = ring_round(frames);
 	ring = calloc(1, sizeof(*ring));
 	if (!ring)
 		return -ENOMEM;

@@ -176,7 +176,8 @@ static double vigil_seconds(const struct config *c)
 static void say_keep(const struct config *c, const struct intake *in, const struct listener *l, FILE *out)
 {
 	double bytes = in->rate * (double)frame_bytes(in->format);
-	double ring = (double)listener_backlog(l) + c->keep.ring_s * in->rate;
+	double backlog = (double)listener_backlog(l);
+	double ring = (double)ring_round((size_t)(backlog + c->keep.ring_s * in->rate));
 
 	fprintf(out, "Recordings go to %s: %s. Everything would be %.3g GB a day; ", c->keep.folder,
 	        c->keep.everything ? "everything is kept" : "vigils whole, other contacts with their surroundings",
@@ -188,8 +189,8 @@ static void say_keep(const struct config *c, const struct intake *in, const stru
 		        bytes * vigil_seconds(c) / 1e9, bytes * (c->keep.pre_s + c->keep.post_s) / 1e6);
 	fprintf(out, "  Outside vigils %g s before and %g s after a contact; %lld MB stay free on the disk.\n",
 	        c->keep.pre_s, c->keep.post_s, (long long)(c->keep.free_bytes / 1000000));
-	fprintf(out, "  The ring holds %.0f s (%.1f MB of memory): the disk may stall %g s.\n", ring / in->rate,
-	        ring * (double)frame_bytes(in->format) / 1e6, c->keep.ring_s);
+	fprintf(out, "  The ring holds %.0f s (%.1f MB of memory): the disk may stall %.0f s.\n", ring / in->rate,
+	        ring * (double)frame_bytes(in->format) / 1e6, (ring - backlog) / in->rate);
 }
 
 static int describe(const struct config *c, struct intake *in, FILE *out)

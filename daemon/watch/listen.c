@@ -154,7 +154,8 @@ uint64_t listener_lookback(const struct listener *l)
 {
 	if (!l->config->watch.outside)
 		return CHUNK;
-	return l->hold + (uint64_t)(l->config->keep.pre_s * l->rate) + 2 * CHUNK;
+	/* The hold is more than 16 T_F of the slowest lane, which is wanted at the least: see announce(). */
+	return l->hold + (uint64_t)fmax(l->config->keep.pre_s * l->rate, (double)l->hold) + 2 * CHUNK;
 }
 
 /* A plan is final only when contacts at its very end have settled. */

@@ -92,7 +92,10 @@ static void announce(struct listener *l, struct contact *c)
 	           c->marked ? ", but the residuals are not clean" : "",
 	           c->expected >= 0 ? "" : ", not expected");
 	if (!config->keep.everything) {
-		double pre = c->frame - config->keep.pre_s * l->rate, post = c->frame + config->keep.post_s * l->rate;
+		/* However short pre_trigger_s and post_trigger_s are: a light curve needs its fringes. */
+		double fringes = 16 * c->fresnel_time_s;
+		double pre = c->frame - fmax(config->keep.pre_s, fringes) * l->rate;
+		double post = c->frame + fmax(config->keep.post_s, fringes) * l->rate;
 
 		plans_keep(l, pre > 0 ? (uint64_t)pre : 0, (uint64_t)ceil(post), REASON_TRIGGER, "");
 	}

@@ -15,10 +15,12 @@
 struct ring;
 struct ring_reader;
 
-/** Main thread.  `frames` is rounded up to a power of two of at least one page; memory is touched. Caller destroys. */
+/** Main thread.  `frames` is rounded up to a power of two, 4096 at least; memory is touched. Caller destroys. */
 int  ring_create(struct ring **out, size_t frame_bytes, size_t frames);
 void ring_destroy(struct ring *ring);           /* NULL is fine; after all readers are closed */
 size_t ring_capacity(const struct ring *ring);  /* frames */
+/** The capacity that ring_create() makes of a number of frames. */
+size_t ring_round(size_t frames);
 
 /** Producer.  Appends frames numbered first, first + 1 ...; first beyond the last number + 1 is a gap before them. No allocation, lock or system call. */
 void ring_write(struct ring *ring, const void *frames, size_t count, uint64_t first);
