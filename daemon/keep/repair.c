@@ -11,6 +11,7 @@
 #include <string.h>
 #include "limbwatch/log.h"
 #include "limbwatch/segment.h"
+#include "wave_mend.h"
 
 enum { HEADER_BYTES = 8192, PATH_BYTES = 4096, STATE_BYTES = 256 };
 
@@ -125,8 +126,7 @@ static int read_shape(const struct disk *disk, int fd, struct shape *out)
 	return -EILSEQ;
 }
 
-/* Cuts an incomplete frame off and writes the sizes. @return frames, or -errno */
-static int64_t mend(const struct disk *disk, int fd)
+int64_t wave_mend(const struct disk *disk, int fd)
 {
 	struct shape shape;
 	unsigned char word[4];
@@ -173,7 +173,7 @@ static int64_t mend_part(const struct disk *disk, const char *folder, const char
 	fd = disk->open(from, O_RDWR, 0);
 	if (fd < 0)
 		return fd;
-	frames = mend(disk, fd);
+	frames = wave_mend(disk, fd);
 	disk->close(fd);
 	if (frames == -EILSEQ || frames == 0) {
 		/* The header is synced before the first frame is written: without one, nothing was recorded. */

@@ -12,6 +12,7 @@
 #include <string.h>
 #include <time.h>
 #include "limbwatch/segment.h"
+#include "wave_mend.h"
 
 static const int64_t default_part_bytes = INT64_C(2147483648) - 4194304;        /* 2 GiB less a margin */
 static const int64_t allocate_bytes = 16 << 20;
@@ -29,6 +30,7 @@ struct segment {
 	/* The growing part. */
 	SNDFILE *file;
 	int fd, error;                  /* error: what the disk said inside libsndfile's call */
+	bool broken, mute;              /* a call failed: libsndfile's idea of the file is not to be trusted any more */
 	int64_t offset, size, data_begin, allocated, frames;
 	unsigned number;
 	size_t parts, parts_room, gaps, gaps_room;
@@ -47,10 +49,13 @@ static sf_count_t virtual_length(void *context)
 static sf_count_t virtual_seek(sf_count_t offset, int whence, void *context)
 {
 	struct segment *s = context;
-	int64_t to = whence == SEEK_SET ? offset : whence == SEEK_CUR ? s->offset + offset : s->size + offset;
-	int64_t ret = s->disk->seek(s->fd, to, SEEK_SET);
+	int64_t to = whence == SEEK_SET ? offset : whence == SEEK_CUR ? s->offset + offset : s->size + offset, ret;
 
+	if (s->mute)
+		return to;
+	ret = s->disk->seek(s->fd, to, SEEK_SET);
 	if (ret < 0) {
+		s->broken = true;
 		s->error = (int)ret;
 		return -1;
 	}
@@ -60,9 +65,10 @@ static sf_count_t virtual_seek(sf_count_t offset, int whence, void *context)
 static sf_count_t virtual_read(void *data, sf_count_t count, void *context)
 {
 	struct segment *s = context;
-	ssize_t ret = s->disk->read(s->fd, data, (size_t)count);
+	ssize_t ret = s->mute ? 0 : s->disk->read(s->fd, data, (size_t)count);
 
 	if (ret < 0) {
+		s->broken = true;
 		s->error = (int)ret;
 		return 0;
 	}
@@ -75,10 +81,14 @@ static sf_count_t virtual_write(const void *data, sf_count_t count, void *contex
 	struct segment *s = context;
 	sf_count_t done = 0;
 
+	/* After a seek that failed the bytes would land in the wrong place. */
+	if (s->mute || s->broken)
+		return s->mute ? count : 0;
 	while (done < count) {
 		ssize_t ret = s->disk->write(s->fd, (const char *)data + done, (size_t)(count - done));
 
 		if (ret <= 0) {
+			s->broken = true;
 			s->error = ret < 0 ? (int)ret : -ENOSPC;
 			break;
 		}
@@ -224,6 +234,7 @@ static int begin_part(struct segment *s)
 		return s->fd;
 	s->offset = s->size = s->allocated = s->frames = s->synced_frames = 0;
 	s->error = 0;
+	s->broken = false;
 	s->file = sf_open_virtual(&virtual_io, SFM_WRITE, &info, s);
 	if (!s->file) {
 		ret = s->error ? s->error : -EINVAL;
@@ -260,6 +271,26 @@ static int trim(struct segment *s)
 	return s->disk->seek(s->fd, good, SEEK_SET) < 0 ? -EIO : (s->offset = good, 0);
 }
 
+/* libsndfile writes the header for good; after a failure its sizes are put right without it. */
+static int finish_header(struct segment *s)
+{
+	int64_t frames;
+	int ret = trim(s);
+
+	s->error = 0;
+	s->mute = s->broken || ret < 0;
+	sf_close(s->file);
+	s->file = NULL;
+	if (!s->mute && !s->error)
+		return 0;
+	s->mute = false;
+	ret = trim(s);
+	if (ret < 0)
+		return ret;
+	frames = wave_mend(s->disk, s->fd);
+	return frames < 0 ? (int)frames : 0;
+}
+
 static int end_part(struct segment *s)
 {
 	char from[PATH_BYTES], to[PATH_BYTES];
@@ -267,12 +298,7 @@ static int end_part(struct segment *s)
 
 	if (!s->file)
 		return 0;
-	ret = trim(s);
-	s->error = 0;
-	sf_close(s->file);              /* writes the header for good */
-	s->file = NULL;
-	if (ret == 0)
-		ret = s->error;
+	ret = finish_header(s);
 	if (ret == 0)
 		ret = s->disk->datasync(s->fd);
 	more = s->disk->close(s->fd);
