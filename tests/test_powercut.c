@@ -18,6 +18,7 @@
 #include "support/memory_disk.h"
 
 enum { RATE = 1000, CHANNELS = 2, BLOCK = 97, TOTAL = 5200, GAP_AT = 2400, GAP = 130, PART_BYTES = 12000 };
+enum { GAP_FIRST = (GAP_AT + BLOCK - 1) / BLOCK * BLOCK };        /* blocks are whole */
 
 /* Frame n holds its number. */
 static void number_frames(int16_t *to, uint64_t first, size_t count)
@@ -129,10 +130,10 @@ static long read_back(const char *name, uint64_t first)
 	if (!file)
 		return -1;
 	while (sf_readf_short(file, got, 1) == 1) {
-		bool silent = got[0] == 0 && got[1] == 0;
-
 		number_frames(want, first + (uint64_t)n, 1);
-		if (!silent && memcmp(got, want, sizeof(got)))
+		if (first + (uint64_t)n >= GAP_FIRST && first + (uint64_t)n < GAP_FIRST + GAP)
+			memset(want, 0, sizeof(want));
+		if (memcmp(got, want, sizeof(got)))
 			n = -1000000;
 		n++;
 	}

@@ -88,11 +88,10 @@ void memory_disk_reboot(bool half)
 		/* What was appended may have reached the disk in part; what was overwritten has not. */
 		if (half && c->size > left) {
 			size_t more = (c->size - left) / 2;
-			unsigned char *to = duplicate(c->synced, left + more);
+			unsigned char *to = duplicate(c->now, left + more);
 
-			to = realloc(to, left + more + 1);
-			memcpy(to, c->synced ? c->synced : (unsigned char *)"", c->synced ? left : 0);
-			memcpy(to + left, c->now + left, more);
+			if (left)
+				memcpy(to, c->synced, left);
 			free(c->synced);
 			c->synced = to;
 			c->synced_size = left + more;
