@@ -321,31 +321,39 @@ int bank_whiten(struct bank *bank, const struct noise_model *noise)
 
 /* ------------------------------------------------------------------ the hot path */
 
-typedef float lanes __attribute__((vector_size(32)));
+typedef float lanes __attribute__((vector_size(16)));
+enum { LANES = 4, TOGETHER = 4 };       /* templates that share each load of the window; two accumulators each */
 
-static float dot(const float *a, const float *b)
+/* rho of TOGETHER templates, weights one after the other. */
+static void dots(const float *weights, const float *window, float *rho)
 {
-	lanes sum[4] = { { 0 } };
-	float total = 0;
+	lanes even[TOGETHER] = { { 0 } }, odd[TOGETHER] = { { 0 } };
 
-	for (int j = 0; j < N; j += 32)
-		for (int k = 0; k < 4; k++) {
-			lanes x, y;
+	for (int j = 0; j < N; j += 2 * LANES) {
+		lanes x0, x1, w0, w1;
 
-			memcpy(&x, a + j + 8 * k, sizeof(x));
-			memcpy(&y, b + j + 8 * k, sizeof(y));
-			sum[k] += x * y;
+		memcpy(&x0, window + j, sizeof(x0));
+		memcpy(&x1, window + j + LANES, sizeof(x1));
+#pragma GCC unroll 4
+		for (int k = 0; k < TOGETHER; k++) {
+			memcpy(&w0, weights + k * N + j, sizeof(w0));
+			memcpy(&w1, weights + k * N + j + LANES, sizeof(w1));
+			even[k] += x0 * w0;
+			odd[k] += x1 * w1;
 		}
-	sum[0] = (sum[0] + sum[1]) + (sum[2] + sum[3]);
-	for (int k = 0; k < 8; k++)
-		total += sum[0][k];
-	return total;
+	}
+#pragma GCC unroll 4
+	for (int k = 0; k < TOGETHER; k++) {
+		even[k] += odd[k];
+		rho[k] = (even[k][0] + even[k][1]) + (even[k][2] + even[k][3]);
+	}
 }
 
 void bank_execute(const struct bank *bank, const float *window, float *rho)
 {
-	for (size_t k = 0; k < bank->count; k++)
-		rho[k] = dot(bank->weights[k], window);
+	/* The templates of a kind, 16, are a multiple of TOGETHER. */
+	for (size_t k = 0; k < bank->count; k += TOGETHER)
+		dots(bank->weights[k], window, rho + k);
 }
 
 double bank_alarm_rate(const struct bank *bank, enum contact_kind kind, double u)
