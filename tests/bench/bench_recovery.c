@@ -16,7 +16,7 @@ enum { W = DETECTOR_WINDOW, LEAD = 12 * W, SPACING = 6 * W, CHUNK = 4096 };
 
 struct tally { size_t recovered, fringes, other; double squares, sigma, bound, pulls; size_t inside; };
 
-/* The source comes out and goes behind in turns, so that the level needs no repair between contacts. */
+/* Sources come out and go behind in turns, with the same scale and, by symmetry, the same flux: the level needs no repair. */
 static float *make_series(const struct detector_settings *settings, struct series_event *event, double *bound, size_t events,
                           double snr, size_t *length)
 {
@@ -31,19 +31,12 @@ static float *make_series(const struct detector_settings *settings, struct serie
 
 		event[k] = (struct series_event){
 			.kind = k % 2 ? CONTACT_IMMERSION : CONTACT_EMERSION, .flux = 1,
-			.scale = 0.8 * pow(1.25 / 0.8, gsl_rng_uniform(noise.rng)),
+			.scale = k % 2 ? event[k - 1].scale : 0.8 * pow(1.25 / 0.8, gsl_rng_uniform(noise.rng)),
 			.contact = (double)begin + SPACING * (0.4 + 0.2 * gsl_rng_uniform(noise.rng)),
 		};
 		event[k].flux = snr / series_unit_snr(settings, &event[k], &bound[k]);
 		bound[k] /= event[k].flux;
 		series_add_event(settings, &event[k], (double)begin, x + begin, SPACING);
-		/* What it leaves behind is levelled out: the next one has another flux. */
-		if (event[k].kind == CONTACT_EMERSION)
-			for (size_t j = begin + SPACING - 2 * W; j < begin + SPACING; j++)
-				x[j] -= (float)(event[k].flux * (1 - cos(M_PI * (double)(j - begin - SPACING + 2 * W) / (2 * W))) / 2);
-		else
-			for (size_t j = begin; j < begin + 2 * W; j++)
-				x[j] -= (float)(event[k].flux * (1 + cos(M_PI * (double)(j - begin) / (2 * W))) / 2);
 	}
 	series_noise(&noise, x, *length);
 	gsl_rng_free(noise.rng);
