@@ -283,17 +283,20 @@ static double ramp(double t, double length)
 
 static void sample_ramp(const struct bank *bank, enum contact_kind kind, double contact, double length, double s[N])
 {
-	double low_pass = bank->settings.curve.low_pass_s * bank->settings.rate, decay = 0, state;
+	double low_pass = bank->settings.curve.low_pass_s * bank->settings.rate, decay = 0, state, level;
+	double leak = 1 - exp(-2 * M_PI * bank->settings.curve.high_pass_hz / bank->settings.rate);
 
 	if (low_pass > 0)
 		decay = exp(-1 / low_pass);
-	length = fmax(length, 1);       /* the series' integrate-and-dump */
-	state = kind == CONTACT_EMERSION ? 0 : 1;
+	/* The series' integrate-and-dump, or the detector's longer one. */
+	length = fmax(length, fmax(1, bank->settings.curve.integration_s * bank->settings.rate));
+	state = level = kind == CONTACT_EMERSION ? 0 : 1;
 	for (int j = 0; j < N; j++) {
 		double t = j + 0.5 - contact, x = ramp(kind == CONTACT_EMERSION ? t : -t, length);
 
 		state = decay * state + (1 - decay) * x;
-		s[j] = state;
+		s[j] = state - level;           /* level: what an AC-coupled input has forgotten; 0 or constant without */
+		level += leak * (state - level);
 	}
 }
 
@@ -350,6 +353,7 @@ bool bank_fit(const struct bank *bank, const float *window, enum contact_kind ki
 	fill_grid(bank, kind, p, &grid);
 	if (!highest(bank, &grid, &start) || !refine(bank, window, kind, p, &start, out))
 		return false;
+	out->flank = abs(start.lag) == LAG_REACH;
 	use_moments(bank, kind, &grid, &start, out);
 	out->chi2 = bank_product(x, p) - out->rho * out->rho;
 	out->freedom = N - (double)bank->columns - 3;

@@ -65,6 +65,7 @@ struct bank_fit {
 	double chi2;                    /* x'Px - rho^2 */
 	double freedom;                 /* its degrees of freedom */
 	double fringe_gain;
+	bool   flank;                   /* best at the end of the lags looked at, 12 samples: the contact is elsewhere */
 };
 
 /** The fit grid, then Gauss-Newton over contact and scale.  Some 50 ms. @return false: no positive flux fits */
