@@ -138,6 +138,11 @@ int bank_create(struct bank **out, const struct detector_settings *settings)
 
 	if (!bank)
 		return -ENOMEM;
+	bank->norms = calloc(CONTACT_KINDS, sizeof(*bank->norms));
+	if (!bank->norms) {
+		free(bank);
+		return -ENOMEM;
+	}
 	gsl_set_error_handler_off();    /* results are looked at */
 	bank->settings = *settings;
 	bank->scale_min = settings->scale_min;
@@ -162,6 +167,7 @@ void bank_destroy(struct bank *bank)
 		return;
 	for (int kind = 0; kind < CONTACT_KINDS; kind++)
 		free(bank->fine[kind]);
+	free(bank->norms);
 	free(bank);
 }
 
@@ -336,6 +342,8 @@ int bank_whiten(struct bank *bank, const struct noise_model *noise)
 	memcpy(bank->projector, p, sizeof(bank->projector));
 	free(p);
 	bank->columns = columns;
+	for (int kind = 0; kind < CONTACT_KINDS; kind++)
+		bank->norms[kind].known = false;
 	weigh_templates(bank);
 	for (int kind = 0; kind < CONTACT_KINDS; kind++)
 		if (bank->fine[kind])
