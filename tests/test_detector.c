@@ -376,7 +376,7 @@ static void a_vigil_lowers_the_threshold_where_the_contact_is_expected(void **st
 
 static void false_alarms_are_as_many_as_set(void **state)
 {
-	enum { LENGTH = 1 << 20, PIECE = 1 << 14 };
+	enum { LENGTH = 1 << 19, PIECE = 1 << 14 };
 	struct detector_settings with = settings;
 	double expected = 100;
 

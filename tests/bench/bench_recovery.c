@@ -162,7 +162,7 @@ int main(int argc, char **argv)
 			recover(&settings, events, snr, vigil);
 	if (!(hours > 0))
 		return 0;
-	count_false_triggers(&settings, hours / 10, 2000);      /* the calibration, with numbers that count */
+	count_false_triggers(&settings, hours / 20, 2000);      /* the calibration, with numbers that count */
 	count_false_triggers(&settings, hours, settings.false_alarms_per_night);
 	return 0;
 }
