@@ -8,6 +8,7 @@
 #include <gsl/gsl_rng.h>
 #include <limits.h>
 #include <math.h>
+#include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
 #include <time.h>
@@ -88,7 +89,8 @@ static const struct setting settings[] = {
 	{ .name = NULL },
 };
 
-enum { BLOCK = 4096, EDGES = 16, STEP_HALF = 32, STEP_FINE = 256 };
+/* A block at the slowest rate with a pulse, MIN_PULSE_RATE, spans five seconds, with four edges each at worst. */
+enum { BLOCK = 4096, MIN_PULSE_RATE = 1000, EDGES = 64, STEP_HALF = 32, STEP_FINE = 256 };
 
 struct edge { double frame, height; };
 
@@ -111,7 +113,8 @@ struct synthetic {
 	size_t next_second, edges;
 	struct edge edge[EDGES];
 	/* Output. */
-	gsl_rng *rng, *pulse_rng;       /* apart, so that the noise does not depend on the pulse */
+	/* Apart, so that the noise does not depend on the pulse, nor the pulses on how the frames fall into blocks. */
+	gsl_rng *rng, *pulse_rng, *edge_rng;
 	uint64_t next, total;
 	bool pace;
 	int64_t started_ns;
@@ -354,8 +357,8 @@ static int set_pulse(struct synthetic *s, const struct setting_value *v)
 	s->pulse = v[PULSE].integer;
 	if (!s->pulse)
 		return 0;
-	if (s->rate < 1000) {
-		log_error("synthetic intake: rate_hz is %g; a pulse needs at least 1000", s->rate);
+	if (s->rate < MIN_PULSE_RATE) {
+		log_error("synthetic intake: rate_hz is %g; a pulse needs at least %d", s->rate, MIN_PULSE_RATE);
 		return -EINVAL;
 	}
 	s->pulse_idle = v[PULSE_POLARITY].integer ? v[PULSE_HEIGHT].number : 0;
@@ -382,6 +385,7 @@ static void synthetic_close(struct intake *intake)
 	free(s->second_frame);
 	gsl_rng_free(s->rng);
 	gsl_rng_free(s->pulse_rng);
+	gsl_rng_free(s->edge_rng);
 	free(s);
 }
 
@@ -416,11 +420,13 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 	s->seconds = card_seconds(v);
 	s->second_frame = make_card(v, s->seconds);
 	s->rng = gsl_rng_alloc(gsl_rng_taus2);
-	s->pulse_rng = gsl_rng_alloc(gsl_rng_mt19937);
-	if (!s->second_frame || !s->rng || !s->pulse_rng)
+	s->pulse_rng = gsl_rng_alloc(gsl_rng_taus2);
+	s->edge_rng = gsl_rng_alloc(gsl_rng_mt19937);
+	if (!s->second_frame || !s->rng || !s->pulse_rng || !s->edge_rng)
 		goto close;
 	gsl_rng_set(s->rng, (unsigned long)v[SEED].integer + 1);
-	gsl_rng_set(s->pulse_rng, (unsigned long)v[SEED].integer ^ 0xb0a7u);
+	gsl_rng_set(s->pulse_rng, ((unsigned long)v[SEED].integer ^ 0x71c5u) + 1);
+	gsl_rng_set(s->edge_rng, (unsigned long)v[SEED].integer ^ 0xb0a7u);
 	tai_parse_utc(&s->start, v[START].text);
 	ret = set_detector(s, v);
 	if (ret == 0)
@@ -510,26 +516,31 @@ static void put_edge(struct synthetic *s, double t, double height)
 		s->edge[s->edges++] = (struct edge){ frame_at(s->second_frame, s->seconds, t), height };
 }
 
-/* Edges of all pulses that begin before `frame`. */
+/* Edges of all pulses that may begin before `frame`, however early their jitter makes them. */
 static void make_edges(struct synthetic *s, double frame)
 {
 	double fraction = (double)(s->start.ns % 1000000000) * 1e-9;
 
-	for (;; s->next_second++) {
+	frame += 8 * s->pulse_jitter * s->rate;
+	for (; s->next_second + 1 < s->seconds; s->next_second++) {
 		double t = (double)s->next_second - fraction;   /* a whole second; the first may lie before the start */
-		double late = gsl_ran_gaussian(s->pulse_rng, s->pulse_jitter);
+		double late, missing, spurious, at, width;
 
-		if (s->next_second + 1 >= s->seconds || frame_at(s->second_frame, s->seconds, t) > frame)
+		if (frame_at(s->second_frame, s->seconds, t) > frame)
 			return;
-		if (gsl_rng_uniform(s->pulse_rng) >= s->pulse_missing) {
-			put_edge(s, t + late, s->pulse_height);
-			put_edge(s, t + late + s->pulse_width, -s->pulse_height);
+		/* All are drawn each second: a setting changes no other pulse. */
+		late = t + gsl_ran_gaussian(s->edge_rng, s->pulse_jitter);
+		missing = gsl_rng_uniform(s->edge_rng);
+		spurious = gsl_rng_uniform(s->edge_rng);
+		at = t + 0.3 + 0.4 * gsl_rng_uniform(s->edge_rng);
+		width = 0.001 + 0.1 * gsl_rng_uniform(s->edge_rng);
+		if (missing >= s->pulse_missing) {
+			put_edge(s, late, s->pulse_height);
+			put_edge(s, late + s->pulse_width, -s->pulse_height);
 		}
-		if (gsl_rng_uniform(s->pulse_rng) < s->pulse_spurious) {
-			double at = t + 0.3 + 0.4 * gsl_rng_uniform(s->pulse_rng);
-
+		if (spurious < s->pulse_spurious) {
 			put_edge(s, at, s->pulse_height);
-			put_edge(s, at + 0.001 + 0.1 * gsl_rng_uniform(s->pulse_rng), -s->pulse_height);
+			put_edge(s, at + width, -s->pulse_height);
 		}
 	}
 }
@@ -547,16 +558,27 @@ static void retire_edges(struct synthetic *s, double frame)
 	s->edges = kept;
 }
 
+/* Adds an edge to the `count` frames from s->next on. */
+static void add_edge(struct synthetic *s, const struct edge *edge, size_t count)
+{
+	double from = edge->frame - STEP_HALF - (double)s->next;
+	size_t k = from < 0 ? 0 : from < (double)count ? (size_t)from : count;
+
+	for (; k < count; k++)
+		s->ticks[k] += edge->height * step((double)(s->next + k) - edge->frame);
+}
+
 static void make_ticks(struct synthetic *s, size_t count)
 {
 	make_edges(s, (double)(s->next + count) + STEP_HALF);
 	retire_edges(s, (double)s->next);
+	for (size_t k = 0; k < count; k++)
+		s->ticks[k] = s->settled;
+	for (size_t e = 0; e < s->edges; e++)
+		add_edge(s, &s->edge[e], count);
 	for (size_t k = 0; k < count; k++) {
-		double n = (double)(s->next + k), x = s->settled;
+		double x = s->ticks[k];
 
-		for (size_t e = 0; e < s->edges; e++)
-			if (n > s->edge[e].frame - STEP_HALF)
-				x += s->edge[e].height * step(n - s->edge[e].frame);
 		if (s->pulse_ac > 0) {
 			s->pulse_slow = s->pulse_pole * s->pulse_slow + (1 - s->pulse_pole) * x;
 			x -= s->pulse_slow;

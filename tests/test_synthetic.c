@@ -217,6 +217,30 @@ static void pulses_stand_on_the_true_seconds_of_a_wrong_card(void **state)
 	free(column[1]);
 }
 
+/* Pulses last 0.1 s from a whole second on, spurious ones lie 0.3 to 0.801 s after it: then the line must be idle. */
+static void many_pulses_in_one_block_all_end(void **state)
+{
+	double *column[2];
+	size_t n;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 1000);
+	set("duration_s", 60);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_spurious", 1);
+	n = play(column);
+	for (size_t second = 0; second + 1 < n / 1000; second++) {
+		const double *x = column[1] + 1000 * second + 750;      /* a whole second */
+
+		assert_true(fabs(x[50] - 0.5) < 1e-3);
+		assert_true(fabs(x[200]) < 1e-3 && fabs(x[900]) < 1e-3);
+	}
+	free(column[0]);
+	free(column[1]);
+}
+
 static void a_seed_gives_the_same_night_again_and_another_another(void **state)
 {
 	double *a[2], *b[2], *c[2];
@@ -248,6 +272,7 @@ int main(void)
 		cmocka_unit_test_setup(the_noise_has_the_rms_asked_for, reset),
 		cmocka_unit_test_setup(snr_sets_the_noise_of_the_ideal_filter, reset),
 		cmocka_unit_test_setup(pulses_stand_on_the_true_seconds_of_a_wrong_card, reset),
+		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
 		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
 	};
 
