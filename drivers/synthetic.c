@@ -102,8 +102,8 @@ struct synthetic {
 	size_t seconds;
 	double *second_frame;
 	/* The detector. */
-	struct curve *curve;            /* NULL: no contact */
-	double contact, covered, level, background, noise, red, red_pole, twinkle, drift, hum, hum_rate;
+	struct curve *curve;            /* NULL: no contact, the source stays */
+	double contact, level, background, noise, red, red_pole, red_kick, twinkle, drift, hum, hum_rate;
 	double high_pass, high_pass_pole;
 	double red_state, twinkle_state, slow;  /* slow: low-passed signal of the AC coupling */
 	/* The pulse. */
@@ -118,7 +118,7 @@ struct synthetic {
 	uint64_t next, total;
 	bool pace;
 	int64_t started_ns;
-	double detector[BLOCK], ticks[BLOCK];
+	double when[BLOCK], detector[BLOCK], ticks[BLOCK];      /* when: true time, seconds after the start */
 	unsigned char frames[BLOCK * 2 * 4];
 };
 
@@ -259,9 +259,13 @@ static double *make_card(const struct setting_value *v, size_t seconds)
 	return frame;
 }
 
+/* True seconds that hold all frames, however slow the card. */
 static size_t card_seconds(const struct setting_value *v)
 {
-	return (size_t)(v[DURATION].number * 1.002) + 3;
+	double hours = v[DURATION].number / 3600, wander = v[CLOCK_WANDER].number * sqrt(hours);
+	double ppm = fabs(v[CLOCK_ERROR].number) + fabs(v[CLOCK_DRIFT].number) * hours + 6 * wander;
+
+	return (size_t)(v[DURATION].number * (1 + 1.1e-6 * ppm)) + 3;
 }
 
 static double frame_at(const double *second_frame, size_t seconds, double t)
@@ -331,21 +335,23 @@ static int set_detector(struct synthetic *s, const struct setting_value *v)
 	curve_destroy(curve);
 	s->noise = noise_for(v, strength);
 	s->contact = v[CONTACT].number;
-	s->covered = v[KIND].integer == 1 ? 0 : 1;      /* before an emersion it is covered */
 	s->level = v[LEVEL].number;
 	s->background = v[BACKGROUND].number;
 	s->red = v[RED_NOISE].number;
 	s->twinkle = v[SCINTILLATION].number;
 	s->red_pole = pole(v[RED_CORNER].number, s->rate);
+	s->red_kick = sqrt(1 - s->red_pole * s->red_pole);
+	if (s->red > 0)
+		s->red_state = gsl_ran_gaussian_ziggurat(s->rng, 1);
+	if (s->twinkle > 0)
+		s->twinkle_state = gsl_ran_gaussian_ziggurat(s->rng, 1);
 	s->drift = v[GAIN_DRIFT].number / 3600;
 	s->hum = v[HUM].number * M_SQRT2;
 	s->hum_rate = 2 * M_PI * v[HUM_FREQUENCY].number;
 	s->high_pass = v[HIGH_PASS].number;
 	s->high_pass_pole = pole(s->high_pass, s->rate);
-	if (v[KIND].integer == 2) {
-		s->covered = 1;
+	if (v[KIND].integer == 2)
 		return 0;
-	}
 	/* The card's AC coupling acts on everything, sample by sample; so the curve itself goes without. */
 	memcpy(event, v, sizeof(settings) / sizeof(*settings) * sizeof(*v));
 	event[HIGH_PASS].number = 0;
@@ -415,7 +421,7 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 	if (!s)
 		return -ENOMEM;
 	s->rate = v[RATE].number;
-	s->total = (uint64_t)(v[DURATION].number * s->rate);
+	s->total = (uint64_t)llround(v[DURATION].number * s->rate);
 	s->pace = v[PACE].integer;
 	s->seconds = card_seconds(v);
 	s->second_frame = make_card(v, s->seconds);
@@ -433,12 +439,39 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 		ret = set_pulse(s, v);
 	if (ret < 0)
 		goto close;
+	ret = -EINVAL;
+	if (s->total == 0) {
+		log_error("synthetic intake: duration_s %g is too short for one frame at rate_hz %g", v[DURATION].number, s->rate);
+		goto close;
+	}
 	set_intake(s, v);
 	*out = &s->intake;
 	return 0;
 close:
 	synthetic_close(&s->intake);
 	return ret;
+}
+
+/* The true second after the start in which frame n is taken. */
+static size_t second_of(const struct synthetic *s, double n)
+{
+	size_t k = (size_t)(n / s->rate);
+
+	if (k >= s->seconds)
+		k = s->seconds - 1;
+	while (k > 0 && s->second_frame[k] > n)
+		k--;
+	while (k + 1 < s->seconds && s->second_frame[k + 1] <= n)
+		k++;
+	return k;
+}
+
+/* True time of frame n, seconds after the start. */
+static double time_of(const struct synthetic *s, double n)
+{
+	size_t k = second_of(s, n);
+
+	return (double)k + (n - s->second_frame[k]) / (s->second_frame[k + 1] - s->second_frame[k]);
 }
 
 static int64_t monotonic_ns(void)
@@ -449,9 +482,17 @@ static int64_t monotonic_ns(void)
 	return now.tv_sec * INT64_C(1000000000) + now.tv_nsec;
 }
 
+/* When the card has taken `frame` frames, from the start: by true time, so that host stamps and pulses agree. */
+static int64_t due_ns(const struct synthetic *s, uint64_t frame)
+{
+	return (int64_t)(time_of(s, (double)frame) * 1e9);
+}
+
 static int synthetic_start(struct intake *intake)
 {
-	((struct synthetic *)intake)->started_ns = monotonic_ns();
+	struct synthetic *s = (struct synthetic *)intake;
+
+	s->started_ns = monotonic_ns() - due_ns(s, s->next);    /* started again it goes on where it was */
 	return 0;
 }
 
@@ -463,39 +504,46 @@ static int synthetic_stop(struct intake *intake)
 
 /* ------------------------------------------------------------------ samples */
 
-/* True time of frame n, seconds after the start. */
-static double time_of(const struct synthetic *s, double n)
+/* The first frame's value of red noise is drawn like any other's: the night began before the recording. */
+static double red_step(struct synthetic *s, double *state)
 {
-	size_t k = (size_t)(n / s->rate);
-
-	while (k > 0 && s->second_frame[k] > n)
-		k--;
-	while (k + 1 < s->seconds && s->second_frame[k + 1] <= n)
-		k++;
-	return (double)k + (n - s->second_frame[k]) / (s->second_frame[k + 1] - s->second_frame[k]);
+	*state = s->red_pole * *state + s->red_kick * gsl_ran_gaussian_ziggurat(s->rng, 1);
+	return *state;
 }
 
-static double red_step(gsl_rng *rng, double *state, double pole_, double rms)
+/* Source and true time of the frames from s->next on, second by second: within one the card's rate is constant. */
+static void make_source(struct synthetic *s, size_t count)
 {
-	*state = pole_ * *state + sqrt(1 - pole_ * pole_) * gsl_ran_gaussian_ziggurat(rng, 1);
-	return rms * *state;
+	for (size_t done = 0, n; done < count; done += n) {
+		double first = (double)(s->next + done);
+		size_t k = second_of(s, first);
+		double begin = s->second_frame[k], end = s->second_frame[k + 1], dt = 1 / (end - begin);
+		double t = (double)k + (first - begin) * dt;
+
+		n = count - done;
+		if (k + 1 < s->seconds && ceil(end - first) < (double)n)
+			n = (size_t)ceil(end - first);
+		if (s->curve)
+			curve_sample(s->curve, t - s->contact, dt, n, s->detector + done);
+		for (size_t j = done; j < done + n; j++) {
+			s->when[j] = t + dt * (double)(j - done);
+			if (!s->curve)
+				s->detector[j] = 1;
+		}
+	}
 }
 
 static void make_detector(struct synthetic *s, size_t count)
 {
-	double t0 = time_of(s, (double)s->next), t1 = time_of(s, (double)(s->next + count));
-	double dt = (t1 - t0) / (double)count;
-
-	if (s->curve)
-		curve_sample(s->curve, t0 - s->contact, dt, count, s->detector);
+	make_source(s, count);
 	for (size_t k = 0; k < count; k++) {
-		double t = t0 + dt * (double)k, source = s->level * (s->curve ? s->detector[k] : s->covered), x;
+		double t = s->when[k], source = s->level * s->detector[k], x;
 
 		if (s->twinkle > 0)
-			source *= fmax(0, 1 + red_step(s->rng, &s->twinkle_state, s->red_pole, s->twinkle));
+			source *= fmax(0, 1 + s->twinkle * red_step(s, &s->twinkle_state));
 		x = (s->background + source) * (1 + s->drift * t);
 		if (s->red > 0)
-			x += red_step(s->rng, &s->red_state, s->red_pole, s->red);
+			x += s->red * red_step(s, &s->red_state);
 		if (s->hum > 0)
 			x += s->hum * sin(s->hum_rate * t);
 		if (s->noise > 0)
@@ -587,15 +635,15 @@ static void make_ticks(struct synthetic *s, size_t count)
 	}
 }
 
-/* A live device's pace: waits until the block has been "taken". @return false: not within timeout_ms */
+/* A live device's pace: waits until the frames before `frame` have been "taken". @return false: not within timeout_ms */
 static bool wait_for(const struct synthetic *s, uint64_t frame, int timeout_ms)
 {
-	int64_t due = s->started_ns + (int64_t)((double)frame / s->rate * 1e9), now = monotonic_ns();
-	int64_t wait = due - now < timeout_ms * INT64_C(1000000) ? due - now : timeout_ms * INT64_C(1000000);
+	int64_t due = s->started_ns + due_ns(s, frame), latest = monotonic_ns() + timeout_ms * INT64_C(1000000);
+	int64_t until = due < latest ? due : latest;
+	struct timespec moment = { until / 1000000000, until % 1000000000 };
 
-	if (wait > 0)
-		nanosleep(&(struct timespec){ wait / 1000000000, wait % 1000000000 }, NULL);
-	return wait == due - now || wait <= 0;
+	clock_nanosleep(CLOCK_MONOTONIC, TIMER_ABSTIME, &moment, NULL);
+	return monotonic_ns() >= due;
 }
 
 static int synthetic_read(struct intake *intake, struct block *block, int timeout_ms)
@@ -616,7 +664,7 @@ static int synthetic_read(struct intake *intake, struct block *block, int timeou
 	}
 	*block = (struct block){
 		.frames = s->frames, .count = count, .first = s->next,
-		.host_ns = s->pace ? s->started_ns + (int64_t)((double)s->next / s->rate * 1e9) : INT64_MIN,
+		.host_ns = s->pace ? s->started_ns + due_ns(s, s->next) : INT64_MIN,
 	};
 	s->next += count;
 	return 1;

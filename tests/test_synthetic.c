@@ -85,6 +85,29 @@ static void the_event_is_the_edge_pattern_at_the_true_time(void **state)
 	free(column[0]);
 }
 
+/* f = t + d t^2 / 2 for a clock whose rate drifts by d a second: a logger's frames follow it all night. */
+static void a_slow_logger_follows_the_drift_of_its_clock(void **state)
+{
+	double *column[2], scale = fresnel_scale(0.3, 378e6), drift = 100e-6 / 3600;
+	size_t n;
+
+	(void)state;
+	set("rate_hz", 1);
+	set("duration_s", 6000);
+	set("contact_s", 5000);
+	set("frequency_mhz", 999.30819333333333);       /* 0.3 m */
+	set("noise_rms", 0);
+	set("clock_drift_ppm_per_hour", 100);
+	n = play(column);
+	assert_int_equal(n, 6000);
+	for (size_t k = 0; k < n; k++) {
+		double f = (double)k, t = 2 * f / (1 + sqrt(1 + 2 * drift * f)), w = -600 * (t - 5000) / scale;
+
+		assert_true(fabs(column[0][k] - (0.1 + 0.2 * edge_intensity(w))) < 1e-6);
+	}
+	free(column[0]);
+}
+
 static void the_truth_names_the_frame_of_the_contact(void **state)
 {
 	struct synthetic_truth truth;
@@ -133,6 +156,41 @@ static void the_noise_has_the_rms_asked_for(void **state)
 	/* Standard errors: rms / sqrt(n) = 4.6e-5 and rms / sqrt(2 n) = 3.3e-5; five of them. */
 	assert_true(fabs(mean - 0.3) < 2.3e-4);
 	assert_true(fabs(rms_about(column[0], n, mean) - 0.013) < 1.6e-4);
+	free(column[0]);
+}
+
+/* Ornstein and Uhlenbeck: stationary from the first frame on, correlation exp(-2 pi f_c t). */
+static void red_noise_has_its_rms_from_the_first_frame_on(void **state)
+{
+	enum { SEEDS = 200, LAG = 25 };         /* 25 frames at 8 kHz: 1 / (2 pi 50.93 Hz) */
+	double *column[2], squares = 0, sum = 0, rms;
+	size_t n;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 8000);
+	set("noise_rms", 0);
+	set("red_noise_rms", 0.02);
+	set("red_corner_hz", 0.001);
+	set("duration_s", 0.1);
+	for (int seed = 1; seed <= SEEDS; seed++) {
+		set("seed", seed);
+		play(column);
+		squares += (column[0][0] - 0.3) * (column[0][0] - 0.3);
+		free(column[0]);
+	}
+	/* Standard error of an rms 1 / sqrt(2 SEEDS) = 5%; four of them. */
+	assert_true(fabs(sqrt(squares / SEEDS) / 0.02 - 1) < 0.2);
+
+	set("red_corner_hz", 8000 / (2 * M_PI * LAG));
+	set("duration_s", 30);
+	n = play(column);
+	rms = rms_about(column[0], n, 0.3);
+	for (size_t k = LAG; k < n; k++)
+		sum += (column[0][k] - 0.3) * (column[0][k - LAG] - 0.3);
+	/* 30 s hold 9600 correlation times: 1% of the rms, 1.5% of the correlation; four of them. */
+	assert_true(fabs(rms / 0.02 - 1) < 0.04);
+	assert_true(fabs(sum / (double)n / (rms * rms) - exp(-1)) < 0.06);
 	free(column[0]);
 }
 
@@ -268,8 +326,10 @@ int main(void)
 {
 	const struct CMUnitTest tests[] = {
 		cmocka_unit_test_setup(the_event_is_the_edge_pattern_at_the_true_time, reset),
+		cmocka_unit_test_setup(a_slow_logger_follows_the_drift_of_its_clock, reset),
 		cmocka_unit_test_setup(the_truth_names_the_frame_of_the_contact, reset),
 		cmocka_unit_test_setup(the_noise_has_the_rms_asked_for, reset),
+		cmocka_unit_test_setup(red_noise_has_its_rms_from_the_first_frame_on, reset),
 		cmocka_unit_test_setup(snr_sets_the_noise_of_the_ideal_filter, reset),
 		cmocka_unit_test_setup(pulses_stand_on_the_true_seconds_of_a_wrong_card, reset),
 		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
