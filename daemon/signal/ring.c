@@ -93,39 +93,71 @@ static word load_word(const struct ring *ring, size_t k)
 	return atomic_load_explicit(&ring->data[k], memory_order_acquire);
 }
 
+static void store_word(struct ring *ring, size_t k, word w)
+{
+	atomic_store_explicit(&ring->data[k], w, memory_order_release);
+}
+
+/* Bytes of word k from `skip` on, `n` of them: the ends of a stretch. */
+static void part_out(const struct ring *ring, unsigned char *to, size_t k, size_t skip, size_t n)
+{
+	word w = load_word(ring, k);
+
+	memcpy(to, (unsigned char *)&w + skip, n);
+}
+
+static void part_in(struct ring *ring, const unsigned char *from, size_t k, size_t skip, size_t n)
+{
+	word w = load_word(ring, k);
+
+	memcpy((unsigned char *)&w + skip, from, n);
+	store_word(ring, k, w);
+}
+
+/* Bytes up to the next whole word, of `n` from `offset` on. */
+static size_t until_word(size_t offset, size_t n)
+{
+	size_t head = -offset % sizeof(word);
+
+	return head < n ? head : n;
+}
+
 /* Bytes [offset, offset + n) of the ring's memory, which do not wrap. */
 static void copy_out(const struct ring *ring, unsigned char *to, size_t offset, size_t n)
 {
-	size_t k = offset / sizeof(word), skip = offset % sizeof(word);
-	word w;
+	size_t k = offset / sizeof(word), head = until_word(offset, n);
 
-	for (; n; k++, skip = 0) {
-		size_t part = sizeof(word) - skip < n ? sizeof(word) - skip : n;
-
-		w = load_word(ring, k);
-		if (part == sizeof(word))
-			memcpy(to, &w, sizeof(word));
-		else
-			memcpy(to, (unsigned char *)&w + skip, part);
-		to += part;
-		n -= part;
+	if (head) {
+		part_out(ring, to, k++, offset % sizeof(word), head);
+		to += head;
+		n -= head;
 	}
+	for (; n >= sizeof(word); n -= sizeof(word), to += sizeof(word)) {
+		word w = load_word(ring, k++);
+
+		memcpy(to, &w, sizeof(word));
+	}
+	if (n)
+		part_out(ring, to, k, 0, n);
 }
 
 static void copy_in(struct ring *ring, const unsigned char *from, size_t offset, size_t n)
 {
-	size_t k = offset / sizeof(word), skip = offset % sizeof(word);
-	word w;
+	size_t k = offset / sizeof(word), head = until_word(offset, n);
 
-	for (; n; k++, skip = 0) {
-		size_t part = sizeof(word) - skip < n ? sizeof(word) - skip : n;
-
-		w = part == sizeof(word) ? 0 : load_word(ring, k);
-		memcpy((unsigned char *)&w + skip, from, part);
-		atomic_store_explicit(&ring->data[k], w, memory_order_release);
-		from += part;
-		n -= part;
+	if (head) {
+		part_in(ring, from, k++, offset % sizeof(word), head);
+		from += head;
+		n -= head;
 	}
+	for (; n >= sizeof(word); n -= sizeof(word), from += sizeof(word)) {
+		word w;
+
+		memcpy(&w, from, sizeof(word));
+		store_word(ring, k++, w);
+	}
+	if (n)
+		part_in(ring, from, k, 0, n);
 }
 
 /* Where a stretch of `count` frames from `position` wraps: frames up to the end of the memory. */
