@@ -85,6 +85,32 @@ static void the_event_is_the_edge_pattern_at_the_true_time(void **state)
 	free(column[0]);
 }
 
+/* The card's recursive filter against the analytical response of the optics. */
+static void ac_coupling_gives_the_curve_the_optics_expect(void **state)
+{
+	struct curve_parameters parameters;
+	struct curve *curve;
+	double *column[2];
+	size_t n;
+
+	(void)state;
+	set("duration_s", 6);
+	set("contact_s", 3.0001);
+	set("noise_rms", 0);
+	set("high_pass_hz", 2);
+	n = play(column);
+	synthetic_curve(values, &parameters);
+	assert_int_equal(curve_create(&curve, &parameters), 0);
+	/*
+	 * After a second: the filter begins settled on the first frame, the fringes of 3 s before are not.  A sample holds its
+	 * value for half a sample before and after: measured 2.0e-5 of full scale, where the curve is steepest.
+	 */
+	for (size_t k = 48000; k < n; k++)
+		assert_true(fabs(column[0][k] - 0.2 * curve_value(curve, (double)k / 48000 - 3.0001)) < 4e-5);
+	curve_destroy(curve);
+	free(column[0]);
+}
+
 /* f = t + d t^2 / 2 for a clock whose rate drifts by d a second: a logger's frames follow it all night. */
 static void a_slow_logger_follows_the_drift_of_its_clock(void **state)
 {
@@ -275,6 +301,61 @@ static void pulses_stand_on_the_true_seconds_of_a_wrong_card(void **state)
 	free(column[1]);
 }
 
+/* 2000 pulses at 1000 Hz, a fifth of them missing: numbers against the binomial and normal distributions they are drawn from. */
+static void pulses_jitter_and_go_missing_as_often_as_asked(void **state)
+{
+	double *column[2], squares = 0;
+	size_t n, found = 0;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 1000);
+	set("duration_s", 2000);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_jitter_s", 0.002);
+	set("pulse_missing", 0.2);
+	n = play(column);
+	for (size_t k = 50; k + 50 < n; k++) {
+		double late;
+
+		if (!(column[1][k] < 0.25 && column[1][k + 1] >= 0.25))
+			continue;
+		late = (half_height(column[1], k, 0.25) - 750) / 1000;
+		late -= round(late);
+		squares += late * late;
+		found++;
+	}
+	/* Standard errors: sqrt(2000 0.2 0.8) = 18 pulses; 1 / sqrt(2 found) = 1.8% of the rms; four of each. */
+	assert_true(fabs((double)found - 1600) < 72);
+	assert_true(fabs(sqrt(squares / (double)found) / 0.002 - 1) < 0.072);
+	free(column[0]);
+	free(column[1]);
+}
+
+/* A step through an RC high-pass falls as exp(-2 pi f t), and comes back from below after the pulse (any circuit handbook). */
+static void an_ac_coupled_pulse_sags(void **state)
+{
+	double *column[2], sag = exp(-2 * M_PI * 5 * 0.05), end = exp(-2 * M_PI * 5 * 0.1);
+	const double *x;
+
+	(void)state;
+	set("kind", 2);
+	set("duration_s", 3);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_jitter_s", 0);
+	set("pulse_ac_hz", 5);
+	play(column);
+	x = column[1] + 48000 * 7 / 4;          /* a whole second */
+	/* A sample is the least that "just then" can mean: 2 pi 5 Hz / 48 kHz = 0.07%. */
+	assert_true(fabs(x[2400] - 0.5 * sag) < 4e-4);
+	assert_true(fabs(x[4800 + 2400] - 0.5 * (end - 1) * sag) < 4e-4);
+	assert_true(fabs(x[40000]) < 4e-4);
+	free(column[0]);
+	free(column[1]);
+}
+
 /* Pulses last 0.1 s from a whole second on, spurious ones lie 0.3 to 0.801 s after it: then the line must be idle. */
 static void many_pulses_in_one_block_all_end(void **state)
 {
@@ -326,12 +407,15 @@ int main(void)
 {
 	const struct CMUnitTest tests[] = {
 		cmocka_unit_test_setup(the_event_is_the_edge_pattern_at_the_true_time, reset),
+		cmocka_unit_test_setup(ac_coupling_gives_the_curve_the_optics_expect, reset),
 		cmocka_unit_test_setup(a_slow_logger_follows_the_drift_of_its_clock, reset),
 		cmocka_unit_test_setup(the_truth_names_the_frame_of_the_contact, reset),
 		cmocka_unit_test_setup(the_noise_has_the_rms_asked_for, reset),
 		cmocka_unit_test_setup(red_noise_has_its_rms_from_the_first_frame_on, reset),
 		cmocka_unit_test_setup(snr_sets_the_noise_of_the_ideal_filter, reset),
 		cmocka_unit_test_setup(pulses_stand_on_the_true_seconds_of_a_wrong_card, reset),
+		cmocka_unit_test_setup(pulses_jitter_and_go_missing_as_often_as_asked, reset),
+		cmocka_unit_test_setup(an_ac_coupled_pulse_sags, reset),
 		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
 		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
 	};
