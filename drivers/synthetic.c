@@ -14,6 +14,8 @@
 #include <time.h>
 #include "limbwatch/log.h"
 #include "limbwatch/synthetic.h"
+#include "synthetic_card.h"
+#include "synthetic_pulse.h"
 
 #define MAS (M_PI / 180 / 3600e3)
 
@@ -89,74 +91,27 @@ static const struct setting settings[] = {
 	{ .name = NULL },
 };
 
-/* A block at the slowest rate with a pulse, MIN_PULSE_RATE, spans five seconds, with four edges each at worst. */
-enum { BLOCK = 4096, MIN_PULSE_RATE = 1000, EDGES = 64, STEP_HALF = 32, STEP_FINE = 256 };
-
-struct edge { double frame, height; };
+enum { BLOCK = 4096 };
 
 struct synthetic {
 	struct intake intake;
 	double rate;
 	struct tai start;
-	/* The card: frame number at whole true seconds after the start. */
-	size_t seconds;
-	double *second_frame;
+	struct synthetic_card card;
+	struct synthetic_pulse *pulse;  /* NULL: no second column */
 	/* The detector. */
 	struct curve *curve;            /* NULL: no contact, the source stays */
 	double contact, level, background, noise, red, red_pole, red_kick, twinkle, drift, hum, hum_rate;
 	double high_pass, high_pass_pole;
 	double red_state, twinkle_state, slow;  /* slow: low-passed signal of the AC coupling */
-	/* The pulse. */
-	bool pulse;
-	double pulse_height, pulse_idle, pulse_width, pulse_jitter, pulse_missing, pulse_spurious, pulse_noise;
-	double pulse_ac, pulse_pole, pulse_slow, settled;
-	size_t next_second, edges;
-	struct edge edge[EDGES];
 	/* Output. */
-	/* Apart, so that the noise does not depend on the pulse, nor the pulses on how the frames fall into blocks. */
-	gsl_rng *rng, *pulse_rng, *edge_rng;
+	gsl_rng *rng;
 	uint64_t next, total;
 	bool pace;
 	int64_t started_ns;
 	double when[BLOCK], detector[BLOCK], ticks[BLOCK];      /* when: true time, seconds after the start */
 	unsigned char frames[BLOCK * 2 * 4];
 };
-
-/* Band-limited step, 0 to 1 about u = 0: the integral of a Blackman-windowed sinc, symmetric, so that its half height is
- * the edge to the last digit.  Tabulated at 1/STEP_FINE sample, linear between. */
-static double step_table[2 * STEP_HALF * STEP_FINE + 1];
-
-static void make_step_table(void)
-{
-	enum { HALF = STEP_HALF * STEP_FINE };
-	double sum = 0, before = 0;
-
-	if (step_table[2 * HALF] != 0)
-		return;
-	for (int k = -HALF; k <= HALF; k++) {
-		double u = (double)k / STEP_FINE, phase = M_PI * u / STEP_HALF;
-		double window = 0.42 + 0.5 * cos(phase) + 0.08 * cos(2 * phase);
-		double sinc = k ? sin(0.9 * M_PI * u) / (0.9 * M_PI * u) : 1;      /* a card passes 0.45 of its rate */
-
-		sum += 0.5 * (before + window * sinc);
-		before = window * sinc;
-		step_table[k + HALF] = sum;
-	}
-	for (int k = 0; k <= 2 * HALF; k++)
-		step_table[k] /= sum;
-}
-
-static double step(double u)
-{
-	double x = (u + STEP_HALF) * STEP_FINE;
-	int k = (int)x;
-
-	if (u <= -STEP_HALF)
-		return 0;
-	if (u >= STEP_HALF)
-		return 1;
-	return step_table[k] + (x - k) * (step_table[k + 1] - step_table[k]);
-}
 
 /* ------------------------------------------------------------------ the event */
 
@@ -237,55 +192,26 @@ static double noise_for(const struct setting_value *v, double strength)
 
 /* ------------------------------------------------------------------ the card's clock */
 
-static double *make_card(const struct setting_value *v, size_t seconds)
+static int make_card(struct synthetic_card *out, const struct setting_value *v)
 {
-	double *frame = malloc((seconds + 1) * sizeof(*frame)), wander = 0;
-	gsl_rng *rng = gsl_rng_alloc(gsl_rng_mt19937);
+	const struct synthetic_card_settings card = {
+		.rate = v[RATE].number, .duration_s = v[DURATION].number,
+		.error_ppm = v[CLOCK_ERROR].number, .drift_ppm_per_hour = v[CLOCK_DRIFT].number,
+		.wander_ppm = v[CLOCK_WANDER].number, .seed = (unsigned long)v[SEED].integer ^ 0x5ca1ab1eu,
+	};
 
-	if (!frame || !rng) {
-		free(frame);
-		gsl_rng_free(rng);
-		return NULL;
-	}
-	gsl_rng_set(rng, (unsigned long)v[SEED].integer ^ 0x5ca1ab1eu);
-	frame[0] = 0;
-	for (size_t s = 0; s < seconds; s++) {
-		double ppm = v[CLOCK_ERROR].number + v[CLOCK_DRIFT].number * ((double)s + 0.5) / 3600 + wander;
-
-		wander += gsl_ran_gaussian(rng, v[CLOCK_WANDER].number / 60);
-		frame[s + 1] = frame[s] + v[RATE].number * (1 + ppm * 1e-6);
-	}
-	gsl_rng_free(rng);
-	return frame;
-}
-
-/* True seconds that hold all frames, however slow the card. */
-static size_t card_seconds(const struct setting_value *v)
-{
-	double hours = v[DURATION].number / 3600, wander = v[CLOCK_WANDER].number * sqrt(hours);
-	double ppm = fabs(v[CLOCK_ERROR].number) + fabs(v[CLOCK_DRIFT].number) * hours + 6 * wander;
-
-	return (size_t)(v[DURATION].number * (1 + 1.1e-6 * ppm)) + 3;
-}
-
-static double frame_at(const double *second_frame, size_t seconds, double t)
-{
-	size_t s = t <= 0 ? 0 : (size_t)t;
-
-	if (s >= seconds)
-		s = seconds - 1;
-	return second_frame[s] + (t - (double)s) * (second_frame[s + 1] - second_frame[s]);
+	return synthetic_card_init(out, &card);
 }
 
 double synthetic_frame(const struct setting_value *v, double t)
 {
-	size_t seconds = card_seconds(v);
-	double *card = make_card(v, seconds), frame;
+	struct synthetic_card card;
+	double frame;
 
-	if (!card)
+	if (make_card(&card, v) < 0)
 		return NAN;
-	frame = frame_at(card, seconds, t);
-	free(card);
+	frame = synthetic_card_frame(&card, t);
+	synthetic_card_release(&card);
 	return frame;
 }
 
@@ -360,25 +286,22 @@ static int set_detector(struct synthetic *s, const struct setting_value *v)
 
 static int set_pulse(struct synthetic *s, const struct setting_value *v)
 {
-	s->pulse = v[PULSE].integer;
-	if (!s->pulse)
+	const struct synthetic_pulse_settings pulse = {
+		.fraction_s = (double)(s->start.ns % 1000000000) * 1e-9,
+		.height = v[PULSE_POLARITY].integer ? -v[PULSE_HEIGHT].number : v[PULSE_HEIGHT].number,
+		.width_s = v[PULSE_WIDTH].number, .ac_hz = v[PULSE_AC].number,
+		.jitter_s = v[PULSE_JITTER].number, .noise_rms = v[PULSE_NOISE].number,
+		.missing = v[PULSE_MISSING].number, .spurious = v[PULSE_SPURIOUS].number,
+		.seed = (unsigned long)v[SEED].integer,
+	};
+
+	if (!v[PULSE].integer)
 		return 0;
-	if (s->rate < MIN_PULSE_RATE) {
-		log_error("synthetic intake: rate_hz is %g; a pulse needs at least %d", s->rate, MIN_PULSE_RATE);
+	if (s->rate < SYNTHETIC_PULSE_RATE) {
+		log_error("synthetic intake: rate_hz is %g; a pulse needs at least %d", s->rate, SYNTHETIC_PULSE_RATE);
 		return -EINVAL;
 	}
-	s->pulse_idle = v[PULSE_POLARITY].integer ? v[PULSE_HEIGHT].number : 0;
-	s->pulse_height = v[PULSE_POLARITY].integer ? -v[PULSE_HEIGHT].number : v[PULSE_HEIGHT].number;
-	s->pulse_width = v[PULSE_WIDTH].number;
-	s->pulse_jitter = v[PULSE_JITTER].number;
-	s->pulse_missing = v[PULSE_MISSING].number;
-	s->pulse_spurious = v[PULSE_SPURIOUS].number;
-	s->pulse_noise = v[PULSE_NOISE].number;
-	s->pulse_ac = v[PULSE_AC].number;
-	s->pulse_pole = pole(s->pulse_ac, s->rate);
-	s->pulse_slow = s->settled = s->pulse_idle;
-	make_step_table();
-	return 0;
+	return synthetic_pulse_create(&s->pulse, &s->card, &pulse);
 }
 
 static void synthetic_close(struct intake *intake)
@@ -388,10 +311,9 @@ static void synthetic_close(struct intake *intake)
 	if (!s)
 		return;
 	curve_destroy(s->curve);
-	free(s->second_frame);
+	synthetic_card_release(&s->card);
+	synthetic_pulse_destroy(s->pulse);
 	gsl_rng_free(s->rng);
-	gsl_rng_free(s->pulse_rng);
-	gsl_rng_free(s->edge_rng);
 	free(s);
 }
 
@@ -423,16 +345,10 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 	s->rate = v[RATE].number;
 	s->total = (uint64_t)llround(v[DURATION].number * s->rate);
 	s->pace = v[PACE].integer;
-	s->seconds = card_seconds(v);
-	s->second_frame = make_card(v, s->seconds);
 	s->rng = gsl_rng_alloc(gsl_rng_taus2);
-	s->pulse_rng = gsl_rng_alloc(gsl_rng_taus2);
-	s->edge_rng = gsl_rng_alloc(gsl_rng_mt19937);
-	if (!s->second_frame || !s->rng || !s->pulse_rng || !s->edge_rng)
+	if (!s->rng || make_card(&s->card, v) < 0)
 		goto close;
 	gsl_rng_set(s->rng, (unsigned long)v[SEED].integer + 1);
-	gsl_rng_set(s->pulse_rng, ((unsigned long)v[SEED].integer ^ 0x71c5u) + 1);
-	gsl_rng_set(s->edge_rng, (unsigned long)v[SEED].integer ^ 0xb0a7u);
 	tai_parse_utc(&s->start, v[START].text);
 	ret = set_detector(s, v);
 	if (ret == 0)
@@ -452,28 +368,6 @@ close:
 	return ret;
 }
 
-/* The true second after the start in which frame n is taken. */
-static size_t second_of(const struct synthetic *s, double n)
-{
-	size_t k = (size_t)(n / s->rate);
-
-	if (k >= s->seconds)
-		k = s->seconds - 1;
-	while (k > 0 && s->second_frame[k] > n)
-		k--;
-	while (k + 1 < s->seconds && s->second_frame[k + 1] <= n)
-		k++;
-	return k;
-}
-
-/* True time of frame n, seconds after the start. */
-static double time_of(const struct synthetic *s, double n)
-{
-	size_t k = second_of(s, n);
-
-	return (double)k + (n - s->second_frame[k]) / (s->second_frame[k + 1] - s->second_frame[k]);
-}
-
 static int64_t monotonic_ns(void)
 {
 	struct timespec now;
@@ -485,7 +379,7 @@ static int64_t monotonic_ns(void)
 /* When the card has taken `frame` frames, from the start: by true time, so that host stamps and pulses agree. */
 static int64_t due_ns(const struct synthetic *s, uint64_t frame)
 {
-	return (int64_t)(time_of(s, (double)frame) * 1e9);
+	return (int64_t)(synthetic_card_time(&s->card, (double)frame) * 1e9);
 }
 
 static int synthetic_start(struct intake *intake)
@@ -516,12 +410,12 @@ static void make_source(struct synthetic *s, size_t count)
 {
 	for (size_t done = 0, n; done < count; done += n) {
 		double first = (double)(s->next + done);
-		size_t k = second_of(s, first);
-		double begin = s->second_frame[k], end = s->second_frame[k + 1], dt = 1 / (end - begin);
+		size_t k = synthetic_card_second(&s->card, first);
+		double begin = s->card.second_frame[k], end = s->card.second_frame[k + 1], dt = 1 / (end - begin);
 		double t = (double)k + (first - begin) * dt;
 
 		n = count - done;
-		if (k + 1 < s->seconds && ceil(end - first) < (double)n)
+		if (k + 1 < s->card.seconds && ceil(end - first) < (double)n)
 			n = (size_t)ceil(end - first);
 		if (s->curve)
 			curve_sample(s->curve, t - s->contact, dt, n, s->detector + done);
@@ -558,83 +452,6 @@ static void make_detector(struct synthetic *s, size_t count)
 	}
 }
 
-static void put_edge(struct synthetic *s, double t, double height)
-{
-	if (s->edges < EDGES)
-		s->edge[s->edges++] = (struct edge){ frame_at(s->second_frame, s->seconds, t), height };
-}
-
-/* Edges of all pulses that may begin before `frame`, however early their jitter makes them. */
-static void make_edges(struct synthetic *s, double frame)
-{
-	double fraction = (double)(s->start.ns % 1000000000) * 1e-9;
-
-	frame += 8 * s->pulse_jitter * s->rate;
-	for (; s->next_second + 1 < s->seconds; s->next_second++) {
-		double t = (double)s->next_second - fraction;   /* a whole second; the first may lie before the start */
-		double late, missing, spurious, at, width;
-
-		if (frame_at(s->second_frame, s->seconds, t) > frame)
-			return;
-		/* All are drawn each second: a setting changes no other pulse. */
-		late = t + gsl_ran_gaussian(s->edge_rng, s->pulse_jitter);
-		missing = gsl_rng_uniform(s->edge_rng);
-		spurious = gsl_rng_uniform(s->edge_rng);
-		at = t + 0.3 + 0.4 * gsl_rng_uniform(s->edge_rng);
-		width = 0.001 + 0.1 * gsl_rng_uniform(s->edge_rng);
-		if (missing >= s->pulse_missing) {
-			put_edge(s, late, s->pulse_height);
-			put_edge(s, late + s->pulse_width, -s->pulse_height);
-		}
-		if (spurious < s->pulse_spurious) {
-			put_edge(s, at, s->pulse_height);
-			put_edge(s, at + width, -s->pulse_height);
-		}
-	}
-}
-
-static void retire_edges(struct synthetic *s, double frame)
-{
-	size_t kept = 0;
-
-	for (size_t k = 0; k < s->edges; k++) {
-		if (s->edge[k].frame + STEP_HALF < frame)
-			s->settled += s->edge[k].height;
-		else
-			s->edge[kept++] = s->edge[k];
-	}
-	s->edges = kept;
-}
-
-/* Adds an edge to the `count` frames from s->next on. */
-static void add_edge(struct synthetic *s, const struct edge *edge, size_t count)
-{
-	double from = edge->frame - STEP_HALF - (double)s->next;
-	size_t k = from < 0 ? 0 : from < (double)count ? (size_t)from : count;
-
-	for (; k < count; k++)
-		s->ticks[k] += edge->height * step((double)(s->next + k) - edge->frame);
-}
-
-static void make_ticks(struct synthetic *s, size_t count)
-{
-	make_edges(s, (double)(s->next + count) + STEP_HALF);
-	retire_edges(s, (double)s->next);
-	for (size_t k = 0; k < count; k++)
-		s->ticks[k] = s->settled;
-	for (size_t e = 0; e < s->edges; e++)
-		add_edge(s, &s->edge[e], count);
-	for (size_t k = 0; k < count; k++) {
-		double x = s->ticks[k];
-
-		if (s->pulse_ac > 0) {
-			s->pulse_slow = s->pulse_pole * s->pulse_slow + (1 - s->pulse_pole) * x;
-			x -= s->pulse_slow;
-		}
-		s->ticks[k] = x + gsl_ran_gaussian_ziggurat(s->pulse_rng, s->pulse_noise);
-	}
-}
-
 /* A live device's pace: waits until the frames before `frame` have been "taken". @return false: not within timeout_ms */
 static bool wait_for(const struct synthetic *s, uint64_t frame, int timeout_ms)
 {
@@ -659,7 +476,7 @@ static int synthetic_read(struct intake *intake, struct block *block, int timeou
 	make_detector(s, count);
 	frames_from_double(s->frames, intake->format, 0, s->detector, count);
 	if (s->pulse) {
-		make_ticks(s, count);
+		synthetic_pulse_execute(s->pulse, s->next, s->ticks, count);
 		frames_from_double(s->frames, intake->format, 1, s->ticks, count);
 	}
 	*block = (struct block){
