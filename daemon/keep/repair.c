@@ -53,7 +53,7 @@ static int by_name(const void *a, const void *b)
 
 /* ------------------------------------------------------------------ one WAV file */
 
-struct shape { int64_t size, data_begin; uint32_t block; };
+struct shape { int64_t size, data_begin, fact; uint32_t block; };      /* fact: where its frames stand, 0: no such chunk */
 
 static uint32_t read_u32(const unsigned char *p)
 {
@@ -103,6 +103,7 @@ static int read_shape(const struct disk *disk, int fd, struct shape *out)
 	int64_t size = disk->seek(fd, 0, SEEK_END);
 	int n;
 	size_t at = 12;
+	int64_t fact = 0;
 	uint32_t block = 0;
 
 	if (size < 0)
@@ -116,33 +117,45 @@ static int read_shape(const struct disk *disk, int fd, struct shape *out)
 		uint32_t length = read_u32(h + at + 4);
 
 		if (!memcmp(h + at, "data", 4) && block) {
-			*out = (struct shape){ .size = size, .data_begin = (int64_t)at + 8, .block = block };
+			*out = (struct shape){ .size = size, .data_begin = (int64_t)at + 8, .fact = fact, .block = block };
 			return 0;
 		}
 		if (!memcmp(h + at, "fmt ", 4) && at + 24 <= (size_t)n)
 			block = (uint32_t)(h[at + 20] | h[at + 21] << 8);
+		if (!memcmp(h + at, "fact", 4))
+			fact = (int64_t)at + 8;
 		at += 8 + (size_t)length + (length & 1);
 	}
 	return -EILSEQ;
 }
 
+static int write_u32_at(const struct disk *disk, int fd, int64_t offset, int64_t x)
+{
+	unsigned char word[4];
+
+	write_u32(word, (uint32_t)x);
+	return write_at(disk, fd, offset, word, sizeof(word));
+}
+
 int64_t wave_mend(const struct disk *disk, int fd)
 {
 	struct shape shape;
-	unsigned char word[4];
-	int64_t bytes;
+	int64_t bytes, end;
 	int ret = read_shape(disk, fd, &shape);
 
 	if (ret < 0)
 		return ret;
 	bytes = (shape.size - shape.data_begin) / shape.block * shape.block;
+	end = shape.data_begin + bytes + (bytes & 1);   /* a chunk of odd size is followed by a zero */
 	ret = disk->truncate(fd, shape.data_begin + bytes);
-	write_u32(word, (uint32_t)(shape.data_begin + bytes - 8));
+	if (ret == 0 && bytes & 1)
+		ret = disk->truncate(fd, end);
 	if (ret == 0)
-		ret = write_at(disk, fd, 4, word, 4);
-	write_u32(word, (uint32_t)bytes);
+		ret = write_u32_at(disk, fd, 4, end - 8);
+	if (ret == 0 && shape.fact)
+		ret = write_u32_at(disk, fd, shape.fact, bytes / shape.block);
 	if (ret == 0)
-		ret = write_at(disk, fd, shape.data_begin - 4, word, 4);
+		ret = write_u32_at(disk, fd, shape.data_begin - 4, bytes);
 	if (ret == 0)
 		ret = disk->datasync(fd);
 	return ret < 0 ? ret : bytes / shape.block;

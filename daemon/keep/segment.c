@@ -240,6 +240,8 @@ static int begin_part(struct segment *s)
 		ret = s->error ? s->error : -EINVAL;
 		goto close_file;
 	}
+	/* libsndfile does not look at what is written raw: its peaks of a FLOAT file would be wrong. */
+	sf_command(s->file, SFC_SET_ADD_PEAK_CHUNK, NULL, SF_FALSE);
 	set_bext(s, s->position);
 	ret = sync_part(s);
 	if (ret == 0)
@@ -421,22 +423,26 @@ static int write_frames(struct segment *s, const unsigned char *frames, size_t c
 	return ret;
 }
 
+/* The gap noted is as long as the zeros that stand in the file, also when the disk refuses some of them. */
 static int write_gap(struct segment *s, uint64_t lost, double sigma_frames)
 {
 	static const unsigned char zeros[PACK_FRAMES * MAX_CHANNELS * 4];
 	void *grown = grow(s->gap, s->gaps, &s->gaps_room, sizeof(*s->gap));
+	uint64_t first = s->position;
 	int ret = 0;
 
 	if (!grown)
 		return -ENOMEM;
 	s->gap = grown;
-	s->gap[s->gaps++] = (struct sidecar_gap){ .first = s->position, .frames = lost, .sigma_frames = sigma_frames };
 	while (ret == 0 && lost) {
 		size_t n = lost < PACK_FRAMES ? (size_t)lost : PACK_FRAMES;
 
 		ret = write_frames(s, zeros, n);
 		lost -= n;
 	}
+	if (s->position > first)
+		s->gap[s->gaps++] = (struct sidecar_gap){ .first = first, .frames = s->position - first,
+			.sigma_frames = sigma_frames };
 	return ret;
 }
 

@@ -113,6 +113,12 @@ static json_t *object(struct reader *r, json_t *o, const char *name)
 	return m;
 }
 
+/* For sentences: the members that follow are inside this object. */
+static void within(struct reader *r, const char *where)
+{
+	snprintf(r->at, sizeof(r->at), "%s", where);
+}
+
 static struct tai instant(struct reader *r, json_t *o)
 {
 	return (struct tai){ integer(r, o, "tai_ns", -9.2e18, 9.2e18) };
@@ -210,7 +216,7 @@ static void read_pulse(struct reader *r, json_t *o, void *out)
 
 	if (json_unpack(o, "[F,o,b,o!]", &frame, &second, &accepted, &rest) < 0 || !(fabs(frame) <= largest_count) ||
 	    !(json_is_null(second) || json_is_integer(second)) || !(json_is_null(rest) || json_is_number(rest)) ||
-	    (json_is_integer(second) && llabs(json_integer_value(second)) > 9200000000LL)) {
+	    (json_is_integer(second) && !(fabs((double)json_integer_value(second)) <= 9.2e9))) {
 		refuse(r, "", "is not a pulse: [frame, second, accepted, residual]");
 		return;
 	}
@@ -253,7 +259,10 @@ static void read_contact(struct reader *r, json_t *o, void *out)
 static void read_reading(struct reader *r, json_t *clock, const char *name, struct clock_reading *out)
 {
 	json_t *o = object(r, clock, name);
+	char where[32];
 
+	snprintf(where, sizeof(where), "clock.%s.", name);
+	within(r, where);
 	out->when = instant(r, o);
 	out->sigma_s = number(r, o, "sigma_s", 0, 1e12, true);
 	out->quality = (enum time_quality)word(r, o, "time_quality", quality_words);
@@ -262,6 +271,7 @@ static void read_reading(struct reader *r, json_t *clock, const char *name, stru
 	out->terms.interpolation = number(r, o, "interpolation_s", 0, 1e12, true);
 	out->terms.delay = number(r, o, "delay_s", 0, 1e12, true);
 	out->terms.label = number(r, o, "label_s", 0, 1e12, true);
+	within(r, "clock.");
 }
 
 /* ------------------------------------------------------------------ the whole */
@@ -272,15 +282,18 @@ static void read_head(struct reader *r, json_t *root, struct sidecar *s)
 
 	s->state = (enum segment_state)word(r, root, "state", state_words);
 	text(r, root, "version", s->version, sizeof(s->version));
+	within(r, "station.");
 	text(r, station, "name", s->station, sizeof(s->station));
 	s->latitude_deg = number(r, station, "latitude_deg", -90, 90, true);
 	s->longitude_deg = number(r, station, "longitude_deg", -360, 360, true);
 	s->height_m = number(r, station, "height_m", -1e4, 1e5, true);
+	within(r, "intake.");
 	text(r, intake, "driver", s->driver, sizeof(s->driver));
 	text(r, intake, "device", s->device, sizeof(s->device));
 	s->frames.type = (enum sample_type)word(r, intake, "sample", sample_words);
 	s->frames.channels = (unsigned)integer(r, intake, "channels", 1, MAX_CHANNELS);
 	s->rate = number(r, intake, "rate_hz", 1e-3, 1e9, false);
+	within(r, "");
 	s->reason = (enum segment_reason)word(r, root, "reason", reason_words);
 	s->first = (uint64_t)integer(r, root, "first_frame", 0, largest_count);
 	s->clipped = (uint64_t)integer(r, root, "clipped_samples", 0, largest_count);
@@ -303,9 +316,11 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 	s->expected = array(r, root, "expected", 1000, sizeof(*s->expected), &s->expecteds, read_expected);
 	s->contact = array(r, root, "contacts", 100000, sizeof(*s->contact), &s->contacts, read_contact);
 	clock = object(r, root, "clock");
+	within(r, "clock.");
 	s->true_rate = number(r, clock, "true_rate_hz", 0, 1e9, true);
 	read_reading(r, clock, "start", &s->start);
 	read_reading(r, clock, "end", &s->end);
+	within(r, "");
 	s->pulse = array(r, root, "pulses", 2000000, sizeof(*s->pulse), &s->pulses, read_pulse);
 }
 

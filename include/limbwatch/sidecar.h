@@ -76,7 +76,7 @@ int sidecar_write(const struct sidecar *sidecar, const struct disk *disk, const 
  * Reads one back.  Unknown members are passed over; a newer format number is refused.
  *
  * @param out  filled on success only; sidecar_clear it
- * @return 0; -EINVAL, with a sentence naming file, line and member; other -errno
+ * @return 0; -EINVAL, with a sentence naming the file and the line or member; other -errno
  */
 int sidecar_read(struct sidecar *out, const struct disk *disk, const char *path);
 /** The same from memory: the parser, for tests and the fuzz target. */

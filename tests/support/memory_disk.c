@@ -193,6 +193,21 @@ static ssize_t memory_read(int fd, void *data, size_t n)
 	return (ssize_t)n;
 }
 
+/* Makes the file at least `size` long; what is new is zeros. */
+static void stretch(struct content *c, size_t size)
+{
+	if (size > c->room) {
+		c->room = 2 * size;
+		c->now = realloc(c->now, c->room);
+		if (!c->now)
+			abort();
+	}
+	if (size > c->size) {
+		memset(c->now + c->size, 0, size - c->size);
+		c->size = size;
+	}
+}
+
 /* A write that fails for want of space has taken half of it. */
 static ssize_t memory_write(int fd, const void *data, size_t n)
 {
@@ -203,18 +218,9 @@ static ssize_t memory_write(int fd, const void *data, size_t n)
 		n /= 2;
 	else if (ret < 0)
 		return ret;
-	if (files[fd].at + n > c->room) {
-		c->room = 2 * (files[fd].at + n);
-		c->now = realloc(c->now, c->room);
-		if (!c->now)
-			abort();
-	}
-	if (files[fd].at > c->size)
-		memset(c->now + c->size, 0, files[fd].at - c->size);
+	stretch(c, files[fd].at + n);
 	memcpy(c->now + files[fd].at, data, n);
 	files[fd].at += n;
-	if (files[fd].at > c->size)
-		c->size = files[fd].at;
 	return (ssize_t)n;
 }
 
@@ -234,7 +240,9 @@ static int memory_truncate(int fd, int64_t size)
 	struct content *c = &contents[files[fd].content];
 	int ret = strike();
 
-	if (ret == 0 && (size_t)size < c->size)
+	if (ret == 0)
+		stretch(c, (size_t)size);
+	if (ret == 0)
 		c->size = (size_t)size;
 	return ret;
 }
