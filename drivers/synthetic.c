@@ -8,11 +8,14 @@
 #include <gsl/gsl_rng.h>
 #include <limits.h>
 #include <math.h>
+#include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
 #include <time.h>
 #include "limbwatch/log.h"
 #include "limbwatch/synthetic.h"
+#include "synthetic_card.h"
+#include "synthetic_pulse.h"
 
 #define MAS (M_PI / 180 / 3600e3)
 
@@ -88,72 +91,27 @@ static const struct setting settings[] = {
 	{ .name = NULL },
 };
 
-enum { BLOCK = 4096, EDGES = 16, STEP_HALF = 32, STEP_FINE = 256 };
-
-struct edge { double frame, height; };
+enum { BLOCK = 4096 };
 
 struct synthetic {
 	struct intake intake;
 	double rate;
 	struct tai start;
-	/* The card: frame number at whole true seconds after the start. */
-	size_t seconds;
-	double *second_frame;
+	struct synthetic_card card;
+	struct synthetic_pulse *pulse;  /* NULL: no second column */
 	/* The detector. */
-	struct curve *curve;            /* NULL: no contact */
-	double contact, covered, level, background, noise, red, red_pole, twinkle, drift, hum, hum_rate;
+	struct curve *curve;            /* NULL: no contact, the source stays */
+	double contact, level, background, noise, red, red_pole, red_kick, twinkle, drift, hum, hum_rate;
 	double high_pass, high_pass_pole;
 	double red_state, twinkle_state, slow;  /* slow: low-passed signal of the AC coupling */
-	/* The pulse. */
-	bool pulse;
-	double pulse_height, pulse_idle, pulse_width, pulse_jitter, pulse_missing, pulse_spurious, pulse_noise;
-	double pulse_ac, pulse_pole, pulse_slow, settled;
-	size_t next_second, edges;
-	struct edge edge[EDGES];
 	/* Output. */
-	gsl_rng *rng, *pulse_rng;       /* apart, so that the noise does not depend on the pulse */
+	gsl_rng *rng;
 	uint64_t next, total;
 	bool pace;
 	int64_t started_ns;
-	double detector[BLOCK], ticks[BLOCK];
+	double when[BLOCK], detector[BLOCK], ticks[BLOCK];      /* when: true time, seconds after the start */
 	unsigned char frames[BLOCK * 2 * 4];
 };
-
-/* Band-limited step, 0 to 1 about u = 0: the integral of a Blackman-windowed sinc, symmetric, so that its half height is
- * the edge to the last digit.  Tabulated at 1/STEP_FINE sample, linear between. */
-static double step_table[2 * STEP_HALF * STEP_FINE + 1];
-
-static void make_step_table(void)
-{
-	enum { HALF = STEP_HALF * STEP_FINE };
-	double sum = 0, before = 0;
-
-	if (step_table[2 * HALF] != 0)
-		return;
-	for (int k = -HALF; k <= HALF; k++) {
-		double u = (double)k / STEP_FINE, phase = M_PI * u / STEP_HALF;
-		double window = 0.42 + 0.5 * cos(phase) + 0.08 * cos(2 * phase);
-		double sinc = k ? sin(0.9 * M_PI * u) / (0.9 * M_PI * u) : 1;      /* a card passes 0.45 of its rate */
-
-		sum += 0.5 * (before + window * sinc);
-		before = window * sinc;
-		step_table[k + HALF] = sum;
-	}
-	for (int k = 0; k <= 2 * HALF; k++)
-		step_table[k] /= sum;
-}
-
-static double step(double u)
-{
-	double x = (u + STEP_HALF) * STEP_FINE;
-	int k = (int)x;
-
-	if (u <= -STEP_HALF)
-		return 0;
-	if (u >= STEP_HALF)
-		return 1;
-	return step_table[k] + (x - k) * (step_table[k + 1] - step_table[k]);
-}
 
 /* ------------------------------------------------------------------ the event */
 
@@ -234,51 +192,26 @@ static double noise_for(const struct setting_value *v, double strength)
 
 /* ------------------------------------------------------------------ the card's clock */
 
-static double *make_card(const struct setting_value *v, size_t seconds)
+static int make_card(struct synthetic_card *out, const struct setting_value *v)
 {
-	double *frame = malloc((seconds + 1) * sizeof(*frame)), wander = 0;
-	gsl_rng *rng = gsl_rng_alloc(gsl_rng_mt19937);
+	const struct synthetic_card_settings card = {
+		.rate = v[RATE].number, .duration_s = v[DURATION].number,
+		.error_ppm = v[CLOCK_ERROR].number, .drift_ppm_per_hour = v[CLOCK_DRIFT].number,
+		.wander_ppm = v[CLOCK_WANDER].number, .seed = (unsigned long)v[SEED].integer ^ 0x5ca1ab1eu,
+	};
 
-	if (!frame || !rng) {
-		free(frame);
-		gsl_rng_free(rng);
-		return NULL;
-	}
-	gsl_rng_set(rng, (unsigned long)v[SEED].integer ^ 0x5ca1ab1eu);
-	frame[0] = 0;
-	for (size_t s = 0; s < seconds; s++) {
-		double ppm = v[CLOCK_ERROR].number + v[CLOCK_DRIFT].number * ((double)s + 0.5) / 3600 + wander;
-
-		wander += gsl_ran_gaussian(rng, v[CLOCK_WANDER].number / 60);
-		frame[s + 1] = frame[s] + v[RATE].number * (1 + ppm * 1e-6);
-	}
-	gsl_rng_free(rng);
-	return frame;
-}
-
-static size_t card_seconds(const struct setting_value *v)
-{
-	return (size_t)(v[DURATION].number * 1.002) + 3;
-}
-
-static double frame_at(const double *second_frame, size_t seconds, double t)
-{
-	size_t s = t <= 0 ? 0 : (size_t)t;
-
-	if (s >= seconds)
-		s = seconds - 1;
-	return second_frame[s] + (t - (double)s) * (second_frame[s + 1] - second_frame[s]);
+	return synthetic_card_init(out, &card);
 }
 
 double synthetic_frame(const struct setting_value *v, double t)
 {
-	size_t seconds = card_seconds(v);
-	double *card = make_card(v, seconds), frame;
+	struct synthetic_card card;
+	double frame;
 
-	if (!card)
+	if (make_card(&card, v) < 0)
 		return NAN;
-	frame = frame_at(card, seconds, t);
-	free(card);
+	frame = synthetic_card_frame(&card, t);
+	synthetic_card_release(&card);
 	return frame;
 }
 
@@ -328,21 +261,23 @@ static int set_detector(struct synthetic *s, const struct setting_value *v)
 	curve_destroy(curve);
 	s->noise = noise_for(v, strength);
 	s->contact = v[CONTACT].number;
-	s->covered = v[KIND].integer == 1 ? 0 : 1;      /* before an emersion it is covered */
 	s->level = v[LEVEL].number;
 	s->background = v[BACKGROUND].number;
 	s->red = v[RED_NOISE].number;
 	s->twinkle = v[SCINTILLATION].number;
 	s->red_pole = pole(v[RED_CORNER].number, s->rate);
+	s->red_kick = sqrt(1 - s->red_pole * s->red_pole);
+	if (s->red > 0)
+		s->red_state = gsl_ran_gaussian_ziggurat(s->rng, 1);
+	if (s->twinkle > 0)
+		s->twinkle_state = gsl_ran_gaussian_ziggurat(s->rng, 1);
 	s->drift = v[GAIN_DRIFT].number / 3600;
 	s->hum = v[HUM].number * M_SQRT2;
 	s->hum_rate = 2 * M_PI * v[HUM_FREQUENCY].number;
 	s->high_pass = v[HIGH_PASS].number;
 	s->high_pass_pole = pole(s->high_pass, s->rate);
-	if (v[KIND].integer == 2) {
-		s->covered = 1;
+	if (v[KIND].integer == 2)
 		return 0;
-	}
 	/* The card's AC coupling acts on everything, sample by sample; so the curve itself goes without. */
 	memcpy(event, v, sizeof(settings) / sizeof(*settings) * sizeof(*v));
 	event[HIGH_PASS].number = 0;
@@ -351,25 +286,22 @@ static int set_detector(struct synthetic *s, const struct setting_value *v)
 
 static int set_pulse(struct synthetic *s, const struct setting_value *v)
 {
-	s->pulse = v[PULSE].integer;
-	if (!s->pulse)
+	const struct synthetic_pulse_settings pulse = {
+		.fraction_s = (double)(s->start.ns % 1000000000) * 1e-9,
+		.height = v[PULSE_POLARITY].integer ? -v[PULSE_HEIGHT].number : v[PULSE_HEIGHT].number,
+		.width_s = v[PULSE_WIDTH].number, .ac_hz = v[PULSE_AC].number,
+		.jitter_s = v[PULSE_JITTER].number, .noise_rms = v[PULSE_NOISE].number,
+		.missing = v[PULSE_MISSING].number, .spurious = v[PULSE_SPURIOUS].number,
+		.seed = (unsigned long)v[SEED].integer,
+	};
+
+	if (!v[PULSE].integer)
 		return 0;
-	if (s->rate < 1000) {
-		log_error("synthetic intake: rate_hz is %g; a pulse needs at least 1000", s->rate);
+	if (s->rate < SYNTHETIC_PULSE_RATE) {
+		log_error("synthetic intake: rate_hz is %g; a pulse needs at least %d", s->rate, SYNTHETIC_PULSE_RATE);
 		return -EINVAL;
 	}
-	s->pulse_idle = v[PULSE_POLARITY].integer ? v[PULSE_HEIGHT].number : 0;
-	s->pulse_height = v[PULSE_POLARITY].integer ? -v[PULSE_HEIGHT].number : v[PULSE_HEIGHT].number;
-	s->pulse_width = v[PULSE_WIDTH].number;
-	s->pulse_jitter = v[PULSE_JITTER].number;
-	s->pulse_missing = v[PULSE_MISSING].number;
-	s->pulse_spurious = v[PULSE_SPURIOUS].number;
-	s->pulse_noise = v[PULSE_NOISE].number;
-	s->pulse_ac = v[PULSE_AC].number;
-	s->pulse_pole = pole(s->pulse_ac, s->rate);
-	s->pulse_slow = s->settled = s->pulse_idle;
-	make_step_table();
-	return 0;
+	return synthetic_pulse_create(&s->pulse, &s->card, &pulse);
 }
 
 static void synthetic_close(struct intake *intake)
@@ -379,9 +311,9 @@ static void synthetic_close(struct intake *intake)
 	if (!s)
 		return;
 	curve_destroy(s->curve);
-	free(s->second_frame);
+	synthetic_card_release(&s->card);
+	synthetic_pulse_destroy(s->pulse);
 	gsl_rng_free(s->rng);
-	gsl_rng_free(s->pulse_rng);
 	free(s);
 }
 
@@ -411,22 +343,23 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 	if (!s)
 		return -ENOMEM;
 	s->rate = v[RATE].number;
-	s->total = (uint64_t)(v[DURATION].number * s->rate);
+	s->total = (uint64_t)llround(v[DURATION].number * s->rate);
 	s->pace = v[PACE].integer;
-	s->seconds = card_seconds(v);
-	s->second_frame = make_card(v, s->seconds);
 	s->rng = gsl_rng_alloc(gsl_rng_taus2);
-	s->pulse_rng = gsl_rng_alloc(gsl_rng_mt19937);
-	if (!s->second_frame || !s->rng || !s->pulse_rng)
+	if (!s->rng || make_card(&s->card, v) < 0)
 		goto close;
 	gsl_rng_set(s->rng, (unsigned long)v[SEED].integer + 1);
-	gsl_rng_set(s->pulse_rng, (unsigned long)v[SEED].integer ^ 0xb0a7u);
 	tai_parse_utc(&s->start, v[START].text);
 	ret = set_detector(s, v);
 	if (ret == 0)
 		ret = set_pulse(s, v);
 	if (ret < 0)
 		goto close;
+	ret = -EINVAL;
+	if (s->total == 0) {
+		log_error("synthetic intake: duration_s %g is too short for one frame at rate_hz %g", v[DURATION].number, s->rate);
+		goto close;
+	}
 	set_intake(s, v);
 	*out = &s->intake;
 	return 0;
@@ -443,9 +376,17 @@ static int64_t monotonic_ns(void)
 	return now.tv_sec * INT64_C(1000000000) + now.tv_nsec;
 }
 
+/* When the card has taken `frame` frames, from the start: by true time, so that host stamps and pulses agree. */
+static int64_t due_ns(const struct synthetic *s, uint64_t frame)
+{
+	return (int64_t)(synthetic_card_time(&s->card, (double)frame) * 1e9);
+}
+
 static int synthetic_start(struct intake *intake)
 {
-	((struct synthetic *)intake)->started_ns = monotonic_ns();
+	struct synthetic *s = (struct synthetic *)intake;
+
+	s->started_ns = monotonic_ns() - due_ns(s, s->next);    /* started again it goes on where it was */
 	return 0;
 }
 
@@ -457,39 +398,46 @@ static int synthetic_stop(struct intake *intake)
 
 /* ------------------------------------------------------------------ samples */
 
-/* True time of frame n, seconds after the start. */
-static double time_of(const struct synthetic *s, double n)
+/* The first frame's value of red noise is drawn like any other's: the night began before the recording. */
+static double red_step(struct synthetic *s, double *state)
 {
-	size_t k = (size_t)(n / s->rate);
-
-	while (k > 0 && s->second_frame[k] > n)
-		k--;
-	while (k + 1 < s->seconds && s->second_frame[k + 1] <= n)
-		k++;
-	return (double)k + (n - s->second_frame[k]) / (s->second_frame[k + 1] - s->second_frame[k]);
+	*state = s->red_pole * *state + s->red_kick * gsl_ran_gaussian_ziggurat(s->rng, 1);
+	return *state;
 }
 
-static double red_step(gsl_rng *rng, double *state, double pole_, double rms)
+/* Source and true time of the frames from s->next on, second by second: within one the card's rate is constant. */
+static void make_source(struct synthetic *s, size_t count)
 {
-	*state = pole_ * *state + sqrt(1 - pole_ * pole_) * gsl_ran_gaussian_ziggurat(rng, 1);
-	return rms * *state;
+	for (size_t done = 0, n; done < count; done += n) {
+		double first = (double)(s->next + done);
+		size_t k = synthetic_card_second(&s->card, first);
+		double begin = s->card.second_frame[k], end = s->card.second_frame[k + 1], dt = 1 / (end - begin);
+		double t = (double)k + (first - begin) * dt;
+
+		n = count - done;
+		if (k + 1 < s->card.seconds && ceil(end - first) < (double)n)
+			n = (size_t)ceil(end - first);
+		if (s->curve)
+			curve_sample(s->curve, t - s->contact, dt, n, s->detector + done);
+		for (size_t j = done; j < done + n; j++) {
+			s->when[j] = t + dt * (double)(j - done);
+			if (!s->curve)
+				s->detector[j] = 1;
+		}
+	}
 }
 
 static void make_detector(struct synthetic *s, size_t count)
 {
-	double t0 = time_of(s, (double)s->next), t1 = time_of(s, (double)(s->next + count));
-	double dt = (t1 - t0) / (double)count;
-
-	if (s->curve)
-		curve_sample(s->curve, t0 - s->contact, dt, count, s->detector);
+	make_source(s, count);
 	for (size_t k = 0; k < count; k++) {
-		double t = t0 + dt * (double)k, source = s->level * (s->curve ? s->detector[k] : s->covered), x;
+		double t = s->when[k], source = s->level * s->detector[k], x;
 
 		if (s->twinkle > 0)
-			source *= fmax(0, 1 + red_step(s->rng, &s->twinkle_state, s->red_pole, s->twinkle));
+			source *= fmax(0, 1 + s->twinkle * red_step(s, &s->twinkle_state));
 		x = (s->background + source) * (1 + s->drift * t);
 		if (s->red > 0)
-			x += red_step(s->rng, &s->red_state, s->red_pole, s->red);
+			x += s->red * red_step(s, &s->red_state);
 		if (s->hum > 0)
 			x += s->hum * sin(s->hum_rate * t);
 		if (s->noise > 0)
@@ -504,76 +452,15 @@ static void make_detector(struct synthetic *s, size_t count)
 	}
 }
 
-static void put_edge(struct synthetic *s, double t, double height)
-{
-	if (s->edges < EDGES)
-		s->edge[s->edges++] = (struct edge){ frame_at(s->second_frame, s->seconds, t), height };
-}
-
-/* Edges of all pulses that begin before `frame`. */
-static void make_edges(struct synthetic *s, double frame)
-{
-	double fraction = (double)(s->start.ns % 1000000000) * 1e-9;
-
-	for (;; s->next_second++) {
-		double t = (double)s->next_second - fraction;   /* a whole second; the first may lie before the start */
-		double late = gsl_ran_gaussian(s->pulse_rng, s->pulse_jitter);
-
-		if (s->next_second + 1 >= s->seconds || frame_at(s->second_frame, s->seconds, t) > frame)
-			return;
-		if (gsl_rng_uniform(s->pulse_rng) >= s->pulse_missing) {
-			put_edge(s, t + late, s->pulse_height);
-			put_edge(s, t + late + s->pulse_width, -s->pulse_height);
-		}
-		if (gsl_rng_uniform(s->pulse_rng) < s->pulse_spurious) {
-			double at = t + 0.3 + 0.4 * gsl_rng_uniform(s->pulse_rng);
-
-			put_edge(s, at, s->pulse_height);
-			put_edge(s, at + 0.001 + 0.1 * gsl_rng_uniform(s->pulse_rng), -s->pulse_height);
-		}
-	}
-}
-
-static void retire_edges(struct synthetic *s, double frame)
-{
-	size_t kept = 0;
-
-	for (size_t k = 0; k < s->edges; k++) {
-		if (s->edge[k].frame + STEP_HALF < frame)
-			s->settled += s->edge[k].height;
-		else
-			s->edge[kept++] = s->edge[k];
-	}
-	s->edges = kept;
-}
-
-static void make_ticks(struct synthetic *s, size_t count)
-{
-	make_edges(s, (double)(s->next + count) + STEP_HALF);
-	retire_edges(s, (double)s->next);
-	for (size_t k = 0; k < count; k++) {
-		double n = (double)(s->next + k), x = s->settled;
-
-		for (size_t e = 0; e < s->edges; e++)
-			if (n > s->edge[e].frame - STEP_HALF)
-				x += s->edge[e].height * step(n - s->edge[e].frame);
-		if (s->pulse_ac > 0) {
-			s->pulse_slow = s->pulse_pole * s->pulse_slow + (1 - s->pulse_pole) * x;
-			x -= s->pulse_slow;
-		}
-		s->ticks[k] = x + gsl_ran_gaussian_ziggurat(s->pulse_rng, s->pulse_noise);
-	}
-}
-
-/* A live device's pace: waits until the block has been "taken". @return false: not within timeout_ms */
+/* A live device's pace: waits until the frames before `frame` have been "taken". @return false: not within timeout_ms */
 static bool wait_for(const struct synthetic *s, uint64_t frame, int timeout_ms)
 {
-	int64_t due = s->started_ns + (int64_t)((double)frame / s->rate * 1e9), now = monotonic_ns();
-	int64_t wait = due - now < timeout_ms * INT64_C(1000000) ? due - now : timeout_ms * INT64_C(1000000);
+	int64_t due = s->started_ns + due_ns(s, frame), latest = monotonic_ns() + timeout_ms * INT64_C(1000000);
+	int64_t until = due < latest ? due : latest;
+	struct timespec moment = { until / 1000000000, until % 1000000000 };
 
-	if (wait > 0)
-		nanosleep(&(struct timespec){ wait / 1000000000, wait % 1000000000 }, NULL);
-	return wait == due - now || wait <= 0;
+	clock_nanosleep(CLOCK_MONOTONIC, TIMER_ABSTIME, &moment, NULL);
+	return monotonic_ns() >= due;
 }
 
 static int synthetic_read(struct intake *intake, struct block *block, int timeout_ms)
@@ -589,12 +476,12 @@ static int synthetic_read(struct intake *intake, struct block *block, int timeou
 	make_detector(s, count);
 	frames_from_double(s->frames, intake->format, 0, s->detector, count);
 	if (s->pulse) {
-		make_ticks(s, count);
+		synthetic_pulse_execute(s->pulse, s->next, s->ticks, count);
 		frames_from_double(s->frames, intake->format, 1, s->ticks, count);
 	}
 	*block = (struct block){
 		.frames = s->frames, .count = count, .first = s->next,
-		.host_ns = s->pace ? s->started_ns + (int64_t)((double)s->next / s->rate * 1e9) : INT64_MIN,
+		.host_ns = s->pace ? s->started_ns + due_ns(s, s->next) : INT64_MIN,
 	};
 	s->next += count;
 	return 1;

@@ -3,7 +3,7 @@
 # Segments of every sample type as other programs read them: sox, and for the integers the wave module of Python.  Both
 # give the samples that went in by a pipe.  (Of FLOAT sox remarks that the fmt chunk has no extension; it needs none.)
 . tests/support/tap.sh
-plan 10
+plan 12
 
 # 3 s of two channels at 8 kHz: numbers that touch every byte, full scale among them.
 make_samples() {
@@ -75,3 +75,27 @@ END
 		! grep -v 'missing extended part of fmt chunk' "$work/err" | grep -qi warn
 	ok $? "$format: $readers"
 done
+[ "$(soxi -s "$work"/FLOAT/*.wav 2> /dev/null)" -eq 24000 ] &&
+	[ "$(soxi -e "$work"/FLOAT/*.wav 2> /dev/null)" = "Floating Point PCM" ]
+ok $? "FLOAT is floating point for sox"
+
+cat > "$work/bext.conf" <<END
+station = { name = "Brackenfold"; };
+intake = { driver = "synthetic"; seed = 3; rate_hz = 8000; duration_s = 3; kind = "none"; noise_rms = 0.05; pulse = true;
+  start_utc = "2031-04-02T01:23:15.25Z"; };
+channels = ( { name = "diode"; column = 1; wavelength_nm = 620; } );
+keep = { folder = "$work/bext"; everything = true; };
+END
+run "$build/limbwatchd" --quiet --config "$work/bext.conf"
+# EBU Tech 3285: description 256 bytes, originator 32, reference 32, date 10, time 8, samples since midnight 8.
+"$python" - "$work"/bext/*.wav <<'END'
+import struct, sys
+data = open(sys.argv[1], "rb").read()
+at = data.index(b"bext") + 8
+assert data[at + 256:at + 288].rstrip(b"\0") == b"Brackenfold"
+date, time = data[at + 320:at + 330], data[at + 330:at + 338]
+assert (date, time) == (b"2031-04-02", b"01:23:15"), (date, time)
+low, high = struct.unpack("<II", data[at + 338:at + 346])
+assert abs((high << 32 | low) - (((1 * 60 + 23) * 60 + 15.25) * 8000)) < 1, (low, high)
+END
+ok $? "bext names station, date, time and samples since midnight"

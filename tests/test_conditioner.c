@@ -123,6 +123,10 @@ static void samples_at_full_scale_are_counted(void **state)
 	assert_int_equal(conditioner_create(&c, &s), 0);
 	conditioner_execute(c, frames, 8, 0, out, &index);
 	assert_int_equal(conditioner_clipped(c), 2);
+	/* A sample that was dropped for a gap is none. */
+	conditioner_execute(c, frames + 1, 1, 8, out, &index);
+	conditioner_execute(c, frames + 2, 2, 20, out, &index);
+	assert_int_equal(conditioner_clipped(c), 2);
 	conditioner_destroy(c);
 }
 

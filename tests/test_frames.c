@@ -4,6 +4,7 @@
 #include <stdarg.h>
 #include <stddef.h>
 #include <stdint.h>
+#include <stdlib.h>
 #include <string.h>
 #include <cmocka.h>
 #include "limbwatch/frames.h"
@@ -63,6 +64,46 @@ static void every_channel_of_every_type_comes_back(void **state)
 		}
 }
 
+/* Every byte at random, in memory that ends with the last frame; the value from its definition, sum of bytes by weight. */
+static void no_sample_sees_its_neighbours(void **state)
+{
+	enum { FRAMES = 100, SEED = 20310402 };
+	static const double scale[] = { 0x1p15, 0x1p23, 0x1p23, 0x1p31 };
+	static const size_t bytes[] = { 2, 3, 3, 4 };   /* of a sample that count */
+
+	(void)state;
+	print_message("seed %d\n", SEED);
+	srand(SEED);
+	for (int type = 0; type < SAMPLE_F32; type++)
+		for (unsigned channels = 1; channels <= MAX_CHANNELS; channels++) {
+			struct frame_format format = { (enum sample_type)type, channels };
+			size_t size = frame_bytes(format) * FRAMES;
+			unsigned char *frames = malloc(size);
+			double out[FRAMES];
+			float rough[FRAMES];
+
+			assert_non_null(frames);
+			for (size_t k = 0; k < size; k++)
+				frames[k] = (unsigned char)(rand() >> 7);
+			for (unsigned c = 0; c < channels; c++) {
+				frames_to_double(out, frames, format, c, FRAMES);
+				frames_to_float(rough, frames, format, c, FRAMES);
+				for (size_t k = 0; k < FRAMES; k++) {
+					const unsigned char *p = frames + (k * channels + c) * sample_bytes(format.type);
+					double code = 0;
+
+					for (size_t b = 0; b < bytes[type]; b++)
+						code += p[b] * ldexp(1, 8 * (int)b);
+					if (code >= scale[type])
+						code -= 2 * scale[type];
+					assert_true(out[k] == code / scale[type]);
+					assert_true(rough[k] == (float)out[k]);
+				}
+			}
+			free(frames);
+		}
+}
+
 static void what_does_not_fit_is_clipped_to_full_scale(void **state)
 {
 	static const double in[] = { 2, -2, NAN, INFINITY, -INFINITY, 1, -1 };
@@ -98,6 +139,7 @@ int main(void)
 	const struct CMUnitTest tests[] = {
 		cmocka_unit_test(integers_are_little_endian_twos_complement),
 		cmocka_unit_test(every_channel_of_every_type_comes_back),
+		cmocka_unit_test(no_sample_sees_its_neighbours),
 		cmocka_unit_test(what_does_not_fit_is_clipped_to_full_scale),
 		cmocka_unit_test(floats_pass_through_with_nan_and_infinity),
 	};

@@ -1,12 +1,14 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <pthread.h>
 #include <setjmp.h>
+#include <signal.h>
 #include <stdarg.h>
 #include <stdatomic.h>
 #include <stddef.h>
 #include <stdint.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 #include <cmocka.h>
 #include <sched.h>
 #include "limbwatch/ring.h"
@@ -162,14 +164,75 @@ static void more_gaps_than_the_table_holds_are_an_overrun_not_a_lie(void **state
 	ring_destroy(ring);
 }
 
+static void the_head_counts_a_gap_once_frames_follow_it(void **state)
+{
+	struct ring *ring;
+
+	(void)state;
+	assert_int_equal(ring_create(&ring, BYTES, 4096), 0);
+	assert_int_equal(ring_head(ring), 0);
+	put(ring, 0, 100);
+	ring_write(ring, NULL, 0, 500);
+	assert_int_equal(ring_head(ring), 100);
+	put(ring, 600, 10);
+	assert_int_equal(ring_head(ring), 610);
+	ring_destroy(ring);
+}
+
+/* A driver at fault: its frames are kept under the numbers that follow, and a later gap is as long as it says. */
+static void numbers_never_go_back(void **state)
+{
+	struct ring *ring;
+	struct ring_reader *reader;
+	struct ring_news news;
+	unsigned char frames[BYTES * 100];
+
+	(void)state;
+	assert_int_equal(ring_create(&ring, BYTES, 4096), 0);
+	assert_int_equal(ring_reader_open(&reader, ring), 0);
+	put(ring, 0, 50);
+	put(ring, 10, 20);
+	put(ring, 90, 5);
+	assert_int_equal(ring_head(ring), 95);
+	assert_int_equal(ring_read(reader, frames, 100, &news), 70);
+	assert_true(news.first == 0 && news.lost == 0);
+	assert_int_equal(ring_read(reader, frames, 100, &news), 5);
+	assert_true(news.first == 90 && news.lost == 20 && news.overrun == 0);
+	ring_reader_close(reader);
+	ring_destroy(ring);
+}
+
+static void what_was_passed_over_is_no_overrun(void **state)
+{
+	struct ring *ring;
+	struct ring_reader *reader;
+	struct ring_news news;
+	unsigned char frames[BYTES * 100];
+	uint64_t next = 0;
+
+	(void)state;
+	assert_int_equal(ring_create(&ring, BYTES, 65536), 0);
+	assert_int_equal(ring_reader_open(&reader, ring), 0);
+	for (int gap = 0; gap < 6000; gap++, next += 7)
+		put(ring, next, 4);
+	ring_skip_to(reader, next - 7);
+	assert_int_equal(ring_read(reader, frames, 100, &news), 4);
+	assert_true(news.first == next - 7 && news.overrun <= news.lost && news.lost <= 3);
+	assert_true(numbered(frames, next - 7, 4));
+	ring_reader_close(reader);
+	ring_destroy(ring);
+}
+
 /* ------------------------------------------------------------------ threads */
 
-enum { STRESS_FRAMES = 600000 };
+enum { STRESS_FRAMES = 3000000 };
 
 struct stress {
 	struct ring *ring;
 	struct ring_reader *reader;
 	bool polite;                    /* the producer waits for room, as in a replay */
+	unsigned most;                  /* frames at once */
+	unsigned gap_every;             /* blocks */
 	uint64_t seen, lost;
 	bool wrong;
 };
@@ -182,11 +245,11 @@ static void *produce(void *argument)
 	unsigned step = 1;
 
 	while (next < STRESS_FRAMES) {
-		size_t n = 1 + step * 263 % 700;
+		size_t n = 1 + step * 263 % s->most;
 
 		while (s->polite && ring_room(s->ring) < n)
 			sched_yield();
-		if (step++ % 50 == 0)
+		if (step++ % s->gap_every == 0)
 			next += 5;              /* the intake lost some */
 		number_frames(frames, next, n);
 		ring_write(s->ring, frames, n, next);
@@ -220,7 +283,7 @@ static void *consume(void *argument)
 	}
 }
 
-static void stress(bool polite, int readers)
+static void stress(bool polite, int readers, unsigned most, unsigned gap_every)
 {
 	struct stress s[3] = { 0 };
 	struct ring *ring;
@@ -228,7 +291,7 @@ static void stress(bool polite, int readers)
 
 	assert_int_equal(ring_create(&ring, BYTES, 4096), 0);
 	for (int k = 0; k <= readers; k++)
-		s[k] = (struct stress){ .ring = ring, .polite = polite };
+		s[k] = (struct stress){ .ring = ring, .polite = polite, .most = most, .gap_every = gap_every };
 	for (int k = 0; k < readers; k++) {
 		assert_int_equal(ring_reader_open(&s[k].reader, ring), 0);
 		pthread_create(&reader[k], NULL, consume, &s[k]);
@@ -247,15 +310,116 @@ static void stress(bool polite, int readers)
 static void two_threads_never_see_a_torn_frame(void **state)
 {
 	(void)state;
-	stress(true, 1);
-	stress(false, 1);
+	stress(true, 1, 700, 50);
+	stress(false, 1, 700, 50);
 }
 
 static void three_threads_never_see_a_torn_frame(void **state)
 {
 	(void)state;
-	stress(true, 2);
-	stress(false, 2);
+	stress(true, 2, 700, 50);
+	stress(false, 2, 700, 50);
+}
+
+/* A gap before every frame or two: the table of gaps goes round as the ring does. */
+static void gaps_told_by_two_threads_are_those_entered(void **state)
+{
+	(void)state;
+	stress(false, 2, 2, 1);
+}
+
+/* ------------------------------------------------------------------ a race as hard as it can be */
+
+/*
+ * The producer only copies, from frames made before, and never waits; the reader asks for all there is: the producer often
+ * overwrites what is just being copied.  A frame is its number, modulo twice the capacity, four times.
+ */
+enum { RACE_CAPACITY = 4096, RACE_CYCLE = 2 * RACE_CAPACITY, RACE_BLOCK = 256, RACE_FRAMES = 4000 * RACE_BLOCK };
+
+static uint64_t race_source[RACE_CYCLE][4], race_copy[RACE_CAPACITY][4];
+
+static void *race(void *argument)
+{
+	for (uint64_t next = 0; next < RACE_FRAMES; next += RACE_BLOCK)
+		ring_write(argument, race_source[next % RACE_CYCLE], RACE_BLOCK, next);
+	ring_end(argument);
+	return NULL;
+}
+
+static void what_is_overwritten_while_it_is_copied_is_lost_not_given(void **state)
+{
+	struct ring *ring;
+	struct ring_reader *reader;
+	struct ring_news news = { 0 };
+	pthread_t producer;
+	uint64_t seen = 0, lost = 0, wrong = 0;
+
+	(void)state;
+	for (size_t k = 0; k < RACE_CYCLE; k++)
+		for (int w = 0; w < 4; w++)
+			race_source[k][w] = k;
+	assert_int_equal(ring_create(&ring, sizeof(*race_source), RACE_CAPACITY), 0);
+	assert_int_equal(ring_reader_open(&reader, ring), 0);
+	pthread_create(&producer, NULL, race, ring);
+	while (!news.ended) {
+		size_t n = ring_read(reader, race_copy, RACE_CAPACITY, &news);
+
+		for (size_t k = 0; k < n; k++)
+			for (int w = 0; w < 4; w++)
+				wrong += race_copy[k][w] != (news.first + k) % RACE_CYCLE;
+		seen += n;
+		lost += news.lost;
+	}
+	pthread_join(producer, NULL);
+	assert_int_equal(wrong, 0);
+	assert_int_equal(seen + lost, RACE_FRAMES);
+	ring_reader_close(reader);
+	ring_destroy(ring);
+}
+
+/* The same without chance: the reader's copy stops at a forbidden page, and the producer writes before it may go on. */
+static struct ring *stopped_ring;
+static unsigned char *forbidden;
+static const size_t page = 65536;       /* a multiple of the page of every machine */
+
+static void write_meanwhile(int signal_number)
+{
+	(void)signal_number;
+	mprotect(forbidden, page, PROT_READ | PROT_WRITE);
+	for (uint64_t next = RACE_CAPACITY; next < RACE_CAPACITY + 512; next += RACE_BLOCK)
+		ring_write(stopped_ring, race_source[next % RACE_CYCLE], RACE_BLOCK, next);
+}
+
+static void a_copy_overtaken_half_way_is_made_again(void **state)
+{
+	unsigned char *buffer = mmap(NULL, 2 * page, PROT_READ | PROT_WRITE, MAP_PRIVATE | MAP_ANONYMOUS, -1, 0);
+	struct sigaction act = { .sa_handler = write_meanwhile }, before;
+	struct ring_reader *reader;
+	struct ring_news news;
+	uint64_t (*copy)[4] = (uint64_t (*)[4])buffer;
+	size_t n;
+
+	(void)state;
+	assert_true(buffer != MAP_FAILED);
+	for (size_t k = 0; k < RACE_CYCLE; k++)
+		for (int w = 0; w < 4; w++)
+			race_source[k][w] = k;
+	assert_int_equal(ring_create(&stopped_ring, sizeof(*race_source), RACE_CAPACITY), 0);
+	assert_int_equal(ring_reader_open(&reader, stopped_ring), 0);
+	ring_write(stopped_ring, race_source[0], RACE_CAPACITY, 0);
+	forbidden = buffer + page;
+	assert_int_equal(mprotect(forbidden, page, PROT_NONE), 0);
+	sigaction(SIGSEGV, &act, &before);
+	n = ring_read(reader, copy, RACE_CAPACITY, &news);      /* 128 KiB: two of these pages */
+	sigaction(SIGSEGV, &before, NULL);
+	/* 4608 frames were written, it goes on half a ring behind; what it saw at first ended at 4096. */
+	assert_int_equal(n, 4096 - 2560);
+	assert_true(news.first == 2560 && news.lost == 2560 && news.overrun == 2560);
+	for (size_t k = 0; k < n; k++)
+		assert_int_equal(copy[k][3], 2560 + k);
+	ring_reader_close(reader);
+	ring_destroy(stopped_ring);
+	munmap(buffer, 2 * page);
 }
 
 int main(void)
@@ -265,8 +429,14 @@ int main(void)
 		cmocka_unit_test(gaps_take_no_room_and_are_told_to_every_reader),
 		cmocka_unit_test(a_slow_reader_is_told_what_it_lost),
 		cmocka_unit_test(more_gaps_than_the_table_holds_are_an_overrun_not_a_lie),
+		cmocka_unit_test(the_head_counts_a_gap_once_frames_follow_it),
+		cmocka_unit_test(numbers_never_go_back),
+		cmocka_unit_test(what_was_passed_over_is_no_overrun),
 		cmocka_unit_test(two_threads_never_see_a_torn_frame),
 		cmocka_unit_test(three_threads_never_see_a_torn_frame),
+		cmocka_unit_test(gaps_told_by_two_threads_are_those_entered),
+		cmocka_unit_test(a_copy_overtaken_half_way_is_made_again),
+		cmocka_unit_test(what_is_overwritten_while_it_is_copied_is_lost_not_given),
 	};
 
 	return cmocka_run_group_tests(tests, NULL, NULL);

@@ -85,6 +85,55 @@ static void the_event_is_the_edge_pattern_at_the_true_time(void **state)
 	free(column[0]);
 }
 
+/* The card's recursive filter against the analytical response of the optics. */
+static void ac_coupling_gives_the_curve_the_optics_expect(void **state)
+{
+	struct curve_parameters parameters;
+	struct curve *curve;
+	double *column[2];
+	size_t n;
+
+	(void)state;
+	set("duration_s", 6);
+	set("contact_s", 3.0001);
+	set("noise_rms", 0);
+	set("high_pass_hz", 2);
+	n = play(column);
+	synthetic_curve(values, &parameters);
+	assert_int_equal(curve_create(&curve, &parameters), 0);
+	/*
+	 * After a second: the filter begins settled on the first frame, the fringes of 3 s before are not.  A sample holds its
+	 * value for half a sample before and after: measured 2.0e-5 of full scale, where the curve is steepest.
+	 */
+	for (size_t k = 48000; k < n; k++)
+		assert_true(fabs(column[0][k] - 0.2 * curve_value(curve, (double)k / 48000 - 3.0001)) < 4e-5);
+	curve_destroy(curve);
+	free(column[0]);
+}
+
+/* f = t + d t^2 / 2 for a clock whose rate drifts by d a second: a logger's frames follow it all night. */
+static void a_slow_logger_follows_the_drift_of_its_clock(void **state)
+{
+	double *column[2], scale = fresnel_scale(0.3, 378e6), drift = 100e-6 / 3600;
+	size_t n;
+
+	(void)state;
+	set("rate_hz", 1);
+	set("duration_s", 6000);
+	set("contact_s", 5000);
+	set("frequency_mhz", 999.30819333333333);       /* 0.3 m */
+	set("noise_rms", 0);
+	set("clock_drift_ppm_per_hour", 100);
+	n = play(column);
+	assert_int_equal(n, 6000);
+	for (size_t k = 0; k < n; k++) {
+		double f = (double)k, t = 2 * f / (1 + sqrt(1 + 2 * drift * f)), w = -600 * (t - 5000) / scale;
+
+		assert_true(fabs(column[0][k] - (0.1 + 0.2 * edge_intensity(w))) < 1e-6);
+	}
+	free(column[0]);
+}
+
 static void the_truth_names_the_frame_of_the_contact(void **state)
 {
 	struct synthetic_truth truth;
@@ -133,6 +182,41 @@ static void the_noise_has_the_rms_asked_for(void **state)
 	/* Standard errors: rms / sqrt(n) = 4.6e-5 and rms / sqrt(2 n) = 3.3e-5; five of them. */
 	assert_true(fabs(mean - 0.3) < 2.3e-4);
 	assert_true(fabs(rms_about(column[0], n, mean) - 0.013) < 1.6e-4);
+	free(column[0]);
+}
+
+/* Ornstein and Uhlenbeck: stationary from the first frame on, correlation exp(-2 pi f_c t). */
+static void red_noise_has_its_rms_from_the_first_frame_on(void **state)
+{
+	enum { SEEDS = 200, LAG = 25 };         /* 25 frames at 8 kHz: 1 / (2 pi 50.93 Hz) */
+	double *column[2], squares = 0, sum = 0, rms;
+	size_t n;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 8000);
+	set("noise_rms", 0);
+	set("red_noise_rms", 0.02);
+	set("red_corner_hz", 0.001);
+	set("duration_s", 0.1);
+	for (int seed = 1; seed <= SEEDS; seed++) {
+		set("seed", seed);
+		play(column);
+		squares += (column[0][0] - 0.3) * (column[0][0] - 0.3);
+		free(column[0]);
+	}
+	/* Standard error of an rms 1 / sqrt(2 SEEDS) = 5%; four of them. */
+	assert_true(fabs(sqrt(squares / SEEDS) / 0.02 - 1) < 0.2);
+
+	set("red_corner_hz", 8000 / (2 * M_PI * LAG));
+	set("duration_s", 30);
+	n = play(column);
+	rms = rms_about(column[0], n, 0.3);
+	for (size_t k = LAG; k < n; k++)
+		sum += (column[0][k] - 0.3) * (column[0][k - LAG] - 0.3);
+	/* 30 s hold 9600 correlation times: 1% of the rms, 1.5% of the correlation; four of them. */
+	assert_true(fabs(rms / 0.02 - 1) < 0.04);
+	assert_true(fabs(sum / (double)n / (rms * rms) - exp(-1)) < 0.06);
 	free(column[0]);
 }
 
@@ -217,6 +301,85 @@ static void pulses_stand_on_the_true_seconds_of_a_wrong_card(void **state)
 	free(column[1]);
 }
 
+/* 2000 pulses at 1000 Hz, a fifth of them missing: numbers against the binomial and normal distributions they are drawn from. */
+static void pulses_jitter_and_go_missing_as_often_as_asked(void **state)
+{
+	double *column[2], squares = 0;
+	size_t n, found = 0;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 1000);
+	set("duration_s", 2000);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_jitter_s", 0.002);
+	set("pulse_missing", 0.2);
+	n = play(column);
+	for (size_t k = 50; k + 50 < n; k++) {
+		double late;
+
+		if (!(column[1][k] < 0.25 && column[1][k + 1] >= 0.25))
+			continue;
+		late = (half_height(column[1], k, 0.25) - 750) / 1000;
+		late -= round(late);
+		squares += late * late;
+		found++;
+	}
+	/* Standard errors: sqrt(2000 0.2 0.8) = 18 pulses; 1 / sqrt(2 found) = 1.8% of the rms; four of each. */
+	assert_true(fabs((double)found - 1600) < 72);
+	assert_true(fabs(sqrt(squares / (double)found) / 0.002 - 1) < 0.072);
+	free(column[0]);
+	free(column[1]);
+}
+
+/* A step through an RC high-pass falls as exp(-2 pi f t), and comes back from below after the pulse (any circuit handbook). */
+static void an_ac_coupled_pulse_sags(void **state)
+{
+	double *column[2], sag = exp(-2 * M_PI * 5 * 0.05), end = exp(-2 * M_PI * 5 * 0.1);
+	const double *x;
+
+	(void)state;
+	set("kind", 2);
+	set("duration_s", 3);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_jitter_s", 0);
+	set("pulse_ac_hz", 5);
+	play(column);
+	x = column[1] + 48000 * 7 / 4;          /* a whole second */
+	/* A sample is the least that "just then" can mean: 2 pi 5 Hz / 48 kHz = 0.07%. */
+	assert_true(fabs(x[2400] - 0.5 * sag) < 4e-4);
+	assert_true(fabs(x[4800 + 2400] - 0.5 * (end - 1) * sag) < 4e-4);
+	assert_true(fabs(x[40000]) < 4e-4);
+	free(column[0]);
+	free(column[1]);
+}
+
+/* Pulses last 0.1 s from a whole second on, spurious ones lie 0.3 to 0.801 s after it: then the line must be idle. */
+static void many_pulses_in_one_block_all_end(void **state)
+{
+	double *column[2];
+	size_t n;
+
+	(void)state;
+	set("kind", 2);
+	set("rate_hz", 1000);
+	set("duration_s", 60);
+	set("pulse", 1);
+	set("pulse_noise_rms", 0);
+	set("pulse_spurious", 1);
+	n = play(column);
+	for (size_t second = 0; second + 1 < n / 1000; second++) {
+		const double *x = column[1] + 1000 * second + 750;      /* a whole second */
+
+		assert_true(fabs(x[50] - 0.5) < 1e-3);
+		assert_true(fabs(x[200]) < 1e-3 && fabs(x[900]) < 1e-3);
+	}
+	free(column[0]);
+	free(column[1]);
+}
+
 static void a_seed_gives_the_same_night_again_and_another_another(void **state)
 {
 	double *a[2], *b[2], *c[2];
@@ -244,10 +407,16 @@ int main(void)
 {
 	const struct CMUnitTest tests[] = {
 		cmocka_unit_test_setup(the_event_is_the_edge_pattern_at_the_true_time, reset),
+		cmocka_unit_test_setup(ac_coupling_gives_the_curve_the_optics_expect, reset),
+		cmocka_unit_test_setup(a_slow_logger_follows_the_drift_of_its_clock, reset),
 		cmocka_unit_test_setup(the_truth_names_the_frame_of_the_contact, reset),
 		cmocka_unit_test_setup(the_noise_has_the_rms_asked_for, reset),
+		cmocka_unit_test_setup(red_noise_has_its_rms_from_the_first_frame_on, reset),
 		cmocka_unit_test_setup(snr_sets_the_noise_of_the_ideal_filter, reset),
 		cmocka_unit_test_setup(pulses_stand_on_the_true_seconds_of_a_wrong_card, reset),
+		cmocka_unit_test_setup(pulses_jitter_and_go_missing_as_often_as_asked, reset),
+		cmocka_unit_test_setup(an_ac_coupled_pulse_sags, reset),
+		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
 		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
 	};
 

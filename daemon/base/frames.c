@@ -1,4 +1,5 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
+#include <endian.h>
 #include <math.h>
 #include <string.h>
 #include "limbwatch/frames.h"
@@ -39,7 +40,16 @@ static inline int32_t read_s24(const unsigned char *p)
 
 static inline int32_t read_s32(const unsigned char *p)
 {
-	return (int32_t)((uint32_t)p[0] | (uint32_t)p[1] << 8 | (uint32_t)p[2] << 16 | (uint32_t)p[3] << 24);
+	uint32_t bits;
+
+	memcpy(&bits, p, sizeof(bits));
+	return (int32_t)le32toh(bits);
+}
+
+/* Three bytes read together with the one before them, which the shift drops: one load, where three would be. */
+static inline int32_t read_s24_after(const unsigned char *p)
+{
+	return read_s32(p - 1) >> 8;
 }
 
 static inline float read_f32(const unsigned char *p)
@@ -52,8 +62,19 @@ static inline float read_f32(const unsigned char *p)
 }
 
 #define CONVERT(number, reader, scale) \
-	for (size_t k = 0; k < count; k++, p += step) \
-		out[k] = (number)reader(p) * (number)(scale)
+	for (size_t k = 0; k < count; k++) \
+		out[k] = (number)reader(p + k * step) * (number)(scale)
+
+/* Before the very first sample there is no byte. */
+#define CONVERT_S24_3(number) \
+	do { \
+		if (count) { \
+			*out++ = (number)read_s24(p) * (number)(1 / 8388608.0); \
+			p += step; \
+			count--; \
+		} \
+		CONVERT(number, read_s24_after, 1 / 8388608.0); \
+	} while (0)
 
 void frames_to_float(float *out, const void *frames, struct frame_format format, unsigned channel, size_t count)
 {
@@ -62,7 +83,8 @@ void frames_to_float(float *out, const void *frames, struct frame_format format,
 
 	switch (format.type) {
 	case SAMPLE_S16: CONVERT(float, read_s16, 1 / 32768.0); break;
-	case SAMPLE_S24_3: case SAMPLE_S24: CONVERT(float, read_s24, 1 / 8388608.0); break;
+	case SAMPLE_S24_3: CONVERT_S24_3(float); break;
+	case SAMPLE_S24: CONVERT(float, read_s24, 1 / 8388608.0); break;
 	case SAMPLE_S32: CONVERT(float, read_s32, 1 / 2147483648.0); break;
 	case SAMPLE_F32: CONVERT(float, read_f32, 1); break;
 	}
@@ -75,7 +97,8 @@ void frames_to_double(double *out, const void *frames, struct frame_format forma
 
 	switch (format.type) {
 	case SAMPLE_S16: CONVERT(double, read_s16, 1 / 32768.0); break;
-	case SAMPLE_S24_3: case SAMPLE_S24: CONVERT(double, read_s24, 1 / 8388608.0); break;
+	case SAMPLE_S24_3: CONVERT_S24_3(double); break;
+	case SAMPLE_S24: CONVERT(double, read_s24, 1 / 8388608.0); break;
 	case SAMPLE_S32: CONVERT(double, read_s32, 1 / 2147483648.0); break;
 	case SAMPLE_F32: CONVERT(double, read_f32, 1); break;
 	}

@@ -289,20 +289,6 @@ static void take_contact(void *context, const struct config *config, const struc
 	snprintf(r->segment, sizeof(r->segment), "%s", segment ? segment : "(the disk refused it)");
 }
 
-/* An interval with the unit that suits it. */
-static const char *interval(char text[32], double s)
-{
-	double size = fabs(s);
-
-	if (size < 1e-4)
-		snprintf(text, 32, "%.1f \xc2\xb5s", s * 1e6);
-	else if (size < 1)
-		snprintf(text, 32, "%.2f ms", s * 1e3);
-	else
-		snprintf(text, 32, "%.3f s", s);
-	return text;
-}
-
 static void say_setting(const struct rehearsal *r)
 {
 	const struct config_expected *e = &r->config.expected[0];
@@ -333,10 +319,10 @@ static int say_outcome(const struct rehearsal *r)
 	       c->expected >= 0 ? r->config.expected[0].source : "an unexpected source", c->snr,
 	       verdict_name(c->verdict));
 	printf("  Contact    %s +- %s, time from %s%s\n", tai_format_utc(text, c->when, 6),
-	       interval(sigma, c->time_quality == TIME_FREE ? c->terms.fit : c->sigma_s),
+	       report_interval(sigma, c->time_quality == TIME_FREE ? c->terms.fit : c->sigma_s),
 	       c->time_quality == TIME_PULSE ? "the pulse" : c->time_quality == TIME_HOST ? "the host clock" : "nowhere",
 	       c->second_confirmed ? "" : " (second unconfirmed)");
-	printf("  Error      %s against the truth: %s\n", interval(error, off),
+	printf("  Error      %s against the truth: %s\n", report_interval(error, off),
 	       good ? "within its uncertainty" : "MORE THAN FOUR TIMES ITS UNCERTAINTY");
 	printf("  Segment    %s (its sidecar beside it ends in .json)\n", r->segment);
 	return good ? EXIT_SUCCESS : STATUS_FAILURE;

@@ -23,6 +23,12 @@ double bank_fit_scale(const struct bank *bank, size_t k)
 	return bank->scale_min * exp((double)k * bank->scale_step);
 }
 
+/* Of the fit grid, for scale k to detect with: the middle of three. */
+static size_t detecting_scale(size_t k)
+{
+	return k * (FIT_SCALES / BANK_SCALES) + 1;
+}
+
 double bank_fit_size(size_t k)
 {
 	return fit_size[k];
@@ -105,7 +111,7 @@ static int make_kind(struct bank *bank, enum contact_kind kind)
 		for (size_t size = 0; size < BANK_SIZES; size++) {
 			struct detecting *d = &bank->detecting[bank->count++];
 
-			d->scale = scale * (FIT_SCALES / BANK_SCALES) + 1;
+			d->scale = detecting_scale(scale);
 			d->size = size;
 			d->what = (struct bank_template){
 				.kind = kind, .scale = bank_fit_scale(bank, d->scale), .size = fit_size[size],
@@ -132,6 +138,11 @@ int bank_create(struct bank **out, const struct detector_settings *settings)
 
 	if (!bank)
 		return -ENOMEM;
+	bank->norms = calloc(CONTACT_KINDS, sizeof(*bank->norms));
+	if (!bank->norms) {
+		free(bank);
+		return -ENOMEM;
+	}
 	gsl_set_error_handler_off();    /* results are looked at */
 	bank->settings = *settings;
 	bank->scale_min = settings->scale_min;
@@ -156,6 +167,7 @@ void bank_destroy(struct bank *bank)
 		return;
 	for (int kind = 0; kind < CONTACT_KINDS; kind++)
 		free(bank->fine[kind]);
+	free(bank->norms);
 	free(bank);
 }
 
@@ -262,31 +274,49 @@ static void weigh_templates(struct bank *bank)
 	}
 }
 
-/* Curvature of rho's autocorrelation over lag and over ln(scale), for bank_alarm_rate(). */
+static double norm_of(const struct bank *bank, const double s[N])
+{
+	double y[N];
+
+	bank_project(bank, s, y);
+	return sqrt(bank_product(s, y));
+}
+
+/* Largest correlation of two templates' rho over the lag between them. */
+static double closeness(const struct bank *bank, enum contact_kind kind, size_t scale, size_t size, size_t other_scale,
+                        size_t other_size)
+{
+	double s[N], y[N], best = 0, norm;
+
+	bank_fine(bank, kind, scale, size, 0, s);
+	bank_project(bank, s, y);
+	norm = sqrt(bank_product(s, y));
+	bank_fine(bank, kind, other_scale, other_size, 0, s);
+	norm *= norm_of(bank, s);
+	for (int lag = -MARGIN * OVERSAMPLING; lag < MARGIN * OVERSAMPLING; lag++) {
+		bank_fine(bank, kind, other_scale, other_size, lag, s);
+		best = fmax(best, bank_product(s, y) / norm);
+	}
+	return fmin(best, 1);
+}
+
+/* How fast rho changes over lag, and how alike neighbouring templates are, for bank_alarm_rate(). */
 static void measure_field(struct bank *bank, enum contact_kind kind)
 {
-	double s[N], near[N], y[N], norm, lag = 0, scale = 0;
-	size_t n = 0;
+	struct field *field = &bank->field[kind];
 
-	for (size_t k = 1; k + 1 < FIT_SCALES; k += 3, n++) {
-		double along, across, near_norm, py[N];
+	for (size_t k = 0; k < BANK_SCALES; k++) {
+		double s[N], near[N], y[N], along;
+		size_t scale = detecting_scale(k);
 
-		bank_fine(bank, kind, k, 0, 0, s);
+		bank_fine(bank, kind, scale, 0, 0, s);
 		bank_project(bank, s, y);
-		norm = sqrt(bank_product(s, y));
-		bank_fine(bank, kind, k, 0, OVERSAMPLING / 2, near);
-		bank_project(bank, near, py);
-		near_norm = sqrt(bank_product(near, py));
-		along = bank_product(near, y) / (norm * near_norm);
-		bank_fine(bank, kind, k + 1, 0, 0, near);
-		bank_project(bank, near, py);
-		near_norm = sqrt(bank_product(near, py));
-		across = bank_product(near, y) / (norm * near_norm);
-		lag += sqrt(2 * fmax(0, 1 - along)) / 0.5;
-		scale += sqrt(2 * fmax(0, 1 - across)) / bank->scale_step;
+		bank_fine(bank, kind, scale, 0, OVERSAMPLING / 2, near);
+		along = bank_product(near, y) / (sqrt(bank_product(s, y)) * norm_of(bank, near));
+		field->lag_speed[k] = sqrt(2 * fmax(0, 1 - along)) / 0.5;
+		field->next_scale[k] = k ? closeness(bank, kind, scale, 0, detecting_scale(k - 1), 0) : 0;
+		field->next_size[k] = closeness(bank, kind, scale, 0, scale, 1);
 	}
-	bank->lag_speed[kind] = lag / (double)n;
-	bank->scale_speed[kind] = scale / (double)n;
 }
 
 int bank_whiten(struct bank *bank, const struct noise_model *noise)
@@ -312,6 +342,8 @@ int bank_whiten(struct bank *bank, const struct noise_model *noise)
 	memcpy(bank->projector, p, sizeof(bank->projector));
 	free(p);
 	bank->columns = columns;
+	for (int kind = 0; kind < CONTACT_KINDS; kind++)
+		bank->norms[kind].known = false;
 	weigh_templates(bank);
 	for (int kind = 0; kind < CONTACT_KINDS; kind++)
 		if (bank->fine[kind])
@@ -321,40 +353,57 @@ int bank_whiten(struct bank *bank, const struct noise_model *noise)
 
 /* ------------------------------------------------------------------ the hot path */
 
-typedef float lanes __attribute__((vector_size(32)));
+typedef float lanes __attribute__((vector_size(16)));
+enum { LANES = 4, TOGETHER = 4 };       /* templates that share each load of the window; two accumulators each */
 
-static float dot(const float *a, const float *b)
+/* rho of TOGETHER templates, weights one after the other. */
+static void dots(const float *weights, const float *window, float *rho)
 {
-	lanes sum[4] = { { 0 } };
-	float total = 0;
+	lanes even[TOGETHER] = { { 0 } }, odd[TOGETHER] = { { 0 } };
 
-	for (int j = 0; j < N; j += 32)
-		for (int k = 0; k < 4; k++) {
-			lanes x, y;
+	for (int j = 0; j < N; j += 2 * LANES) {
+		lanes x0, x1, w0, w1;
 
-			memcpy(&x, a + j + 8 * k, sizeof(x));
-			memcpy(&y, b + j + 8 * k, sizeof(y));
-			sum[k] += x * y;
+		memcpy(&x0, window + j, sizeof(x0));
+		memcpy(&x1, window + j + LANES, sizeof(x1));
+#pragma GCC unroll 4
+		for (int k = 0; k < TOGETHER; k++) {
+			memcpy(&w0, weights + k * N + j, sizeof(w0));
+			memcpy(&w1, weights + k * N + j + LANES, sizeof(w1));
+			even[k] += x0 * w0;
+			odd[k] += x1 * w1;
 		}
-	sum[0] = (sum[0] + sum[1]) + (sum[2] + sum[3]);
-	for (int k = 0; k < 8; k++)
-		total += sum[0][k];
-	return total;
+	}
+#pragma GCC unroll 4
+	for (int k = 0; k < TOGETHER; k++) {
+		even[k] += odd[k];
+		rho[k] = (even[k][0] + even[k][1]) + (even[k][2] + even[k][3]);
+	}
 }
 
 void bank_execute(const struct bank *bank, const float *window, float *rho)
 {
-	for (size_t k = 0; k < bank->count; k++)
-		rho[k] = dot(bank->weights[k], window);
+	/* The templates of a kind, 16, are a multiple of TOGETHER. */
+	for (size_t k = 0; k < bank->count; k += TOGETHER)
+		dots(bank->weights[k], window, rho + k);
+}
+
+/* Share of the second of two templates' passages of u that the first does not pass, r their correlation. */
+static double new_share(double r, double u)
+{
+	return r < 1 ? erf(u * sqrt((1 - r) / (1 + r)) / M_SQRT2) : 0;
 }
 
 double bank_alarm_rate(const struct bank *bank, enum contact_kind kind, double u)
 {
-	/* Two sizes are nearly one: what the second adds was measured with bench_recovery's noise. */
-	static const double sizes = 1.4;
-	double span = log(bank_fit_scale(bank, FIT_SCALES - 1) / bank->scale_min), gauss = exp(-0.5 * u * u);
-	double area = bank->lag_speed[kind] * bank->scale_speed[kind] * span * u / pow(2 * M_PI, 1.5);
-	double edge = bank->lag_speed[kind] / (2 * M_PI);
+	const struct field *field = &bank->field[kind];
+	double sum = 0;
 
-	return sizes * (area + edge) * gauss;
+	for (size_t k = 0; k < BANK_SCALES; k++) {
+		double scale = k ? new_share(field->next_scale[k], u) : 1, size = new_share(field->next_size[k], u);
+
+		/* Of two sizes at a scale; the second counts as far as neither the first nor the next scale has it. */
+		sum += field->lag_speed[k] / (2 * M_PI) * scale * (1 + size);
+	}
+	return sum * exp(-0.5 * u * u);
 }

@@ -16,13 +16,21 @@ enum {
 
 struct detecting { struct bank_template what; size_t scale, size; };
 
+/* The Gaussian field rho is under noise: change per sample of lag, correlation with the scale before, the size after. */
+struct field { double lag_speed[BANK_SCALES], next_scale[BANK_SCALES], next_size[BANK_SCALES]; };
+
+/* s'Ps of the fit grid's templates at five lags, worked out by the first fit after whitening. */
+enum { NORMS = 5 };
+struct norms { bool known; double norm[FIT_SIZES][FIT_SCALES][NORMS]; };
+
 struct bank {
 	struct detector_settings settings;
 	double scale_min, scale_step;   /* of the fit grid; step in ln(scale) */
 	float *fine[CONTACT_KINDS];     /* the fit grid's templates, oversampled; NULL: kind not watched for */
 	size_t count, columns;          /* columns: of the baseline */
 	struct detecting detecting[DETECTING];
-	double lag_speed[CONTACT_KINDS], scale_speed[CONTACT_KINDS];
+	struct field field[CONTACT_KINDS];
+	struct norms *norms;            /* of each kind */
 	float weights[DETECTING][N];
 	double projector[N * N];
 };

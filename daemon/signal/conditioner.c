@@ -21,7 +21,8 @@ const char *measure_name(enum measure measure)
 /* How a measure turns the frames of one series sample into a number. */
 struct measure_method {
 	void (*feed)(struct conditioner *c, const float *x, size_t n);  /* frames of the sample in the making */
-	float (*emit)(struct conditioner *c);                           /* the sample; starts the next */
+	float (*emit)(struct conditioner *c);                           /* the sample, when all have been fed */
+	void (*reset)(struct conditioner *c);                           /* starts a sample */
 };
 
 struct conditioner {
@@ -38,28 +39,28 @@ struct conditioner {
 
 /* ------------------------------------------------------------------ voltage */
 
+static inline float higher(float a, float b)
+{
+	return a > b ? a : b;
+}
+
 static void voltage_feed(struct conditioner *c, const float *x, size_t n)
 {
 	double even = 0, odd = 0;       /* two sums, so that an addition need not wait for the last */
-	float high = 0, low = 0;
+	float limit = 0;
 	size_t k = 0;
 
 	for (; k + 1 < n; k += 2) {
 		even += (double)x[k];
 		odd += (double)x[k + 1];
-		high = x[k] > high ? x[k] : high;
-		low = x[k] < low ? x[k] : low;
-		high = x[k + 1] > high ? x[k + 1] : high;
-		low = x[k + 1] < low ? x[k + 1] : low;
+		limit = higher(higher(fabsf(x[k]), fabsf(x[k + 1])), limit);    /* not a number: the limit stays */
 	}
 	if (k < n) {
 		even += (double)x[k];
-		high = x[k] > high ? x[k] : high;
-		low = x[k] < low ? x[k] : low;
+		limit = higher(fabsf(x[k]), limit);
 	}
 	c->sum += even + odd;
-	/* The highest code of 16 bits is 1 - 2^-15. */
-	c->at_limit |= high >= 0.99996f || low <= -0.99996f;
+	c->at_limit |= limit >= 0.99996f;       /* the highest code of 16 bits is 1 - 2^-15 */
 }
 
 static float voltage_emit(struct conditioner *c)
@@ -67,14 +68,18 @@ static float voltage_emit(struct conditioner *c)
 	double mean = c->sum / c->settings.decimation;
 
 	c->clipped += c->at_limit;
-	c->at_limit = false;
-	c->sum = 0;
 	return isfinite(mean) ? (float)(c->settings.polarity * mean) : NAN;
 }
 
+static void voltage_reset(struct conditioner *c)
+{
+	c->at_limit = false;
+	c->sum = 0;
+}
+
 static const struct measure_method methods[] = {
-	[MEASURE_VOLTAGE] = { voltage_feed, voltage_emit },
-	[MEASURE_AUX] = { NULL, NULL },         /* power, chopped and count: no method yet */
+	[MEASURE_VOLTAGE] = { voltage_feed, voltage_emit, voltage_reset },
+	[MEASURE_AUX] = { NULL, NULL, NULL },   /* power, chopped and count: no method yet */
 };
 
 /* ------------------------------------------------------------------ the frame around them */
@@ -97,6 +102,7 @@ int conditioner_create(struct conditioner **out, const struct conditioner_settin
 	c->settings = *settings;
 	c->method = &methods[settings->measure];
 	c->whole = true;
+	c->method->reset(c);
 	*out = c;
 	return 0;
 }
@@ -114,40 +120,47 @@ uint64_t conditioner_clipped(const struct conditioner *conditioner)
 /* After lost frames: the sample in the making can never be whole; the next begins at a multiple of the decimation. */
 static void restart(struct conditioner *c, uint64_t first)
 {
-	c->method->emit(c);
+	c->method->reset(c);
 	c->filled = (unsigned)(first % c->settings.decimation);
 	c->whole = c->filled == 0;
+}
+
+/* Frames that have been converted, sample by sample. @return samples given */
+static size_t feed_piece(struct conditioner *c, size_t count, float *out)
+{
+	const float *x = c->piece;
+	size_t given = 0, n;
+
+	for (; count; count -= n, x += n) {
+		n = c->settings.decimation - c->filled < count ? c->settings.decimation - c->filled : count;
+		if (c->whole)
+			c->method->feed(c, x, n);
+		c->filled += (unsigned)n;
+		if (c->filled < c->settings.decimation)
+			continue;
+		if (c->whole)
+			out[given++] = c->method->emit(c);
+		c->method->reset(c);
+		c->filled = 0;
+		c->whole = true;
+	}
+	return given;
 }
 
 size_t conditioner_execute(struct conditioner *c, const void *frames, size_t count, uint64_t first, float *out,
                            uint64_t *index)
 {
 	const unsigned char *from = frames;
-	size_t bytes = frame_bytes(c->settings.format), given = 0;
-	unsigned decimation = c->settings.decimation;
+	size_t bytes = frame_bytes(c->settings.format), given = 0, n;
 
 	if (first != c->expected)
 		restart(c, first);
 	c->expected = first + count;
-	*index = (first - c->filled) / decimation + !c->whole;
-	while (count) {
-		size_t n = decimation - c->filled;
-
-		n = n < count ? n : count;
-		n = n < PIECE ? n : PIECE;
-		if (c->whole) {
-			frames_to_float(c->piece, from, c->settings.format, c->settings.column, n);
-			c->method->feed(c, c->piece, n);
-		}
-		c->filled += (unsigned)n;
-		from += n * bytes;
-		count -= n;
-		if (c->filled < decimation)
-			continue;
-		if (c->whole)
-			out[given++] = c->method->emit(c);
-		c->filled = 0;
-		c->whole = true;
+	*index = (first - c->filled) / c->settings.decimation + !c->whole;
+	for (; count; count -= n, from += n * bytes) {
+		n = count < PIECE ? count : PIECE;
+		frames_to_float(c->piece, from, c->settings.format, c->settings.column, n);
+		given += feed_piece(c, n, out + given);
 	}
 	return given;
 }

@@ -20,6 +20,7 @@ enum {
 	MEASURED = 20,                  /* segments from which the noise counts as measured */
 	PENDING = 4,                    /* segments waiting for their verdict */
 	STUCK = 24,                     /* segments refused in a row: then the noise has changed */
+	AFRESH = 8,                     /* segments from which it is measured then */
 	QUEUE = 16,
 };
 
@@ -30,12 +31,23 @@ static const double fringes_gain = 9;
 static const double chi2_sigmas = 4;
 static const float too_large = 1e15f;
 
+/* A window that stands out. */
+struct peak {
+	bool open;
+	float rho;
+	size_t template;
+	uint64_t end;                   /* number after its last sample */
+	double threshold;
+	float window[W];
+};
+
 struct detector {
 	struct detector_settings settings;
 	struct bank *bank;
 	struct noise *noise;
 	double noise_rms, threshold, vigil_base;        /* rms over one T_F; thresholds outside, and at the predicted instant */
-	bool dead;                      /* the series does not move: nothing to detect */
+	bool dead;                      /* the series does not move: nothing to detect until it does */
+	float still;                    /* where it stands then */
 	/* The newest samples: number next - 1 stands at ring[(next - 1) % W] and again W later. */
 	uint64_t next;
 	uint64_t usable;                /* windows that begin before this number hold a missing sample */
@@ -53,13 +65,8 @@ struct detector {
 	size_t next_refresh;
 	/* What is expected. */
 	struct { double centre, sigma; } expected[CONTACT_KINDS];
-	/* The island. */
-	bool open;
-	float best;
-	size_t best_template;
-	uint64_t best_end;              /* number after the last sample of the best window */
-	double best_threshold;
-	float best_window[W];
+	struct peak best;               /* of the island */
+	struct peak earlier;            /* was the best until the flank of a stronger one topped it, half a window later or more */
 	/* Given out by the next call. */
 	size_t queued;
 	struct candidate queue[QUEUE];
@@ -200,6 +207,9 @@ static void refresh_noise(struct detector *d)
 	d->dead = ret == -EDOM;
 	if (ret == 0)
 		take_model(d, &model);
+	if (d->dead)
+		d->still = d->segment[NOISE_SEGMENT - 1] + d->offset;
+	d->segments_refused = 0;
 	d->next_refresh = noise_count(d->noise) < MEASURED ? MEASURED : noise_count(d->noise) < 40 ? 40 : NOISE_KEPT;
 	d->segments_since = 0;
 }
@@ -220,11 +230,17 @@ static void judge_segment(struct detector *d)
 	/* Windows that touch the segment end up to a window after it: three hops of largest values. */
 	for (int k = 0; k < 4; k++)
 		quiet &= d->largest[k] < (float)quiet_rho;
-	if (!quiet && ++d->segments_refused >= STUCK)
-		quiet = true;           /* not an event: the noise is larger than was thought */
-	if (!quiet || !all_finite(d->segment, NOISE_SEGMENT))
+	if (!all_finite(d->segment, NOISE_SEGMENT))
 		return;
-	d->segments_refused = 0;
+	if (!quiet && ++d->segments_refused < STUCK)
+		return;
+	if (!quiet && d->segments_refused == STUCK) {
+		/* Not an event: the noise is larger than was thought.  Measured anew, from whatever comes. */
+		noise_clear(d->noise);
+		d->next_refresh = AFRESH;
+	}
+	if (quiet && d->segments_refused < STUCK)
+		d->segments_refused = 0;
 	noise_add(d->noise, d->segment);
 	d->segments_since++;
 	if (noise_count(d->noise) < NOISE_KEPT ? noise_count(d->noise) >= d->next_refresh : d->segments_since >= NOISE_KEPT)
@@ -286,18 +302,23 @@ static bool worth_keeping(const struct detector *d, const struct bank_fit *fit, 
 	return fit->rho > always_kept && fit->chi2 - fit->freedom < fit->rho * fit->rho;
 }
 
-static void close_island(struct detector *d)
+/*
+ * Whole windows later nothing tops this one any more.  A peak that was topped within the window after it is a contact of its own
+ * if its window holds nothing else: else it was a sidelobe of the stronger one.  A fit at the end of its reach is a
+ * flank of something whose own window is not whole (a gap).
+ */
+static void close_peak(struct detector *d, struct peak *peak, bool topped)
 {
-	const struct bank_template *template = bank_template(d->bank, d->best_template);
-	double window_begin = (double)(d->best_end - W);
+	const struct bank_template *template = bank_template(d->bank, peak->template);
+	double window_begin = (double)(peak->end - W);
 	struct candidate *c = &d->queue[d->queued];
 	struct bank_fit fit;
 	bool marked;
 
-	d->open = false;
-	if (d->queued == QUEUE || !bank_fit(d->bank, d->best_window, template->kind, &fit))
+	peak->open = false;
+	if (d->queued == QUEUE || !bank_fit(d->bank, peak->window, template->kind, &fit))
 		return;
-	if (fit.rho < d->best_threshold || !worth_keeping(d, &fit, &marked))
+	if (fit.flank || fit.rho < peak->threshold || !worth_keeping(d, &fit, &marked) || (topped && marked))
 		return;
 	*c = (struct candidate){
 		.kind = template->kind, .position = window_begin + fit.contact, .position_sigma = fit.contact_sigma,
@@ -305,21 +326,31 @@ static void close_island(struct detector *d)
 		.baseline = fit.baseline + (double)d->offset, .chi2_excess = fit.chi2 / fit.freedom, .marked = marked,
 		.fringe_gain = fit.fringe_gain,
 		.verdict = fit.fringe_gain > fringes_gain ? VERDICT_FRINGES : VERDICT_STEP,
-		.noise_prior = noise_count(d->noise) < MEASURED, .threshold = d->best_threshold,
+		.noise_prior = noise_count(d->noise) < MEASURED, .threshold = peak->threshold,
 	};
 	d->queued++;
 }
 
+static void close_all(struct detector *d)
+{
+	if (d->earlier.open)
+		close_peak(d, &d->earlier, true);
+	if (d->best.open)
+		close_peak(d, &d->best, false);
+}
+
 static void consider(struct detector *d, const float *window, float rho, size_t k, double threshold)
 {
-	if (d->open && rho <= d->best)
+	if (d->best.open && rho <= d->best.rho)
 		return;
-	d->open = true;
-	d->best = rho;
-	d->best_template = k;
-	d->best_end = d->next;
-	d->best_threshold = threshold;
-	memcpy(d->best_window, window, sizeof(d->best_window));
+	if (d->best.open && !d->earlier.open && d->next >= d->best.end + W / 2)
+		d->earlier = d->best;
+	d->best.open = true;
+	d->best.rho = rho;
+	d->best.template = k;
+	d->best.end = d->next;
+	d->best.threshold = threshold;
+	memcpy(d->best.window, window, sizeof(d->best.window));
 }
 
 /* One window, the newest W samples. @return the largest rho */
@@ -365,8 +396,10 @@ static void take_sample(struct detector *d, float x)
 		d->usable = d->next;
 	if (!d->dead && d->next >= W && d->next - W >= d->usable)
 		largest = look(d);
-	if (d->open && d->next >= d->best_end + W)
-		close_island(d);
+	if (d->earlier.open && d->next >= d->earlier.end + W)
+		close_peak(d, &d->earlier, true);
+	if (d->best.open && d->next >= d->best.end + W)
+		close_peak(d, &d->best, false);
 	note_sample(d, missing ? NAN : x, largest);
 }
 
@@ -397,6 +430,7 @@ static void start(struct detector *d)
 		take_model(d, &model);
 	else
 		d->dead = true;
+	d->still = d->history[d->held - 1];
 	noise_clear(d->noise);          /* these segments come again, with their verdict */
 	d->next_refresh = MEASURED;
 	for (size_t k = 0; k < d->held; k++)
@@ -407,9 +441,9 @@ static void begin_run(struct detector *d, uint64_t index)
 {
 	if (!d->started && d->held)
 		start(d);
-	if (d->open)
-		close_island(d);
+	close_all(d);
 	d->next = d->usable = index;
+	d->held = 0;
 	restart_noise_segments(d);
 }
 
@@ -421,6 +455,21 @@ static size_t give(struct detector *d, struct candidate *out, size_t max)
 	d->queued -= n;
 	memmove(d->queue, d->queue + n, d->queued * sizeof(*d->queue));
 	return n;
+}
+
+static bool moves(const struct detector *d, float x)
+{
+	return fabsf(x) < too_large && !(fabsf(x - d->still) <= 0);
+}
+
+/* A series that stood still (receiver off) moves: held back and measured like the first. */
+static void wake(struct detector *d)
+{
+	d->dead = d->started = false;
+	d->held = 0;
+	d->usable = d->next;
+	noise_clear(d->noise);
+	restart_noise_segments(d);
 }
 
 static void hold(struct detector *d, float x)
@@ -436,6 +485,8 @@ size_t detector_execute(struct detector *d, const float *series, size_t n, uint6
 	if (n && index != d->next + (d->started ? 0 : d->held))
 		begin_run(d, index);
 	for (size_t k = 0; k < n; k++) {
+		if (d->started && d->dead && moves(d, series[k]))
+			wake(d);
 		if (d->started)
 			take_sample(d, series[k]);
 		else
@@ -448,8 +499,7 @@ size_t detector_finish(struct detector *d, struct candidate *out, size_t max)
 {
 	if (!d->started && d->held)
 		start(d);
-	if (d->open)
-		close_island(d);
+	close_all(d);
 	return give(d, out, max);
 }
 

@@ -11,8 +11,8 @@
 #include "bank_inner.h"
 
 enum {
-	SAMPLES_REACH = 12, LAG_REACH = SAMPLES_REACH * OVERSAMPLING, LAGS = 2 * LAG_REACH + 1, NORMS = 5,
-	ITERATIONS = 4, RAMPS = 6, RAMP_REACH = 48,
+	SAMPLES_REACH = 12, LAG_REACH = SAMPLES_REACH * OVERSAMPLING, LAGS = 2 * LAG_REACH + 1, 
+	ITERATIONS = 4, RAMPS = 6, RAMP_REACH = 48, RAMP_NORMS = 12,     /* half samples */
 };
 
 static const double significant = 9;            /* of rho^2: three sigma for one parameter */
@@ -47,11 +47,15 @@ static double norm_at(const double norm[NORMS], int lag)
 
 static void fill_grid(const struct bank *bank, enum contact_kind kind, const double p[N], struct grid *grid)
 {
-	double s[N], norm[NORMS];
+	struct norms *norms = &bank->norms[kind];
+	double s[N];
 
 	for (size_t size = 0; size < FIT_SIZES; size++)
 		for (size_t scale = 0; scale < FIT_SCALES; scale++) {
-			template_norms(bank, kind, scale, size, norm);
+			double *norm = norms->norm[size][scale];
+
+			if (!norms->known)
+				template_norms(bank, kind, scale, size, norm);
 			for (int lag = -LAG_REACH; lag <= LAG_REACH; lag++) {
 				double product;
 
@@ -61,6 +65,7 @@ static void fill_grid(const struct bank *bank, enum contact_kind kind, const dou
 					product > 0 ? product * product / fmax(norm_at(norm, lag), 1e-300) : 0;
 			}
 		}
+	norms->known = true;
 }
 
 static double scale_penalty(const struct bank *bank, double scale)
@@ -283,40 +288,69 @@ static double ramp(double t, double length)
 
 static void sample_ramp(const struct bank *bank, enum contact_kind kind, double contact, double length, double s[N])
 {
-	double low_pass = bank->settings.curve.low_pass_s * bank->settings.rate, decay = 0, state;
+	double low_pass = bank->settings.curve.low_pass_s * bank->settings.rate, decay = 0, state, level;
+	double leak = 1 - exp(-2 * M_PI * bank->settings.curve.high_pass_hz / bank->settings.rate);
 
 	if (low_pass > 0)
 		decay = exp(-1 / low_pass);
-	length = fmax(length, 1);       /* the series' integrate-and-dump */
-	state = kind == CONTACT_EMERSION ? 0 : 1;
+	/* The series' integrate-and-dump, or the detector's longer one. */
+	length = fmax(length, fmax(1, bank->settings.curve.integration_s * bank->settings.rate));
+	state = level = kind == CONTACT_EMERSION ? 0 : 1;
 	for (int j = 0; j < N; j++) {
 		double t = j + 0.5 - contact, x = ramp(kind == CONTACT_EMERSION ? t : -t, length);
 
 		state = decay * state + (1 - decay) * x;
-		s[j] = state;
+		s[j] = state - level;           /* level: what an AC-coupled input has forgotten; 0 or constant without */
+		level += leak * (state - level);
 	}
 }
 
-/* Largest rho^2 of sharp steps and ramps of half to eight T_F near the contact. */
+/* rho^2 of one ramp at one place; `norm` > 0: s'Ps as told, else worked out. */
+static double ramp_gain(const struct bank *bank, enum contact_kind kind, const double p[N], double contact, double length,
+                        double *norm)
+{
+	double s[N], y[N], product;
+
+	sample_ramp(bank, kind, contact, length, s);
+	product = bank_product(s, p);
+	if (!(*norm > 0)) {
+		bank_project(bank, s, y);
+		*norm = bank_product(s, y);
+	}
+	return product > 0 && *norm > 0 ? product * product / *norm : 0;
+}
+
+/* Largest rho^2 of sharp steps and ramps of half to eight T_F near the contact.  s'Ps changes little over lag: straight
+ * lines between every twelfth, and the best place once more exactly. */
 static double best_alternative(const struct bank *bank, enum contact_kind kind, const double p[N], double contact,
                                double scale)
 {
 	static const double length[RAMPS] = { 0, 0.5, 1, 2, 4, 8 };     /* T_F */
-	double s[N], y[N], best = 0, fresnel_samples = N / 16.0 * scale;
+	double best = 0, fresnel_samples = N / 16.0 * scale;
 
-	for (int r = 0; r < RAMPS; r++)
-		for (int lag = -RAMP_REACH; lag <= RAMP_REACH; lag++) {
-			double product, norm;
+	for (int r = 0; r < RAMPS; r++) {
+		double norm = 0, next = 0, most = 0, exact = 0;
+		int at = 0;
 
-			sample_ramp(bank, kind, contact + 0.5 * lag, length[r] * fresnel_samples, s);
-			product = bank_product(s, p);
-			if (!(product > 0))
-				continue;
-			bank_project(bank, s, y);
-			norm = bank_product(s, y);
-			if (norm > 0 && product * product / norm > best)
-				best = product * product / norm;
+		ramp_gain(bank, kind, p, contact - 0.5 * RAMP_REACH, length[r] * fresnel_samples, &next);
+		for (int lag = -RAMP_REACH; lag < RAMP_REACH; lag++) {
+			int part = (lag + RAMP_REACH) % RAMP_NORMS;
+			double here, gain;
+
+			if (part == 0) {
+				norm = next;
+				next = 0;
+				ramp_gain(bank, kind, p, contact + 0.5 * (lag + RAMP_NORMS), length[r] * fresnel_samples, &next);
+			}
+			here = norm + (next - norm) * part / RAMP_NORMS;
+			gain = ramp_gain(bank, kind, p, contact + 0.5 * lag, length[r] * fresnel_samples, &here);
+			if (gain > most) {
+				most = gain;
+				at = lag;
+			}
 		}
+		best = fmax(best, ramp_gain(bank, kind, p, contact + 0.5 * at, length[r] * fresnel_samples, &exact));
+	}
 	return best;
 }
 
@@ -350,6 +384,7 @@ bool bank_fit(const struct bank *bank, const float *window, enum contact_kind ki
 	fill_grid(bank, kind, p, &grid);
 	if (!highest(bank, &grid, &start) || !refine(bank, window, kind, p, &start, out))
 		return false;
+	out->flank = abs(start.lag) == LAG_REACH;
 	use_moments(bank, kind, &grid, &start, out);
 	out->chi2 = bank_product(x, p) - out->rho * out->rho;
 	out->freedom = N - (double)bank->columns - 3;

@@ -93,39 +93,71 @@ static word load_word(const struct ring *ring, size_t k)
 	return atomic_load_explicit(&ring->data[k], memory_order_acquire);
 }
 
+static void store_word(struct ring *ring, size_t k, word w)
+{
+	atomic_store_explicit(&ring->data[k], w, memory_order_release);
+}
+
+/* Bytes of word k from `skip` on, `n` of them: the ends of a stretch. */
+static void part_out(const struct ring *ring, unsigned char *to, size_t k, size_t skip, size_t n)
+{
+	word w = load_word(ring, k);
+
+	memcpy(to, (unsigned char *)&w + skip, n);
+}
+
+static void part_in(struct ring *ring, const unsigned char *from, size_t k, size_t skip, size_t n)
+{
+	word w = load_word(ring, k);
+
+	memcpy((unsigned char *)&w + skip, from, n);
+	store_word(ring, k, w);
+}
+
+/* Bytes up to the next whole word, of `n` from `offset` on. */
+static size_t until_word(size_t offset, size_t n)
+{
+	size_t head = -offset % sizeof(word);
+
+	return head < n ? head : n;
+}
+
 /* Bytes [offset, offset + n) of the ring's memory, which do not wrap. */
 static void copy_out(const struct ring *ring, unsigned char *to, size_t offset, size_t n)
 {
-	size_t k = offset / sizeof(word), skip = offset % sizeof(word);
-	word w;
+	size_t k = offset / sizeof(word), head = until_word(offset, n);
 
-	for (; n; k++, skip = 0) {
-		size_t part = sizeof(word) - skip < n ? sizeof(word) - skip : n;
-
-		w = load_word(ring, k);
-		if (part == sizeof(word))
-			memcpy(to, &w, sizeof(word));
-		else
-			memcpy(to, (unsigned char *)&w + skip, part);
-		to += part;
-		n -= part;
+	if (head) {
+		part_out(ring, to, k++, offset % sizeof(word), head);
+		to += head;
+		n -= head;
 	}
+	for (; n >= sizeof(word); n -= sizeof(word), to += sizeof(word)) {
+		word w = load_word(ring, k++);
+
+		memcpy(to, &w, sizeof(word));
+	}
+	if (n)
+		part_out(ring, to, k, 0, n);
 }
 
 static void copy_in(struct ring *ring, const unsigned char *from, size_t offset, size_t n)
 {
-	size_t k = offset / sizeof(word), skip = offset % sizeof(word);
-	word w;
+	size_t k = offset / sizeof(word), head = until_word(offset, n);
 
-	for (; n; k++, skip = 0) {
-		size_t part = sizeof(word) - skip < n ? sizeof(word) - skip : n;
-
-		w = part == sizeof(word) ? 0 : load_word(ring, k);
-		memcpy((unsigned char *)&w + skip, from, part);
-		atomic_store_explicit(&ring->data[k], w, memory_order_release);
-		from += part;
-		n -= part;
+	if (head) {
+		part_in(ring, from, k++, offset % sizeof(word), head);
+		from += head;
+		n -= head;
 	}
+	for (; n >= sizeof(word); n -= sizeof(word), from += sizeof(word)) {
+		word w;
+
+		memcpy(&w, from, sizeof(word));
+		store_word(ring, k++, w);
+	}
+	if (n)
+		part_in(ring, from, k, 0, n);
 }
 
 /* Where a stretch of `count` frames from `position` wraps: frames up to the end of the memory. */
@@ -148,9 +180,17 @@ static void enter_gap(struct ring *ring, uint64_t position, uint64_t lost)
 	uint64_t n = atomic_load_explicit(&ring->gaps, memory_order_relaxed);
 	uint64_t before = n ? atomic_load_explicit(&ring->gap[(n - 1) % GAPS].lost, memory_order_relaxed) : 0;
 
-	atomic_store_explicit(&ring->gap[n % GAPS].position, position, memory_order_relaxed);
-	atomic_store_explicit(&ring->gap[n % GAPS].lost, before + lost, memory_order_relaxed);
+	atomic_store_explicit(&ring->gap[n % GAPS].position, position, memory_order_release);
+	atomic_store_explicit(&ring->gap[n % GAPS].lost, before + lost, memory_order_release);
 	atomic_store_explicit(&ring->gaps, n + 1, memory_order_release);
+}
+
+/* Gap n, which has been entered. @return false: the table has gone round meanwhile (whoever sees a new entry sees the count before it) */
+static bool look_up_gap(const struct ring *ring, uint64_t n, uint64_t *position, uint64_t *lost)
+{
+	*position = atomic_load_explicit(&ring->gap[n % GAPS].position, memory_order_acquire);
+	*lost = atomic_load_explicit(&ring->gap[n % GAPS].lost, memory_order_acquire);
+	return atomic_load_explicit(&ring->gaps, memory_order_relaxed) - n < GAPS;
 }
 
 static void write_span(struct ring *ring, const unsigned char *frames, size_t count)
@@ -169,9 +209,11 @@ void ring_write(struct ring *ring, const void *frames, size_t count, uint64_t fi
 	const unsigned char *from = frames;
 	size_t most = ring->capacity / 4;       /* at once, so that a reader is never further behind than it can tell */
 
-	if (first > ring->expected)
+	if (first > ring->expected) {
 		enter_gap(ring, atomic_load_explicit(&ring->written, memory_order_relaxed), first - ring->expected);
-	ring->expected = first + count;
+		ring->expected = first;
+	}
+	ring->expected += count;                /* numbers never go back, whatever the intake says */
 	while (count) {
 		size_t n = count < most ? count : most;
 
@@ -205,9 +247,16 @@ size_t ring_room(const struct ring *ring)
 uint64_t ring_head(const struct ring *ring)
 {
 	uint64_t written = atomic_load_explicit(&ring->written, memory_order_acquire);
-	uint64_t n = atomic_load_explicit(&ring->gaps, memory_order_acquire);
+	uint64_t newest = atomic_load_explicit(&ring->gaps, memory_order_acquire), position, lost;
 
-	return written + (n ? atomic_load_explicit(&ring->gap[(n - 1) % GAPS].lost, memory_order_relaxed) : 0);
+	for (uint64_t n = newest; n > 0; n--) {
+		if (!look_up_gap(ring, n - 1, &position, &lost))
+			return ring_head(ring); /* the table has gone round: look again */
+		if (position < written)
+			return written + lost;
+		/* else entered, but its frames were not there yet */
+	}
+	return written;
 }
 
 /* ------------------------------------------------------------------ readers */
@@ -240,38 +289,44 @@ void ring_reader_close(struct ring_reader *reader)
 	free(reader);
 }
 
+static void set_position(struct ring_reader *reader, uint64_t position)
+{
+	atomic_store_explicit(&reader->position, position, memory_order_release);
+}
+
+/* Too many gaps are outstanding, entries may soon be overwritten: gives up the frames before the newer half of them. */
+static void give_up_gaps(struct ring_reader *reader, uint64_t n)
+{
+	uint64_t position = atomic_load_explicit(&reader->position, memory_order_relaxed), at, lost;
+
+	if (!look_up_gap(reader->ring, n - GAPS / 2, &at, &lost))
+		return;                         /* still more have come: the caller tries again */
+	reader->gap = n - GAPS / 2;
+	if (at <= position)
+		return;
+	reader->overrun += at - position;
+	set_position(reader, at);
+}
+
 /* Position of the next gap after the reader's position, or UINT64_MAX; takes gaps at or before it into reader->lost. */
 static uint64_t next_gap(struct ring_reader *reader)
 {
 	const struct ring *ring = reader->ring;
-	uint64_t position = atomic_load_explicit(&reader->position, memory_order_relaxed);
-	uint64_t n = atomic_load_explicit(&ring->gaps, memory_order_acquire);
 
-	if (n - reader->gap > GAPS / 2) {       /* entries may soon be overwritten: give up the frames before the newest */
-		uint64_t at;
+	for (;;) {
+		uint64_t n = atomic_load_explicit(&ring->gaps, memory_order_acquire), at, lost;
 
-		reader->gap = n - GAPS / 2;
-		at = atomic_load_explicit(&ring->gap[reader->gap % GAPS].position, memory_order_relaxed);
-		if (at > position) {
-			reader->overrun += at - position;
-			atomic_store_explicit(&reader->position, at, memory_order_release);
-			position = at;
+		if (n - reader->gap > GAPS / 2)
+			give_up_gaps(reader, n);
+		while (reader->gap < n && look_up_gap(ring, reader->gap, &at, &lost)) {
+			if (at > atomic_load_explicit(&reader->position, memory_order_relaxed))
+				return at;
+			reader->lost = lost;
+			reader->gap++;
 		}
+		if (reader->gap == n)
+			return UINT64_MAX;
 	}
-	for (; reader->gap < n; reader->gap++) {
-		const struct gap *gap = &ring->gap[reader->gap % GAPS];
-		uint64_t at = atomic_load_explicit(&gap->position, memory_order_relaxed);
-
-		if (at > position)
-			return at;
-		reader->lost = atomic_load_explicit(&gap->lost, memory_order_relaxed);
-	}
-	return UINT64_MAX;
-}
-
-static void set_position(struct ring_reader *reader, uint64_t position)
-{
-	atomic_store_explicit(&reader->position, position, memory_order_release);
 }
 
 /* A reader that was overtaken goes on in the middle of what is still there. */
@@ -323,7 +378,7 @@ size_t ring_read(struct ring_reader *reader, void *frames, size_t max, struct ri
 	set_position(reader, position + count);
 	news->first = position + reader->lost;
 	news->lost = news->first - reader->expected;
-	news->overrun = reader->overrun;
+	news->overrun = reader->overrun < news->lost ? reader->overrun : news->lost;    /* ring_skip_to passed over some */
 	reader->overrun = 0;
 	reader->expected = news->first + count;
 	return count;

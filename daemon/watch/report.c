@@ -80,15 +80,16 @@ void report_json(FILE *out, const struct config *config, const struct contact *c
 	free(text);
 }
 
-/* An uncertainty with two figures in the unit that suits it. */
-static const char *spread(char text[32], double sigma)
+const char *report_interval(char text[32], double seconds)
 {
-	if (sigma < 1e-4)
-		snprintf(text, 32, "%.2g \xc2\xb5s", sigma * 1e6);
-	else if (sigma < 0.1)
-		snprintf(text, 32, "%.2g ms", sigma * 1e3);
+	double size = fabs(seconds);
+
+	if (size < 1e-4)
+		snprintf(text, 32, "%.1f \xc2\xb5s", seconds * 1e6);
+	else if (size < 1)
+		snprintf(text, 32, "%.2f ms", seconds * 1e3);
 	else
-		snprintf(text, 32, "%.2g s", sigma);
+		snprintf(text, 32, "%.2f s", seconds);
 	return text;
 }
 
@@ -98,9 +99,9 @@ void report_text(FILE *out, const struct config *config, const struct contact *c
 
 	if (c->time_quality == TIME_FREE)
 		fprintf(out, "%.6f s after the first sample (no traceable time; fit \xc2\xb1 %s)", c->frame_sigma >= 0 ?
-		        tai_difference(c->when, (struct tai){ 0 }) : 0, spread(sigma, c->terms.fit));
+		        tai_difference(c->when, (struct tai){ 0 }) : 0, report_interval(sigma, c->terms.fit));
 	else
-		fprintf(out, "%s \xc2\xb1 %s (time: %s%s)", tai_format_utc(when, c->when, 6), spread(sigma, c->sigma_s),
+		fprintf(out, "%s \xc2\xb1 %s (time: %s%s)", tai_format_utc(when, c->when, 6), report_interval(sigma, c->sigma_s),
 		        time_quality_name(c->time_quality), c->second_confirmed ? "" : ", second unconfirmed");
 	fprintf(out, "  %s of %s  SNR %.1f  %s%s\n", contact_kind_name(c->kind),
 	        c->expected >= 0 ? config->expected[c->expected].source : "an unexpected source", c->snr,

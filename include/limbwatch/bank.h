@@ -50,10 +50,12 @@ const float *bank_weights(const struct bank *bank, size_t k);
 const double *bank_projector(const struct bank *bank);
 
 /**
- * Rate at which the largest rho of noise passes u upwards, per sample, for all templates of one kind: expected number of maxima of a
- * Gaussian random field over lag and ln(scale).
+ * Rate at which the largest rho of noise passes u upwards, per sample, for all templates of one kind: Rice's rate of
+ * each template, exp(-u^2 / 2) / (2 pi) times the rms change of rho per sample, times the share erf(kappa / sqrt(2)), kappa = u
+ * sqrt((1 - r) / (1 + r)), of its passages that its neighbour, correlated by r at the best lag, does not have too.  For
+ * neighbours close together this is the expected Euler characteristic of a field; for far ones, each counts whole.
  *
- * Source: Adler & Taylor, Random Fields and Geometry (2007), chapter 12 (expected Euler characteristic).
+ * Sources: Rice (1945), Bell System Tech. J. 24, 46; Adler & Taylor, Random Fields and Geometry (2007), chapter 12.
  */
 double bank_alarm_rate(const struct bank *bank, enum contact_kind kind, double u);
 
@@ -63,6 +65,7 @@ struct bank_fit {
 	double chi2;                    /* x'Px - rho^2 */
 	double freedom;                 /* its degrees of freedom */
 	double fringe_gain;
+	bool   flank;                   /* best at the end of the lags looked at, 12 samples: the contact is elsewhere */
 };
 
 /** The fit grid, then Gauss-Newton over contact and scale.  Some 50 ms. @return false: no positive flux fits */

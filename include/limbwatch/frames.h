@@ -24,7 +24,8 @@ size_t frame_bytes(struct frame_format format);
  * One channel of interleaved frames as numbers, full scale = 1.
  *
  * @param channel  from 0
- * @param out      count numbers; integers map to [-1, 1), FLOAT is passed through (NaN and infinities too)
+ * @param out      count numbers; integers map to [-1, 1), FLOAT is passed through (NaN and infinities too).  The highest
+ *                 codes of S32 round to 1 in float
  */
 void frames_to_float(float *out, const void *frames, struct frame_format format, unsigned channel, size_t count);
 /** The same in double, which S32 and the pulse channel need. */

@@ -36,5 +36,7 @@ int recorder_describe(const struct config *config, FILE *out);
 /* One contact as one JSON object on one line, and as one line of text. `text` NUL-terminated by the caller's stdio. */
 void report_json(FILE *out, const struct config *config, const struct contact *contact, const char *segment);
 void report_text(FILE *out, const struct config *config, const struct contact *contact, const char *segment);
+/** An interval in the unit that suits it: "-18.8 us", "0.45 ms", "2.10 s". @return text */
+const char *report_interval(char text[32], double seconds);
 
 #endif
