@@ -208,7 +208,7 @@ static void a_power_cut_anywhere_loses_a_second_at_most(void **state)
 	(void)state;
 	log_set_sink(swallow, NULL);
 	calls = calls_of_a_vigil();
-	for (int half = 0; half < 2; half++)
+	for (int survival = 0; survival < SURVIVALS; survival++)
 		for (unsigned k = 0; k < calls; k++, cuts++) {
 			bool ended;
 			uint64_t taken, kept;
@@ -216,17 +216,42 @@ static void a_power_cut_anywhere_loses_a_second_at_most(void **state)
 			memory_disk_reset();
 			memory_disk_fail(k, EIO, true);
 			taken = record(&ended);
-			memory_disk_reboot(half);
+			memory_disk_reboot((enum survival)survival);
 			assert_true(segment_repair(&disk_memory, "/d") >= 0);
 			kept = take_stock(&unreadable);
 			if (taken > kept && taken - kept > most)
 				most = taken - kept;
 		}
 	log_set_sink(NULL, NULL);
-	print_message("# power cut at each of %u disk calls, unsynced data forgotten or half of them: %u cuts, most lost %.3f s, "
+	print_message("# power cut at each of %u disk calls, the unsynced forgotten, or half of the data or the names kept: %u cuts, most lost %.3f s, "
 	              "unreadable %u\n", calls, cuts, (double)most / RATE, unreadable);
 	assert_int_equal(unreadable, 0);
 	assert_true(most <= RATE + BLOCK);
+}
+
+/* One vigil cut short, and its repair cut short at each of its calls and done again. */
+static void cut_repairs(unsigned cut, enum survival survival, unsigned *unreadable)
+{
+	uint64_t whole = 0;
+	bool ended, repaired = false;
+
+	for (unsigned k = 0; !repaired && k < 200; k++) {
+		uint64_t kept;
+
+		memory_disk_reset();
+		memory_disk_fail(cut, EIO, true);
+		record(&ended);
+		memory_disk_reboot(survival);
+		memory_disk_fail(memory_disk_calls() + k, EIO, true);
+		repaired = segment_repair(&disk_memory, "/d") >= 0;
+		memory_disk_reboot(survival);
+		assert_true(segment_repair(&disk_memory, "/d") >= 0);
+		kept = take_stock(unreadable);
+		if (k == 0)
+			whole = kept;
+		assert_int_equal(kept, whole);
+	}
+	assert_true(repaired);
 }
 
 static void a_power_cut_during_repair_is_repaired_by_the_next(void **state)
@@ -236,29 +261,9 @@ static void a_power_cut_during_repair_is_repaired_by_the_next(void **state)
 	(void)state;
 	log_set_sink(swallow, NULL);
 	calls = calls_of_a_vigil();
-	for (unsigned cut = calls / 5; cut < calls; cut += calls / 5) {
-		uint64_t whole = 0;
-
-		for (unsigned k = 0; k < 200; k++) {
-			bool ended, repaired;
-			uint64_t kept;
-
-			memory_disk_reset();
-			memory_disk_fail(cut, EIO, true);
-			record(&ended);
-			memory_disk_reboot(false);
-			memory_disk_fail(memory_disk_calls() + k, EIO, true);
-			repaired = segment_repair(&disk_memory, "/d") >= 0;
-			memory_disk_reboot(false);
-			assert_true(segment_repair(&disk_memory, "/d") >= 0);
-			kept = take_stock(&unreadable);
-			if (k == 0)
-				whole = kept;
-			assert_int_equal(kept, whole);
-			if (repaired)
-				break;
-		}
-	}
+	for (unsigned cut = calls / 9; cut < calls; cut += calls / 9)
+		for (int survival = 0; survival < SURVIVALS; survival++)
+			cut_repairs(cut, (enum survival)survival, &unreadable);
 	log_set_sink(NULL, NULL);
 	assert_int_equal(unreadable, 0);
 }

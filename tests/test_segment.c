@@ -165,7 +165,7 @@ static void a_repaired_file_is_the_one_that_would_have_been_closed(void **state)
 			assert_int_equal(segment_write(segment, frames + frame_bytes(h.format), FRAMES - 1, 70001, 0), 0);
 			memory_disk_fail(memory_disk_calls(), EIO, true);
 			segment_close(segment);
-			memory_disk_reboot(false);
+			memory_disk_reboot(SURVIVE_SYNCED);
 			assert_true(segment_repair(&disk_memory, "/d") >= 0);
 			left = memory_disk_file("a.wav", &again);
 			assert_non_null(left);

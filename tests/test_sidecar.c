@@ -412,7 +412,7 @@ static void a_write_that_fails_leaves_the_old_one(void **state)
 				assert_true(k >= 5);
 				return;
 			}
-			memory_disk_reboot(dead);
+			memory_disk_reboot(dead ? SURVIVE_NAMES : SURVIVE_SYNCED);
 			assert_int_equal(sidecar_read(&out, &disk_memory, path), 0);
 			assert_true(out.clipped == 1 || out.clipped == 2);
 			assert_true(ret < 0 || out.clipped == 2);

@@ -74,10 +74,12 @@ static void *duplicate(const void *from, size_t n)
 	return to;
 }
 
-void memory_disk_reboot(bool half)
+void memory_disk_reboot(enum survival survival)
 {
 	fail_with = 0;
 	memset(files, 0, sizeof(files));
+	if (survival == SURVIVE_NAMES)
+		memcpy(synced_names, names, sizeof(names));
 	memcpy(names, synced_names, sizeof(names));
 	for (int k = 0; k < FILES; k++) {
 		struct content *c = &contents[k];
@@ -86,7 +88,7 @@ void memory_disk_reboot(bool half)
 		if (!c->used)
 			continue;
 		/* What was appended may have reached the disk in part; what was overwritten has not. */
-		if (half && c->size > left) {
+		if (survival == SURVIVE_HALF && c->size > left) {
 			size_t more = (c->size - left) / 2;
 			unsigned char *to = duplicate(c->now, left + more);
 

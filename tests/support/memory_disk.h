@@ -17,8 +17,14 @@ void memory_disk_reset(void);
 unsigned memory_disk_calls(void);
 /** Call number k (from 0) and, when `dead`, all after it fail with -error. */
 void memory_disk_fail(unsigned k, int error, bool dead);
-/** Power comes back: what was not synced is gone; `half`: of unsynced appended data the first half had reached the disk. */
-void memory_disk_reboot(bool half);
+enum survival {
+	SURVIVE_SYNCED,                 /* nothing else */
+	SURVIVE_HALF,                   /* of unsynced appended data the first half too */
+	SURVIVE_NAMES,                  /* names as they were, of content only what was synced */
+};
+enum { SURVIVALS = 3 };
+/** Power comes back: what was not synced is gone, but for what `survival` says. */
+void memory_disk_reboot(enum survival survival);
 /** Content of a file, NULL: no such file. */
 const void *memory_disk_file(const char *name, size_t *size);
 /** Name of file k in the folder, NULL at the end. */
