@@ -346,6 +346,23 @@ static void a_name_that_is_taken_is_left_alone(void **state)
 	assert_int_equal(chunk("a-3.wav", "data", &n)[0], 3);
 }
 
+static void closed_is_closed_though_the_power_fails_at_once(void **state)
+{
+	static int16_t frames[FRAMES];
+	struct segment_header h = header(SAMPLE_S16, 1);
+	struct segment *segment;
+	size_t n;
+
+	(void)state;
+	memory_disk_reset();
+	assert_int_equal(segment_create(&segment, &disk_memory, &h), 0);
+	assert_int_equal(segment_write(segment, frames, FRAMES, 70000, 0), 0);
+	close_well(segment);
+	memory_disk_reboot(SURVIVE_SYNCED);
+	assert_non_null(chunk("a.wav", "data", &n));
+	assert_int_equal(n, FRAMES * 2);
+}
+
 static void what_cannot_be_a_segment_is_refused(void **state)
 {
 	struct segment_header none = header(SAMPLE_S16, 0), many = header(SAMPLE_S16, MAX_CHANNELS + 1);
@@ -374,6 +391,7 @@ int main(void)
 		cmocka_unit_test(an_hour_is_still_a_gap),
 		cmocka_unit_test(a_gap_cut_short_is_noted_as_long_as_it_is),
 		cmocka_unit_test(a_name_that_is_taken_is_left_alone),
+		cmocka_unit_test(closed_is_closed_though_the_power_fails_at_once),
 		cmocka_unit_test(what_cannot_be_a_segment_is_refused),
 	};
 	int failed = cmocka_run_group_tests(tests, NULL, NULL);
