@@ -5,10 +5,13 @@
 #include <stdarg.h>
 #include <stddef.h>
 #include <stdint.h>
+#include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
+#include <time.h>
 #include <cmocka.h>
 #include "limbwatch/fresnel.h"
+#include "limbwatch/log.h"
 #include "limbwatch/synthetic.h"
 
 static struct setting_value values[128];
@@ -26,6 +29,15 @@ static void set(const char *name, double x)
 {
 	value(name)->number = x;
 	value(name)->integer = llround(x);
+}
+
+static char said[256];
+
+static void catch_sentence(void *context, enum log_level level, const char *sentence)
+{
+	(void)context;
+	(void)level;
+	snprintf(said, sizeof(said), "%s", sentence);
 }
 
 static int reset(void **state)
@@ -146,7 +158,10 @@ static void the_truth_names_the_frame_of_the_contact(void **state)
 	assert_true(fabs(truth.frame - 30.5 * 48000 * (1 - 40e-6)) < 1e-5);
 	assert_string_equal(tai_format_utc(text, truth.contact, 3), "2031-04-02T01:23:45.750Z");
 	set("kind", 2);
+	log_set_sink(catch_sentence, NULL);
 	assert_int_equal(synthetic_truth(values, &truth), -EINVAL);
+	log_set_sink(NULL, NULL);
+	assert_non_null(strstr(said, "kind is none"));
 }
 
 static double mean_of(const double *x, size_t n)
@@ -403,6 +418,80 @@ static void a_seed_gives_the_same_night_again_and_another_another(void **state)
 	}
 }
 
+static int64_t monotonic_ns(void)
+{
+	struct timespec t;
+
+	clock_gettime(CLOCK_MONOTONIC, &t);
+	return t.tv_sec * INT64_C(1000000000) + t.tv_nsec;
+}
+
+/* Reads until a block comes. */
+static struct block next_block(struct intake *in)
+{
+	struct block block = { 0 };
+	int ret;
+
+	do
+		ret = intake_synthetic.read(in, &block, 1);     /* shorter than a block lasts: it must say 0 in between */
+	while (ret == 0);
+	assert_int_equal(ret, 1);
+	return block;
+}
+
+static void a_paced_block_comes_when_the_card_has_taken_it(void **state)
+{
+	struct intake *in;
+	struct block first, block;
+	double rate = 8000 * (1 + 1000e-6);
+	int64_t restarted;
+
+	(void)state;
+	set("rate_hz", 8000);
+	set("duration_s", 5);
+	set("real_time_pace", 1);
+	set("clock_error_ppm", 1000);
+	assert_int_equal(intake_synthetic.open(&in, values), 0);
+	assert_true(in->real_time);
+	intake_synthetic.start(in);
+	first = block = next_block(in);
+	for (int k = 0; k < 10; k++) {
+		block = next_block(in);
+		assert_true(fabs((double)(block.host_ns - first.host_ns) - 1e9 * (double)block.first / rate) < 2);
+		assert_true(monotonic_ns() >= block.host_ns + (int64_t)(1e9 * (double)block.count / rate) - 1);
+	}
+	/* Stopped and started it goes on with the next frame, taken from then on. */
+	intake_synthetic.stop(in);
+	restarted = monotonic_ns();
+	intake_synthetic.start(in);
+	first = next_block(in);
+	assert_int_equal(first.first, block.first + block.count);
+	assert_true(first.host_ns >= restarted && first.host_ns <= monotonic_ns());
+	intake_synthetic.close(in);
+}
+
+static void what_does_not_go_together_is_refused_with_a_sentence(void **state)
+{
+	static const struct { const char *name; double x; const char *second; double y; const char *sentence; } cases[] = {
+		{ "rate_hz", 1, "duration_s", 0.1, "duration_s 0.1 is too short for one frame at rate_hz 1" },
+		{ "rate_hz", 500, "pulse", 1, "rate_hz is 500; a pulse needs at least 1000" },
+		{ "diameter_mas", 3e6, "aperture_m", 0, "the event's settings do not go together" },
+	};
+	struct intake *in;
+
+	(void)state;
+	log_set_sink(catch_sentence, NULL);
+	for (size_t k = 0; k < 3; k++) {
+		settings_fallbacks(intake_synthetic.settings, values);
+		set(cases[k].name, cases[k].x);
+		set(cases[k].second, cases[k].y);
+		said[0] = '\0';
+		assert_int_equal(intake_synthetic.open(&in, values), -EINVAL);
+		assert_non_null(strstr(said, cases[k].sentence));
+	}
+	log_set_sink(NULL, NULL);
+}
+
 int main(void)
 {
 	const struct CMUnitTest tests[] = {
@@ -418,6 +507,8 @@ int main(void)
 		cmocka_unit_test_setup(an_ac_coupled_pulse_sags, reset),
 		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
 		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
+		cmocka_unit_test_setup(a_paced_block_comes_when_the_card_has_taken_it, reset),
+		cmocka_unit_test_setup(what_does_not_go_together_is_refused_with_a_sentence, reset),
 	};
 
 	return cmocka_run_group_tests(tests, NULL, NULL);

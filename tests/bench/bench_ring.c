@@ -1,7 +1,8 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
- * What a frame costs on its way from the intake to the series: one line per case, nanoseconds per call (median of the rounds,
- * and the middle half of them) and per frame.  With a case's number as argument it runs that case alone and once, for callgrind.
+ * What a frame costs on its way from the intake to the series: one line per case, nanoseconds of processor time per call
+ * (median of the rounds, and the middle half of them) and per frame.  bench_ring CASE CALLS runs one case, counted from 0,
+ * that often and prints nothing: for callgrind, which is to see two numbers of calls and take the difference.
  */
 #include <math.h>
 #include <stdio.h>
@@ -148,7 +149,7 @@ static double now_ns(void)
 {
 	struct timespec t;
 
-	clock_gettime(CLOCK_MONOTONIC, &t);
+	clock_gettime(CLOCK_THREAD_CPUTIME_ID, &t);
 	return (double)t.tv_sec * 1e9 + (double)t.tv_nsec;
 }
 
