@@ -46,6 +46,7 @@ struct detector {
 	struct bank *bank;
 	struct noise *noise;
 	double noise_rms, threshold, vigil_base;        /* rms over one T_F; thresholds outside, and at the predicted instant */
+	size_t noise_segments;          /* the model in force was told from so many */
 	bool dead;                      /* the series does not move: nothing to detect until it does */
 	float still;                    /* where it stands then */
 	/* The newest samples: number next - 1 stands at ring[(next - 1) % W] and again W later. */
@@ -93,6 +94,21 @@ static double solve_threshold(const struct detector *d, const bool kinds[CONTACT
 	return high;
 }
 
+/*
+ * Noise told from few segments is sometimes told too small, and rho is then too large by the same factor: the threshold
+ * allows for it until NOISE_KEPT segments count, from when on the alarm rate was measured.  Half of 1 / sqrt(segments) is
+ * the spread of rho's scale where it is worst, at the lowest frequencies, of which a template holds most.
+ */
+static double ignorance(const struct detector *d)
+{
+	double segments = (double)d->noise_segments;
+
+	/* A clip of a few segments is over before it can alarm, and its event is in its noise. */
+	if (d->noise_segments < STARTUP / HOP - 1)
+		return 1;
+	return 1 + 0.5 * (1 / sqrt(segments) - 1 / sqrt(NOISE_KEPT));
+}
+
 static void set_thresholds(struct detector *d)
 {
 	static const bool both[CONTACT_KINDS] = { true, true };
@@ -103,7 +119,7 @@ static void set_thresholds(struct detector *d)
 	d->vigil_base = d->settings.threshold;
 	if (d->settings.threshold > 0)
 		return;
-	d->threshold = solve_threshold(d, both, d->settings.false_alarms_per_night / samples);
+	d->threshold = ignorance(d) * solve_threshold(d, both, d->settings.false_alarms_per_night / samples);
 	for (int kind = 0; kind < CONTACT_KINDS; kind++)
 		if (d->expected[kind].sigma > 0) {
 			kinds[kind] = true;
@@ -111,7 +127,8 @@ static void set_thresholds(struct detector *d)
 		}
 	/* Alarms all over the vigil: rate(u0) * width, when u^2 = u0^2 + z^2 follows the Gaussian prior. */
 	if (width > 0)
-		d->vigil_base = fmin(d->threshold, solve_threshold(d, kinds, d->settings.false_alarms_per_vigil / width));
+		d->vigil_base = fmin(d->threshold, ignorance(d) *
+		                     solve_threshold(d, kinds, d->settings.false_alarms_per_vigil / width));
 }
 
 /* Threshold for a contact of that kind at that place. */
@@ -169,6 +186,7 @@ static void take_model(struct detector *d, const struct noise_model *model)
 		for (int j = 0; j < n; j++)
 			sum += model->covariance[abs(i - j)];
 	d->noise_rms = sqrt(fmax(sum, 0)) / n;
+	d->noise_segments = noise_count(d->noise);
 	set_thresholds(d);
 }
 
