@@ -1,10 +1,13 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
  * Blocks of about a millisecond are screened by their largest difference over a few frames; where it stands far above
- * what is usual, the edge is located: levels before and after are followed to the edge by parabolas (an AC-coupled
- * pulse sags), and the instant is where the band-limited signal, rebuilt between frames by a windowed sinc (Shannon 1949, Proc. IRE
+ * what is usual, the edge is located: levels before and after are followed to the edge (an AC-coupled pulse sags), and the
+ * instant is where the band-limited signal, rebuilt between frames by a windowed sinc (Shannon 1949, Proc. IRE
  * 37, 10), passes half way.  For an edge of the full band the slope there is nearly all the information the samples hold:
  * a fit of the whole edge would gain 5%.
+ *
+ * How the level bends toward the edge is alike in all pulses, so it is taken from the average of those before: a parabola
+ * through one pulse's own noisy samples, followed beyond them, would cost as much again as the crossing itself.
  *
  * A leading edge is followed by the opposite one within half a second; what is not a pulse after all is the frame
  * clock's to judge.
@@ -19,22 +22,35 @@
 enum {
 	LAG = 2,                        /* the screening difference is x[k + LAG] - x[k - LAG] */
 	SINC = 24,                      /* half width of the interpolation */
-	INNER = 8, OUTER = 64,          /* frames from the edge where levels are taken */
+	INNER = 8, OUTER = 64,          /* frames from the edge where levels are taken, at most */
+	OUTER_LEAST = 20,
 	REACH = OUTER + SINC + 8,       /* frames needed on both sides of a block */
 	EDGES = 64,                     /* held until their opposite comes */
 	CHUNK = 4096,
 	LEVEL_POINTS = OUTER - INNER,
+	SHAPE_PULSES = 4, SHAPE_MEMORY = 64,    /* the average bend counts from so many pulses on; and looks back so far */
+	SHAPE_MISFITS = 8,              /* so many in a row that do not fit: it is learnt anew */
 };
 
 static const double screening = 4;              /* times the usual largest difference of a block */
 static const double least_difference = 2e-5;    /* full scale = 1: below this nothing is a pulse */
 static const double widest_s = 0.5;
+static const double half_second_s = 0.45;       /* a pulse this long cannot be told from its pause */
+static const double level_s = 0.002;            /* levels are taken within this: an AC-coupled pulse sags in 8 ms at 20 Hz */
 
 struct edge { double frame, sigma, height; bool opposed; };
+
+/* One side of an edge: mean level, and the parabola's value and slope (per `outer` frames) at the edge. */
+struct side { double mean, value, slope, variance; };
+
+/* How edges of one direction bend: (value - mean) / height and slope / height of both sides, averaged. */
+struct shape { unsigned pulses, misfits; double bend[2], slope[2]; };
 
 struct pulse_detector {
 	struct pulse_settings settings;
 	size_t block;                   /* frames screened at once */
+	int outer, points;              /* levels: frames from the edge, and their number */
+	double extreme;                 /* median of the largest of `block` differences over the rms of one sample */
 	double usual;                   /* median of the blocks' largest difference, tracked */
 	unsigned blocks;
 	/* Samples [base, base + filled); everything before `screened` has been looked at. */
@@ -46,6 +62,8 @@ struct pulse_detector {
 	double newest;                  /* frame of the newest edge, so that none is found twice */
 	double weight[LEVEL_POINTS], weights;   /* of the level points, and their sum */
 	double parabola[3][LEVEL_POINTS];       /* coefficients from the level points; see make_parabola() */
+	double mean_noise, value_noise; /* variance of the weighted mean and of the parabola at the edge in unit noise */
+	struct shape shape[2];          /* falling, rising */
 };
 
 /*
@@ -56,8 +74,8 @@ static void make_parabola(struct pulse_detector *d)
 {
 	double m[3][6] = { { 0 } };
 
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double u = (INNER + k + 0.5) / OUTER, power[3] = { 1, u, u * u }, s = sin(M_PI * (k + 0.5) / LEVEL_POINTS);
+	for (int k = 0; k < d->points; k++) {
+		double u = (INNER + k + 0.5) / d->outer, power[3] = { 1, u, u * u }, s = sin(M_PI * (k + 0.5) / d->points);
 
 		d->weight[k] = s * s;
 		d->weights += s * s;
@@ -80,11 +98,41 @@ static void make_parabola(struct pulse_detector *d)
 		}
 	}
 	for (int i = 0; i < 3; i++)
-		for (int k = 0; k < LEVEL_POINTS; k++) {
-			double u = (INNER + k + 0.5) / OUTER;
+		for (int k = 0; k < d->points; k++) {
+			double u = (INNER + k + 0.5) / d->outer;
 
 			d->parabola[i][k] = d->weight[k] * (m[i][3] + m[i][4] * u + m[i][5] * u * u);
 		}
+	for (int k = 0; k < d->points; k++) {
+		d->mean_noise += pow(d->weight[k] / d->weights, 2);
+		d->value_noise += d->parabola[0][k] * d->parabola[0][k];
+	}
+}
+
+/* Half of all blocks of white noise have no difference above m sqrt(2) times its rms: erf(m / sqrt(2))^block = 1/2. */
+static double extreme_of(size_t block)
+{
+	double low = 0, high = 10;
+
+	for (int k = 0; k < 60; k++) {
+		double m = 0.5 * (low + high);
+
+		if (pow(erf(m * M_SQRT1_2), (double)block) < 0.5)
+			low = m;
+		else
+			high = m;
+	}
+	return M_SQRT2 * low;
+}
+
+/* Levels are taken near the edge, and within the pulse. */
+static int outer_of(const struct pulse_settings *settings)
+{
+	double outer = fmin(OUTER, fmax(OUTER / 2, settings->rate * level_s));
+
+	if (settings->width_s > 0)
+		outer = fmin(outer, settings->rate * settings->width_s - INNER);
+	return (int)fmax(outer, OUTER_LEAST);
 }
 
 int pulse_detector_create(struct pulse_detector **out, const struct pulse_settings *settings)
@@ -102,6 +150,9 @@ int pulse_detector_create(struct pulse_detector **out, const struct pulse_settin
 	if (d->block > CHUNK / 4)
 		d->block = CHUNK / 4;
 	d->newest = -INFINITY;
+	d->outer = outer_of(settings);
+	d->points = d->outer - INNER;
+	d->extreme = extreme_of(d->block);
 	make_parabola(d);
 	*out = d;
 	return 0;
@@ -114,29 +165,26 @@ void pulse_detector_destroy(struct pulse_detector *detector)
 
 /* ------------------------------------------------------------------ one edge */
 
-/*
- * Level from the frames INNER to OUTER after (side +1) or before (-1) the middle of frames `at` and `at` + 1, followed to
- * `beyond` frames after that middle; and the residual's variance.
- */
-static double level(const struct pulse_detector *d, const double *x, long at, int side, double beyond, double *variance)
+/* The frames INNER to `outer` after (direction +1) or before (-1) the middle of frames `at` and `at` + 1. */
+static struct side side_of(const struct pulse_detector *d, const double *x, long at, int direction)
 {
-	double value[3] = { 0 }, squares = 0;
+	const double *near = x + at + direction * INNER + (direction > 0 ? 1 : 0);
+	double value[3] = { 0 }, sum = 0, squares = 0;
 
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
+	for (int k = 0; k < d->points; k++) {
+		double y = near[direction * k];
 
+		sum += d->weight[k] * y;
 		for (int i = 0; i < 3; i++)
 			value[i] += d->parabola[i][k] * y;
 	}
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double u = (INNER + k + 0.5) / OUTER;
-		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
-		double r = y - value[0] - value[1] * u - value[2] * u * u;
+	for (int k = 0; k < d->points; k++) {
+		double u = (INNER + k + 0.5) / d->outer;
+		double r = near[direction * k] - value[0] - value[1] * u - value[2] * u * u;
 
 		squares += d->weight[k] * r * r;
 	}
-	*variance = squares / d->weights;
-	return value[0] + value[1] * side * beyond / OUTER;
+	return (struct side){ sum / d->weights, value[0], value[1] * direction, squares / d->weights };
 }
 
 static double interpolate(const double *x, double at)
@@ -180,29 +228,89 @@ static long bracket(const double *x, long at, double half, double sign)
 	return -1;
 }
 
-/* `at`: index of the largest difference. @return false: no edge there after all */
-static bool locate(const struct pulse_detector *d, long at, struct edge *out)
+static double bend(const struct side *side, double height)
 {
-	const double *x = d->x;
-	double variance[2], before, after, sign, beyond = 0, frame = 0;
+	return (side->value - side->mean) / height;
+}
+
+/* Does this edge bend as those before did?  Teaches the average; an edge that does not fit (another is near) is left out. */
+static bool learn(struct pulse_detector *d, struct shape *shape, const struct side side[2], double height, double noise)
+{
+	double slack = 5 * noise / fabs(height) * sqrt(d->value_noise) + 0.002, weight;
+
+	for (int k = 0; k < 2; k++)
+		if (shape->pulses >= SHAPE_PULSES && fabs(bend(&side[k], height) - shape->bend[k]) > slack) {
+			if (++shape->misfits >= SHAPE_MISFITS)
+				*shape = (struct shape){ 0 };
+			return false;
+		}
+	shape->misfits = 0;
+	if (shape->pulses < SHAPE_MEMORY)
+		shape->pulses++;
+	weight = 1.0 / shape->pulses;
+	for (int k = 0; k < 2; k++) {
+		shape->bend[k] += weight * (bend(&side[k], height) - shape->bend[k]);
+		shape->slope[k] += weight * (side[k].slope / height - shape->slope[k]);
+	}
+	return shape->pulses >= SHAPE_PULSES;
+}
+
+/* Value and slope at the edge by the average bend. @return height */
+static double straighten(const struct shape *shape, struct side side[2])
+{
+	double height = (side[1].mean - side[0].mean) / (1 - shape->bend[1] + shape->bend[0]);
+
+	for (int k = 0; k < 2; k++) {
+		side[k].value = side[k].mean + height * shape->bend[k];
+		side[k].slope = height * shape->slope[k];
+	}
+	return height;
+}
+
+/* The level half way of both sides, at the instant itself: the sides slope. @return false: there is no crossing */
+static bool half_way(const struct pulse_detector *d, long at, const struct side side[2], double *frame)
+{
+	double beyond = 0;
 
 	for (int pass = 0; pass < 2; pass++) {
-		long low;
+		double half = 0.5 * (side[0].value + side[1].value + (side[0].slope + side[1].slope) * beyond / d->outer);
+		double sign = side[1].value > side[0].value ? 1 : -1;
+		long low = bracket(d->x, at, half, sign);
 
-		before = level(d, x, at, -1, beyond, &variance[0]);
-		after = level(d, x, at, 1, beyond, &variance[1]);
-		sign = after > before ? 1 : -1;
-		low = bracket(x, at, 0.5 * (before + after), sign);
 		if (low < 0)
 			return false;
-		frame = crossing(x, low, 0.5 * (before + after), sign);
-		beyond = frame - ((double)at + 0.5);
+		*frame = crossing(d->x, low, half, sign);
+		beyond = *frame - ((double)at + 0.5);
 	}
+	return true;
+}
+
+/* `at`: index of the largest difference, `difference` signed. @return false: no edge there after all */
+static bool locate(struct pulse_detector *d, long at, double difference, struct edge *out)
+{
+	struct side side[2] = { side_of(d, d->x, at, -1), side_of(d, d->x, at, 1) };
+	struct shape *shape = &d->shape[difference > 0];
+	double height = side[1].value - side[0].value, frame, level_noise = d->value_noise;
+	double noise = sqrt(0.5 * (side[0].variance + side[1].variance));
+
+	/* An edge stands out of its surroundings and is over in a few frames; a click, a burst or a ripple does not. */
+	if (!(noise < 0.25 * 0.9 * fabs(height)) || !(difference / height > 0.4 && difference / height < 2.5) ||
+	    !half_way(d, at, side, &frame))
+		return false;
+	if (learn(d, shape, side, height, noise)) {
+		double straight = straighten(shape, side);
+
+		if (!half_way(d, at, side, &frame))
+			return false;
+		height = straight;
+		level_noise = d->mean_noise + d->value_noise / shape->pulses;
+	}
+	/* The ripple of the anti-alias filter beside the edge is no noise: it is the same in every pulse. */
+	noise = fmin(noise, d->usual / d->extreme);
 	out->frame = (double)d->base + frame;
-	out->height = after - before;
-	out->sigma = sqrt(0.5 * (variance[0] + variance[1])) / (0.9 * fabs(out->height));
-	/* An edge stands out of its surroundings; a click or a burst does not. */
-	return out->sigma < 0.25;
+	out->height = height;
+	out->sigma = noise * sqrt(1 + 0.5 * level_noise) / (0.9 * fabs(height));
+	return true;
 }
 
 /* ------------------------------------------------------------------ edges into pulses */
@@ -231,12 +339,12 @@ static void keep_edge(struct pulse_detector *d, const struct edge *edge)
 
 static bool leads(const struct pulse_detector *d, const struct edge *e)
 {
-	if (d->settings.polarity && (e->height > 0) != (d->settings.polarity > 0))
-		return false;
-	/* Pulses of half a second lead with either edge: only the setting can tell, or else the rising one is taken. */
-	if (!d->settings.polarity && d->settings.width_s > 0.45)
-		return e->height > 0;
-	return e->opposed;
+	int polarity = d->settings.polarity;
+
+	/* Pulses of half a second could lead with either edge: only the setting can tell, or else the rising one is taken. */
+	if (d->settings.width_s > half_second_s)
+		return (e->height > 0) == (polarity >= 0);
+	return e->opposed && (!polarity || (e->height > 0) == (polarity > 0));
 }
 
 /* Edges old enough to be judged. */
@@ -297,10 +405,10 @@ static void screen(struct pulse_detector *d, size_t from)
 	if (largest > limit && d->blocks > 20) {
 		/* Each local maximum of the difference in the block. */
 		for (long k = 0; k < (long)d->block; k++) {
-			double here = fabs(x[k + LAG] - x[k - LAG]);
+			double difference = x[k + LAG] - x[k - LAG], here = fabs(difference);
 
-			if (here > limit && here >= fabs(x[k + 1 + LAG] - x[k + 1 - LAG]) &&
-			    here > fabs(x[k - 1 + LAG] - x[k - 1 - LAG]) && locate(d, (long)from + k, &edge))
+			if (here > limit && here > 0.5 * largest && here >= fabs(x[k + 1 + LAG] - x[k + 1 - LAG]) &&
+			    here > fabs(x[k - 1 + LAG] - x[k - 1 - LAG]) && locate(d, (long)from + k, difference, &edge))
 				keep_edge(d, &edge);
 		}
 	}
