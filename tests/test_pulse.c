@@ -201,6 +201,7 @@ static void noise_costs_little_more_than_the_bound(void **state)
 		assert_int_equal(r.edges, 200);
 		/* 180 edges: an RMS is known to 5%. */
 		assert_true(r.rms / bound < 1.2 * 1.1 && r.rms / bound > 0.85);
+		assert_true(fabs(r.bias) < 3.5 * r.rms / sqrt(180));     /* edges err independently of each other */
 		assert_true(r.sigma / r.rms > 0.8 && r.sigma / r.rms < 1.25);
 	}
 }

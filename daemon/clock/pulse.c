@@ -6,8 +6,8 @@
  * 37, 10), passes half way.  For an edge of the full band the slope there is nearly all the information the samples hold:
  * a fit of the whole edge would gain 5%.
  *
- * How the level bends toward the edge is alike in all pulses, so it is taken from the average of those before: a parabola
- * through one pulse's own noisy samples, followed beyond them, would cost as much again as the crossing itself.
+ * A level is followed to the edge by a straight line, and bent as an exponential of that slope is (one-pole high-pass).  A free
+ * parabola would do as well without that assumption, but its value at the edge is so noisy that it costs more than the crossing.
  *
  * A leading edge is followed by the opposite one within half a second; what is not a pulse after all is the frame
  * clock's to judge.
@@ -28,8 +28,6 @@ enum {
 	EDGES = 64,                     /* held until their opposite comes */
 	CHUNK = 4096,
 	LEVEL_POINTS = OUTER - INNER,
-	SHAPE_PULSES = 4, SHAPE_MEMORY = 64,    /* the average bend counts from so many pulses on; and looks back so far */
-	SHAPE_MISFITS = 8,              /* so many in a row that do not fit: it is learnt anew */
 };
 
 static const double screening = 4;              /* times the usual largest difference of a block */
@@ -40,11 +38,8 @@ static const double level_s = 0.002;            /* levels are taken within this:
 
 struct edge { double frame, sigma, height; bool opposed; };
 
-/* One side of an edge: mean level, and the parabola's value and slope (per `outer` frames) at the edge. */
-struct side { double mean, value, slope, variance; };
-
-/* How edges of one direction bend: (value - mean) / height and slope / height of both sides, averaged. */
-struct shape { unsigned pulses, misfits; double bend[2], slope[2]; };
+/* One side of an edge: level and slope (per `outer` frames, away from the edge) at the edge. */
+struct side { double value, slope, variance; };
 
 struct pulse_detector {
 	struct pulse_settings settings;
@@ -60,53 +55,43 @@ struct pulse_detector {
 	size_t edges;
 	struct edge edge[EDGES];
 	double newest;                  /* frame of the newest edge, so that none is found twice */
-	double weight[LEVEL_POINTS], weights;   /* of the level points, and their sum */
-	double parabola[3][LEVEL_POINTS];       /* coefficients from the level points; see make_parabola() */
-	double mean_noise, value_noise; /* variance of the weighted mean and of the parabola at the edge in unit noise */
-	struct shape shape[2];          /* falling, rising */
+	double weight[LEVEL_POINTS];    /* of the level points; sum 1 */
+	double tilt[LEVEL_POINTS];      /* slope of the line = sum of tilt * y */
+	double centre;                  /* weighted mean distance of the points, in `outer` */
+	double bow_value, bow_slope;    /* value and slope at the edge of the line fitted to the square of the distance */
+	double level_noise;             /* variance of a level at the edge in unit noise */
 };
 
-/*
- * Rows that give the coefficients of the weighted least-squares parabola through points at INNER + 1/2 ... OUTER - 1/2.  The weights
- * rise and fall smoothly, so that the fast ripple which an anti-alias filter leaves beside an edge averages out.
- */
-static void make_parabola(struct pulse_detector *d)
+static double distance(const struct pulse_detector *d, int point)
 {
-	double m[3][6] = { { 0 } };
+	return (INNER + point + 0.5) / d->outer;
+}
+
+/*
+ * Weighted least-squares line through points at INNER + 1/2 ... outer - 1/2.  The weights rise and fall smoothly, so that the
+ * fast ripple which an anti-alias filter leaves beside an edge averages out.
+ */
+static void make_line(struct pulse_detector *d)
+{
+	double sum = 0, spread = 0, square = 0;
 
 	for (int k = 0; k < d->points; k++) {
-		double u = (INNER + k + 0.5) / d->outer, power[3] = { 1, u, u * u }, s = sin(M_PI * (k + 0.5) / d->points);
-
-		d->weight[k] = s * s;
-		d->weights += s * s;
-		for (int i = 0; i < 3; i++)
-			for (int j = 0; j < 3; j++)
-				m[i][j] += s * s * power[i] * power[j];
+		d->weight[k] = pow(sin(M_PI * (k + 0.5) / d->points), 2);
+		sum += d->weight[k];
 	}
-	for (int i = 0; i < 3; i++)
-		m[i][3 + i] = 1;
-	for (int i = 0; i < 3; i++) {           /* Gauss-Jordan; the matrix is small and positive definite */
-		double pivot = m[i][i];
-
-		for (int j = 0; j < 6; j++)
-			m[i][j] /= pivot;
-		for (int r = 0; r < 3; r++) {
-			double f = m[r][i];
-
-			for (int j = 0; r != i && j < 6; j++)
-				m[r][j] -= f * m[i][j];
-		}
-	}
-	for (int i = 0; i < 3; i++)
-		for (int k = 0; k < d->points; k++) {
-			double u = (INNER + k + 0.5) / d->outer;
-
-			d->parabola[i][k] = d->weight[k] * (m[i][3] + m[i][4] * u + m[i][5] * u * u);
-		}
 	for (int k = 0; k < d->points; k++) {
-		d->mean_noise += pow(d->weight[k] / d->weights, 2);
-		d->value_noise += d->parabola[0][k] * d->parabola[0][k];
+		d->weight[k] /= sum;
+		d->centre += d->weight[k] * distance(d, k);
+		square += d->weight[k] * pow(distance(d, k), 2);
 	}
+	for (int k = 0; k < d->points; k++)
+		spread += d->weight[k] * pow(distance(d, k) - d->centre, 2);
+	for (int k = 0; k < d->points; k++) {
+		d->tilt[k] = d->weight[k] * (distance(d, k) - d->centre) / spread;
+		d->bow_slope += d->tilt[k] * pow(distance(d, k), 2);
+		d->level_noise += pow(d->weight[k] - d->centre * d->tilt[k], 2);
+	}
+	d->bow_value = square - d->centre * d->bow_slope;
 }
 
 /* Half of all blocks of white noise have no difference above m sqrt(2) times its rms: erf(m / sqrt(2))^block = 1/2. */
@@ -153,7 +138,7 @@ int pulse_detector_create(struct pulse_detector **out, const struct pulse_settin
 	d->outer = outer_of(settings);
 	d->points = d->outer - INNER;
 	d->extreme = extreme_of(d->block);
-	make_parabola(d);
+	make_line(d);
 	*out = d;
 	return 0;
 }
@@ -169,22 +154,27 @@ void pulse_detector_destroy(struct pulse_detector *detector)
 static struct side side_of(const struct pulse_detector *d, const double *x, long at, int direction)
 {
 	const double *near = x + at + direction * INNER + (direction > 0 ? 1 : 0);
-	double value[3] = { 0 }, sum = 0, squares = 0;
+	double mean = 0, slope = 0, squares = 0;
 
 	for (int k = 0; k < d->points; k++) {
-		double y = near[direction * k];
-
-		sum += d->weight[k] * y;
-		for (int i = 0; i < 3; i++)
-			value[i] += d->parabola[i][k] * y;
+		mean += d->weight[k] * near[direction * k];
+		slope += d->tilt[k] * near[direction * k];
 	}
 	for (int k = 0; k < d->points; k++) {
-		double u = (INNER + k + 0.5) / d->outer;
-		double r = near[direction * k] - value[0] - value[1] * u - value[2] * u * u;
+		double r = near[direction * k] - mean - slope * (distance(d, k) - d->centre);
 
 		squares += d->weight[k] * r * r;
 	}
-	return (struct side){ sum / d->weights, value[0], value[1] * direction, squares / d->weights };
+	return (struct side){ mean - d->centre * slope, slope, squares };
+}
+
+/* height * exp(-u s) has the slope -height s and the bow height s^2 u^2 / 2, which has tilted the line. */
+static void bend(const struct pulse_detector *d, struct side *side, double height)
+{
+	double bow = side->slope * side->slope / (2 * height);
+
+	side->value -= bow * d->bow_value;
+	side->slope -= bow * d->bow_slope;
 }
 
 static double interpolate(const double *x, double at)
@@ -228,52 +218,13 @@ static long bracket(const double *x, long at, double half, double sign)
 	return -1;
 }
 
-static double bend(const struct side *side, double height)
-{
-	return (side->value - side->mean) / height;
-}
-
-/* Does this edge bend as those before did?  Teaches the average; an edge that does not fit (another is near) is left out. */
-static bool learn(struct pulse_detector *d, struct shape *shape, const struct side side[2], double height, double noise)
-{
-	double slack = 5 * noise / fabs(height) * sqrt(d->value_noise) + 0.002, weight;
-
-	for (int k = 0; k < 2; k++)
-		if (shape->pulses >= SHAPE_PULSES && fabs(bend(&side[k], height) - shape->bend[k]) > slack) {
-			if (++shape->misfits >= SHAPE_MISFITS)
-				*shape = (struct shape){ 0 };
-			return false;
-		}
-	shape->misfits = 0;
-	if (shape->pulses < SHAPE_MEMORY)
-		shape->pulses++;
-	weight = 1.0 / shape->pulses;
-	for (int k = 0; k < 2; k++) {
-		shape->bend[k] += weight * (bend(&side[k], height) - shape->bend[k]);
-		shape->slope[k] += weight * (side[k].slope / height - shape->slope[k]);
-	}
-	return shape->pulses >= SHAPE_PULSES;
-}
-
-/* Value and slope at the edge by the average bend. @return height */
-static double straighten(const struct shape *shape, struct side side[2])
-{
-	double height = (side[1].mean - side[0].mean) / (1 - shape->bend[1] + shape->bend[0]);
-
-	for (int k = 0; k < 2; k++) {
-		side[k].value = side[k].mean + height * shape->bend[k];
-		side[k].slope = height * shape->slope[k];
-	}
-	return height;
-}
-
 /* The level half way of both sides, at the instant itself: the sides slope. @return false: there is no crossing */
 static bool half_way(const struct pulse_detector *d, long at, const struct side side[2], double *frame)
 {
 	double beyond = 0;
 
 	for (int pass = 0; pass < 2; pass++) {
-		double half = 0.5 * (side[0].value + side[1].value + (side[0].slope + side[1].slope) * beyond / d->outer);
+		double half = 0.5 * (side[0].value + side[1].value + (side[1].slope - side[0].slope) * beyond / d->outer);
 		double sign = side[1].value > side[0].value ? 1 : -1;
 		long low = bracket(d->x, at, half, sign);
 
@@ -286,30 +237,25 @@ static bool half_way(const struct pulse_detector *d, long at, const struct side 
 }
 
 /* `at`: index of the largest difference, `difference` signed. @return false: no edge there after all */
-static bool locate(struct pulse_detector *d, long at, double difference, struct edge *out)
+static bool locate(const struct pulse_detector *d, long at, double difference, struct edge *out)
 {
 	struct side side[2] = { side_of(d, d->x, at, -1), side_of(d, d->x, at, 1) };
-	struct shape *shape = &d->shape[difference > 0];
-	double height = side[1].value - side[0].value, frame, level_noise = d->value_noise;
+	double height = side[1].value - side[0].value, frame;
 	double noise = sqrt(0.5 * (side[0].variance + side[1].variance));
 
 	/* An edge stands out of its surroundings and is over in a few frames; a click, a burst or a ripple does not. */
-	if (!(noise < 0.25 * 0.9 * fabs(height)) || !(difference / height > 0.4 && difference / height < 2.5) ||
-	    !half_way(d, at, side, &frame))
+	if (!(noise < 0.25 * 0.9 * fabs(height)) || !(difference / height > 0.4 && difference / height < 2.5))
 		return false;
-	if (learn(d, shape, side, height, noise)) {
-		double straight = straighten(shape, side);
-
-		if (!half_way(d, at, side, &frame))
-			return false;
-		height = straight;
-		level_noise = d->mean_noise + d->value_noise / shape->pulses;
-	}
+	bend(d, &side[0], -height);     /* what sags before a rising edge comes from a falling one */
+	bend(d, &side[1], height);
+	height = side[1].value - side[0].value;
+	if (!half_way(d, at, side, &frame))
+		return false;
 	/* The ripple of the anti-alias filter beside the edge is no noise: it is the same in every pulse. */
 	noise = fmin(noise, d->usual / d->extreme);
 	out->frame = (double)d->base + frame;
 	out->height = height;
-	out->sigma = noise * sqrt(1 + 0.5 * level_noise) / (0.9 * fabs(height));
+	out->sigma = noise * sqrt(1 + 0.5 * d->level_noise) / (0.9 * fabs(height));
 	return true;
 }
 
