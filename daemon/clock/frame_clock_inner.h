@@ -17,7 +17,7 @@ struct node {
 	double k;                       /* whole seconds from the first accepted pulse */
 	double variance, residual;
 	bool accepted, relock;          /* relock: first of a comb found anew */
-	struct state filtered, smoothed;
+	struct state state;             /* filtered forward, then smoothed */
 };
 
 struct label {
@@ -27,13 +27,17 @@ struct label {
 	enum time_quality quality;
 };
 
+/* Where the comb was followed to: the node, its frame and second, and the rate there. */
+struct lock { size_t last; double frame, k, rate; };
+
 struct gap_at { double frame, sigma_s; };
 
 struct frame_clock {
 	struct frame_clock_settings settings;
 	size_t nodes, room;
 	struct node *node;
-	double gap_s, gap_frame, lock_frame;    /* since the newest pulse */
+	double gap_s, gap_frame;        /* since the newest pulse */
+	struct lock lock;
 	size_t gaps;
 	struct gap_at gap_at[FRAME_CLOCK_GAPS];
 	size_t labels;
@@ -52,6 +56,8 @@ struct frame_clock {
 
 /** Seconds from k = 0 at a frame, by the pulses; `sigma` (may be NULL) of the smooth alone. Needs accepted pulses. */
 double clock_seconds(const struct frame_clock *clock, double frame, double *sigma);
+/** Labels older than a node that will be the oldest are moved onto it by the last solution. */
+void carry_labels(struct frame_clock *clock, const struct node *oldest);
 /** Decides which second k = 0 is, and fits the line through the labels. */
 void label_seconds(struct frame_clock *clock);
 
