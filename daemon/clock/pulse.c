@@ -193,20 +193,31 @@ static double interpolate(const double *x, double at)
 	return sum;
 }
 
-/* Where the signal passes `half` between frames low and low + 1. */
-static double crossing(const double *x, long low, double half, double sign)
+/*
+ * Where the signal passes `half` between frames low and low + 1: false position with the Illinois rule (Dowell & Jarratt 1971, BIT
+ * 11, 168), half a dozen evaluations.
+ */
+static double crossing(const double *x, long low, double half)
 {
-	double a = (double)low, b = (double)low + 1;
+	double a = (double)low, b = a + 1, fa = x[low] - half, fb = x[low + 1] - half, at = a;
 
-	for (int k = 0; k < 40; k++) {
-		double middle = 0.5 * (a + b);
+	for (int k = 0; k < 30; k++) {
+		double f, before = at;
 
-		if (sign * (interpolate(x, middle) - half) < 0)
-			a = middle;
-		else
-			b = middle;
+		at = fb == fa ? 0.5 * (a + b) : (a * fb - b * fa) / (fb - fa);
+		f = interpolate(x, at) - half;
+		if (fabs(at - before) < 1e-9 || f == 0)
+			break;
+		if (f * fb < 0) {
+			a = b;
+			fa = fb;
+		} else {
+			fa *= 0.5;
+		}
+		b = at;
+		fb = f;
 	}
-	return 0.5 * (a + b);
+	return at;
 }
 
 /* Low frame of the two between which x passes `half`, within the reach of the screening difference; -1: none. */
@@ -230,7 +241,7 @@ static bool half_way(const struct pulse_detector *d, long at, const struct side 
 
 		if (low < 0)
 			return false;
-		*frame = crossing(d->x, low, half, sign);
+		*frame = crossing(d->x, low, half);
 		beyond = *frame - ((double)at + 0.5);
 	}
 	return true;

@@ -13,7 +13,7 @@
  * them.  Without pulses the labels alone give the time.  One thread at a time.
  *
  * Pulses count once five of them, no two neighbours more than 10 s apart and among 40 edges at most, keep whole seconds at one rate.
- * False lock: random clicks at 0.03 to 8 a second never did it in 1000 simulated days; spikes at a multiple of 8 Hz or more cannot.
+ * False lock: random clicks at 0.03 to 8 a second never did it in 1000 simulated days; spikes that come more than ten times a second cannot.
  */
 struct frame_clock;
 
