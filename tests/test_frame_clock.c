@@ -248,6 +248,42 @@ static void a_gap_of_uncertain_length_is_bridged_by_the_pulses_on_both_sides(voi
 	frame_clock_destroy(c);
 }
 
+static void a_click_after_a_gap_is_not_taken_for_its_end(void **state)
+{
+	struct frame_clock *c = make();
+	struct clock_reading r;
+	double error = 37.25;
+
+	(void)state;
+	pulses(c, 1, 30, 0);
+	frame_clock_add_gap(c, 30.3 * 48000, 48);
+	frame_clock_add_pulse(c, 31.4 * 48000, 0.001);
+	for (int k = 32; k <= 60; k++)
+		frame_clock_add_pulse(c, (k - 0.25) * 48000 + error, 0.001);
+	frame_clock_add_label(c, 0, tai_s(0.25), 0.01, false, TIME_HOST);
+	assert_int_equal(frame_clock_solve(c), 59);
+	assert_true(fabs(tai_difference(read_at(c, 30.25 * 48000).when, tai_s(30.5))) < 1e-6);
+	r = read_at(c, 30.5 * 48000 + error);
+	assert_true(fabs(tai_difference(r.when, tai_s(30.75))) < 1e-6 && r.sigma_s < 1e-6);
+	frame_clock_destroy(c);
+}
+
+/* The first pulse after frames were lost is 15 us late: it goes, the jump of the phase stays. */
+static void a_poor_first_pulse_after_a_loss_does_not_spoil_the_rest(void **state)
+{
+	struct frame_clock *c = make();
+
+	(void)state;
+	pulses(c, 1, 60, 0);
+	for (int k = 61; k <= 120; k++)
+		frame_clock_add_pulse(c, (k - 0.25) * 48000 - 4096 + (k == 61 ? 0.72 : 0), 0.001);
+	frame_clock_add_label(c, 0, tai_s(0.25), 0.01, false, TIME_HOST);
+	assert_int_equal(frame_clock_solve(c), 119);
+	assert_true(fabs(tai_difference(read_at(c, 100 * 48000 - 4096).when, tai_s(100.25))) < 1e-6);
+	assert_true(fabs(tai_difference(read_at(c, 30 * 48000).when, tai_s(30.25))) < 1e-6);
+	frame_clock_destroy(c);
+}
+
 static void frames_lost_in_silence_show_in_the_phase(void **state)
 {
 	struct frame_clock *c = make();
@@ -304,6 +340,25 @@ static void spikes_of_the_mains_never_make_a_comb(void **state)
 		assert_int_equal(frame_clock_solve(c), 0);
 		frame_clock_destroy(c);
 	}
+}
+
+/* The pulse cable comes off: its last pulses drown in clicks that are more than the clock remembers, before it solves again. */
+static void pulses_that_are_forgotten_leave_the_label(void **state)
+{
+	struct frame_clock *c = make();
+	struct clock_reading r;
+
+	(void)state;
+	pulses(c, 1, 60, 0);
+	frame_clock_add_label(c, 0, tai_s(0.25), 0.05, false, TIME_HOST);
+	frame_clock_solve(c);
+	for (int k = 0; k < 60000; k++)
+		frame_clock_add_pulse(c, 61 * 48000 + 777.7 * k, 0.001);
+	r = read_at(c, 100 * 48000);
+	assert_int_equal(r.quality, TIME_HOST);
+	assert_true(fabs(tai_difference(r.when, tai_s(100.25))) < 0.05);
+	assert_int_equal(frame_clock_solve(c), 0);
+	frame_clock_destroy(c);
 }
 
 /* A day and more with the only label at its begin; the card drifts by 30 ppm, the clock remembers 30000 pulses. */
@@ -451,9 +506,12 @@ int main(void)
 		cmocka_unit_test(pulses_without_a_label_still_count_true_seconds),
 		cmocka_unit_test(the_uncertainty_grows_away_from_the_pulses),
 		cmocka_unit_test(a_gap_of_uncertain_length_is_bridged_by_the_pulses_on_both_sides),
+		cmocka_unit_test(a_click_after_a_gap_is_not_taken_for_its_end),
+		cmocka_unit_test(a_poor_first_pulse_after_a_loss_does_not_spoil_the_rest),
 		cmocka_unit_test(frames_lost_in_silence_show_in_the_phase),
 		cmocka_unit_test(clicks_at_random_never_make_a_comb),
 		cmocka_unit_test(spikes_of_the_mains_never_make_a_comb),
+		cmocka_unit_test(pulses_that_are_forgotten_leave_the_label),
 		cmocka_unit_test(the_second_outlives_the_pulses_it_was_told_by),
 		cmocka_unit_test(an_outage_of_hours_does_not_miscount_the_seconds),
 		cmocka_unit_test(labels_tell_how_many_seconds_were_lost_in_silence),

@@ -13,7 +13,7 @@
 #include "frame_clock_inner.h"
 #include "limbwatch/log.h"
 
-enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, SEED_WINDOW = 40, LOCK_PULSES = 5, PASSES = 3 };
+enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, SEED_WINDOW = 40, LOCK_PULSES = 5, PASSES = 4 };
 
 static const double gate_floor_s = 20e-6;       /* a pulse this near its place is never refused by tracking */
 static const double settled_ppm = 5e-6;         /* the rate is known this well after a few pulses */
@@ -21,6 +21,7 @@ static const double longest_outage_s = 900;     /* pulses missing longer: the co
 static const double sparse_s = 10;              /* the first pulses of a comb follow each other within this */
 static const double reject_sigmas = 5;
 static const double found_sigma = 1e-6;
+static const double relock_s = 0.3;              /* any phase of a second */
 /* Random walk of y, variance per second: 1e-11 to 3e-8 per root second.  Common practice for crystals: 1e-10 to 1e-9. */
 static const double walks[] = { 1e-22, 1e-21, 1e-20, 1e-19, 1e-18, 1e-17, 1e-16, 1e-15 };
 enum { WALKS = sizeof(walks) / sizeof(*walks) };
@@ -49,6 +50,14 @@ void frame_clock_destroy(struct frame_clock *clock)
 	free(clock);
 }
 
+static bool any_accepted(const struct frame_clock *c)
+{
+	for (size_t i = 0; i < c->nodes; i++)
+		if (c->node[i].accepted)
+			return true;
+	return false;
+}
+
 /* Room for one more pulse; the oldest quarter goes when the memory is full. */
 static bool make_room(struct frame_clock *c)
 {
@@ -59,6 +68,8 @@ static bool make_room(struct frame_clock *c)
 		carry_labels(c, &c->node[REMEMBERED / 4]);
 		c->nodes -= REMEMBERED / 4;
 		memmove(c->node, c->node + REMEMBERED / 4, c->nodes * sizeof(*c->node));
+		if (!any_accepted(c))
+			c->accepted = 0;
 	}
 	if (c->nodes < c->room)
 		return true;
@@ -98,13 +109,11 @@ void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frame
 /* ------------------------------------------------------------------ the comb */
 
 /* Number of whole seconds from pulse a to pulse b, or 0 when they are not on one comb. */
-static double steps(const struct frame_clock *c, const struct node *a, const struct node *b, double rate,
-                    double tolerance)
+static double steps(const struct node *a, const struct node *b, double gap_s, double rate, double tolerance)
 {
 	double seconds = (b->frame - a->frame) / rate, n = rint(seconds);
-	double gate = tolerance * n + gate_floor_s + 5 * (a->sigma_s + b->sigma_s) + 5 * b->gap_s;
+	double gate = tolerance * n + gate_floor_s + 5 * (a->sigma_s + b->sigma_s) + 5 * gap_s;
 
-	(void)c;
 	return n >= 1 && n <= longest_outage_s && gate < 0.3 && fabs(seconds - n) <= gate ? n : 0;
 }
 
@@ -112,7 +121,7 @@ static double steps(const struct frame_clock *c, const struct node *a, const str
 static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark)
 {
 	struct node *from = &c->node[seed];
-	double rate = c->settings.rate, tolerance = c->settings.rate_tolerance, k = from->k;
+	double rate = c->settings.rate, tolerance = c->settings.rate_tolerance, k = from->k, gap_s = 0;
 	const struct node *first = from;
 	size_t length = 1;
 
@@ -120,8 +129,10 @@ static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark)
 		from->accepted = true;
 	for (size_t i = seed + 1; i < c->nodes && i - seed <= most; i++) {
 		struct node *to = &c->node[i];
-		double n = steps(c, from, to, rate, tolerance);
+		double n;
 
+		gap_s = hypot(gap_s, to->gap_s);        /* the first edge after a gap may be a spurious one */
+		n = steps(from, to, gap_s, rate, tolerance);
 		if (n == 0 || (length < LOCK_PULSES && n > sparse_s)) {
 			if (to->frame - from->frame > longest_outage_s * rate)
 				break;
@@ -134,13 +145,16 @@ static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark)
 			to->k = k;
 		}
 		/* The rate from the last half minute or so: the first pulse of the base moves along. */
-		if (to->gap_s > 0 || k - first->k > 40)
+		if (gap_s > 0)
+			first = to;
+		else if (k - first->k > 40)
 			first = from;
-		if (k - first->k >= 3 && to->gap_s == 0) {
+		if (k - first->k >= 3) {
 			rate = (to->frame - first->frame) / rint((to->frame - first->frame) / rate);
 			tolerance = settled_ppm;
 		}
 		from = to;
+		gap_s = 0;
 	}
 	if (mark)
 		c->lock = (struct lock){ (size_t)(from - c->node), from->frame, from->k, rate };
@@ -222,10 +236,30 @@ static void predict(struct state *s, double dt, double walk, double jump)
 	s->yy += walk * dt;
 }
 
-static double jump_before(const struct node *n)
+/*
+ * How far the phase may have jumped since the accepted pulse before, and where.  A comb found anew says nothing about the phase
+ * of the old one.  What stood before a pulse that was rejected counts for the next.
+ */
+static void gather_jumps(struct frame_clock *c)
 {
-	/* A comb found anew: the phase says nothing about the old one. */
-	return n->relock ? 0.3 : n->gap_s;
+	double jump_s = 0, jump_frame = 0;
+
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (n->gap_s > 0)
+			jump_frame = n->gap_frame;
+		jump_s = hypot(jump_s, n->gap_s);
+		if (n->relock) {
+			jump_s = relock_s;
+			jump_frame = fmax(jump_frame, n->frame);
+		}
+		if (!n->accepted)
+			continue;
+		n->jump_s = jump_s;
+		n->jump_frame = jump_frame;
+		jump_s = jump_frame = 0;
+	}
 }
 
 /*
@@ -280,10 +314,10 @@ static double unlikelihood(const struct frame_clock *c, double walk)
 		} else {
 			double v, total;
 
-			predict(&s, n->k - before->k, walk, jump_before(n));
+			predict(&s, n->k - before->k, walk, n->jump_s);
 			v = measured(c, n) - s.x;
 			total = s.xx + n->variance;
-			if (seen > 3 && n->gap_s == 0 && !n->relock)
+			if (seen > 3 && n->jump_s == 0)
 				sum += v * v / total + log(total);
 			update(&s, measured(c, n), n->variance);
 		}
@@ -327,7 +361,7 @@ static void filter(struct frame_clock *c)
 		if (!before) {
 			start(c, n, &s);
 		} else {
-			predict(&s, n->k - before->k, c->walk, jump_before(n));
+			predict(&s, n->k - before->k, c->walk, n->jump_s);
 			update(&s, measured(c, n), n->variance);
 		}
 		n->state = s;
@@ -350,7 +384,7 @@ static void smooth(struct frame_clock *c)
 		if (after) {
 			dt = after->k - n->k;
 			p = f;
-			predict(&p, dt, c->walk, jump_before(after));
+			predict(&p, dt, c->walk, after->jump_s);
 			det = p.xx * p.yy - p.xy * p.xy;
 			/* G = P F' Pp^-1 */
 			g[0][0] = ((f.xx + dt * f.xy) * p.yy - f.xy * p.xy) / det;
@@ -404,7 +438,7 @@ static double excess(const struct frame_clock *c)
 	return fmax(1, median);
 }
 
-static size_t judge(struct frame_clock *c, double scale, bool reject)
+static size_t measure_residuals(struct frame_clock *c)
 {
 	size_t accepted = 0;
 	double squares = 0;
@@ -415,15 +449,27 @@ static size_t judge(struct frame_clock *c, double scale, bool reject)
 		if (!n->accepted)
 			continue;
 		n->residual = measured(c, n) - n->state.x;
-		if (reject && fabs(n->residual) > reject_sigmas * scale * n->sigma_s) {
-			n->accepted = false;
-			continue;
-		}
 		accepted++;
 		squares += n->residual * n->residual;
 	}
 	c->rms_residual_s = accepted ? sqrt(squares / (double)accepted) : NAN;
 	return accepted;
+}
+
+/* One bad pulse draws the smooth away from its good neighbours: those it took along come back when it is gone. */
+static void choose(struct frame_clock *c, double scale)
+{
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (n->comb && !n->accepted)
+			n->residual = clock_seconds(c, n->frame, NULL) - n->k;
+	}
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		n->accepted = n->comb && fabs(n->residual) <= reject_sigmas * scale * n->sigma_s;
+	}
 }
 
 /* Pulses that were dropped by the smooth still have a residual to be shown. */
@@ -443,26 +489,26 @@ size_t frame_clock_solve(struct frame_clock *c)
 	size_t accepted = 0;
 
 	find_comb(c);
-	for (size_t i = 0; i < c->nodes; i++)
+	for (size_t i = 0; i < c->nodes; i++) {
+		c->node[i].comb = c->node[i].accepted;
 		accepted += c->node[i].accepted;
-	c->accepted = 0;
-	c->rate_found = false;
-	if (accepted >= LOCK_PULSES) {
-		for (int pass = 0; pass < PASSES; pass++) {
-			for (size_t i = 0; i < c->nodes; i++)
-				c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
-			c->walk = likely_walk(c);
-			filter(c);
-			smooth(c);
-			find_rate(c);
-			judge(c, 1, false);
-			scale = excess(c);
-			accepted = judge(c, scale, pass < PASSES - 1);
-			if (accepted < LOCK_PULSES)
-				break;
-		}
-		c->accepted = accepted >= LOCK_PULSES ? accepted : 0;
 	}
+	c->rate_found = false;
+	for (int pass = 0; accepted >= LOCK_PULSES && pass < PASSES; pass++) {
+		for (size_t i = 0; i < c->nodes; i++)
+			c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
+		gather_jumps(c);
+		c->walk = likely_walk(c);
+		filter(c);
+		smooth(c);
+		find_rate(c);
+		measure_residuals(c);
+		scale = excess(c);
+		if (pass < PASSES - 1)
+			choose(c, scale);
+		accepted = measure_residuals(c);
+	}
+	c->accepted = accepted >= LOCK_PULSES ? accepted : 0;
 	if (c->accepted)
 		residuals_of_the_rejected(c);
 	label_seconds(c);

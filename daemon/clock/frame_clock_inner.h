@@ -14,9 +14,11 @@ struct state { double x, y, xx, xy, yy; };
 struct node {
 	double frame, sigma_s;
 	double gap_s, gap_frame;        /* uncertainty of frames lost since the pulse before, and where */
+	double jump_s, jump_frame;      /* the same since the accepted pulse before */
 	double k;                       /* whole seconds from the first accepted pulse */
 	double variance, residual;
-	bool accepted, relock;          /* relock: first of a comb found anew */
+	bool comb, accepted;            /* on a comb of seconds; and near the smooth */
+	bool relock;                    /* first of a comb found anew */
 	struct state state;             /* filtered forward, then smoothed */
 };
 

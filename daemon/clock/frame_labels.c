@@ -113,10 +113,10 @@ static double card_error(const struct frame_clock *c, double frame, double k, do
 	double x;
 
 	neighbours(c, frame, &before, &after);
-	if (before && after && after->gap_s == 0 && !after->relock)
+	if (before && after && after->jump_s == 0)
 		return between(c, before, after, k, variance);
 	/* Frames were lost in between: told from the pulse on the same side of the gap. */
-	if (before && after && frame >= after->gap_frame && after->gap_s > 0)
+	if (before && after && frame >= after->jump_frame)
 		before = NULL;
 	if (before) {
 		x = extrapolate(c, before, k - before->k, variance);

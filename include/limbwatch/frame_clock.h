@@ -12,8 +12,9 @@
  * roughly what time it is); maps any frame by a robust smooth through the accepted pulses, sigma growing away from
  * them.  Without pulses the labels alone give the time.  One thread at a time.
  *
- * Pulses count once five of them, no two neighbours more than 10 s apart and among 40 edges at most, keep whole seconds at one rate.
- * False lock: random clicks at 0.03 to 8 a second never did it in 1000 simulated days; spikes that come more than ten times a second cannot.
+ * Pulses count once five of them, among 40 edges at most and none more than 10 s after the one before, keep whole seconds at one
+ * rate.  False lock: random clicks, 0.03 to 8 a second, never did it in 1000 simulated days; spikes more than ten times a
+ * second cannot.
  */
 struct frame_clock;
 
