@@ -1,8 +1,8 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
- * Pulses are tracked as a comb of whole seconds, then state: the state is the card's accumulated error x (seconds)
- * and its relative frequency error y, y a random walk; Kalman filter forward, Rauch-Tung-Striebel (1965, AIAA J. 3, 1445)
- * backward.  The strength of the walk comes from the pulses, by their likelihood under it.
+ * Pulses on a comb of whole seconds (frame_comb.c) are smoothed: the state is the card's accumulated error x (seconds) and
+ * its relative frequency error y, y a random walk; Kalman filter forward, Rauch-Tung-Striebel (1965, AIAA J. 3,
+ * 1445) backward.  The strength of the walk comes from the pulses, by their likelihood under it.
  *
  * Whole second k (counted from the first accepted pulse) begins at frame F with F / rate = k + x(k).
  */
@@ -13,12 +13,8 @@
 #include "frame_clock_inner.h"
 #include "limbwatch/log.h"
 
-enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, SEED_WINDOW = 40, LOCK_PULSES = 5, PASSES = 4 };
+enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, PASSES = 4 };
 
-static const double gate_floor_s = 20e-6;       /* a pulse this near its place is never refused by tracking */
-static const double settled_ppm = 5e-6;         /* the rate is known this well after a few pulses */
-static const double longest_outage_s = 900;     /* pulses missing longer: the comb is found anew */
-static const double sparse_s = 10;              /* the first pulses of a comb follow each other within this */
 static const double reject_sigmas = 5;
 static const double found_sigma = 1e-6;
 static const double relock_s = 0.3;              /* any phase of a second */
@@ -104,121 +100,6 @@ void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frame
 	if (c->gaps == FRAME_CLOCK_GAPS)
 		memmove(c->gap_at, c->gap_at + 1, --c->gaps * sizeof(*c->gap_at));
 	c->gap_at[c->gaps++] = (struct gap_at){ frame, sigma_frames / c->settings.rate };
-}
-
-/* ------------------------------------------------------------------ the comb */
-
-/* Number of whole seconds from pulse a to pulse b, or 0 when they are not on one comb. */
-static double steps(const struct node *a, const struct node *b, double gap_s, double rate, double tolerance)
-{
-	double seconds = (b->frame - a->frame) / rate, n = rint(seconds);
-	double gate = tolerance * n + gate_floor_s + 5 * (a->sigma_s + b->sigma_s) + 5 * gap_s;
-
-	return n >= 1 && n <= longest_outage_s && gate < 0.3 && fabs(seconds - n) <= gate ? n : 0;
-}
-
-/* Follows the comb that begins at node `seed` through at most `most` nodes; marks them when `mark`. @return length */
-static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark)
-{
-	struct node *from = &c->node[seed];
-	double rate = c->settings.rate, tolerance = c->settings.rate_tolerance, k = from->k, gap_s = 0;
-	const struct node *first = from;
-	size_t length = 1;
-
-	if (mark)
-		from->accepted = true;
-	for (size_t i = seed + 1; i < c->nodes && i - seed <= most; i++) {
-		struct node *to = &c->node[i];
-		double n;
-
-		gap_s = hypot(gap_s, to->gap_s);        /* the first edge after a gap may be a spurious one */
-		n = steps(from, to, gap_s, rate, tolerance);
-		if (n == 0 || (length < LOCK_PULSES && n > sparse_s)) {
-			if (to->frame - from->frame > longest_outage_s * rate)
-				break;
-			continue;
-		}
-		k += n;
-		length++;
-		if (mark) {
-			to->accepted = true;
-			to->k = k;
-		}
-		/* The rate from the last half minute or so: the first pulse of the base moves along. */
-		if (gap_s > 0)
-			first = to;
-		else if (k - first->k > 40)
-			first = from;
-		if (k - first->k >= 3) {
-			rate = (to->frame - first->frame) / rint((to->frame - first->frame) / rate);
-			tolerance = settled_ppm;
-		}
-		from = to;
-		gap_s = 0;
-	}
-	if (mark)
-		c->lock = (struct lock){ (size_t)(from - c->node), from->frame, from->k, rate };
-	return length;
-}
-
-/* The label nearest to a frame, among those before (direction -1) or after it (+1), that is good for telling seconds. */
-static const struct label *near_label(const struct frame_clock *c, double frame, int direction)
-{
-	const struct label *best = NULL;
-
-	for (size_t i = 0; i < c->labels; i++) {
-		const struct label *l = &c->label[i];
-		double away = direction * (l->frame - frame);
-
-		if (away >= 0 && away * c->settings.rate_tolerance < 0.1 * c->settings.rate && l->sigma_s < 0.1 &&
-		    (!best || away < direction * (best->frame - frame)))
-			best = l;
-	}
-	return best;
-}
-
-/* Seconds from the end of the last comb to a pulse: labels see frames that were lost in silence, else the frames count. */
-static double seconds_since_lock(const struct frame_clock *c, double frame)
-{
-	const struct label *before = near_label(c, c->lock.frame, -1), *after = near_label(c, frame, 1);
-
-	if (before && after)
-		return tai_difference(after->when, before->when) - (after->frame - frame) / c->lock.rate -
-			(c->lock.frame - before->frame) / c->lock.rate;
-	return (frame - c->lock.frame) / c->lock.rate;
-}
-
-/* Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */
-static void find_comb(struct frame_clock *c)
-{
-	size_t i = 0;
-	bool any = false;
-
-	for (size_t j = 0; j < c->nodes; j++)
-		c->node[j].accepted = c->node[j].relock = false;
-	while (i < c->nodes) {
-		size_t best = i, length = 0;
-
-		for (size_t seed = i; seed < c->nodes && seed < i + SEED_WINDOW; seed++) {
-			size_t here = follow(c, seed, SEED_WINDOW, false);
-
-			if (here > length) {
-				length = here;
-				best = seed;
-			}
-			if (here >= SEED_WINDOW * 3 / 4)
-				break;
-		}
-		if (length < LOCK_PULSES) {
-			i += SEED_WINDOW / 2;
-			continue;
-		}
-		c->node[best].k = any ? c->lock.k + rint(seconds_since_lock(c, c->node[best].frame)) : 0;
-		c->node[best].relock = any;
-		follow(c, best, c->nodes, true);
-		any = true;
-		i = c->lock.last + 1;
-	}
 }
 
 /* ------------------------------------------------------------------ filter and smoother */
@@ -488,13 +369,13 @@ size_t frame_clock_solve(struct frame_clock *c)
 	double scale = 1;
 	size_t accepted = 0;
 
-	find_comb(c);
+	frame_comb_find(c);
 	for (size_t i = 0; i < c->nodes; i++) {
 		c->node[i].comb = c->node[i].accepted;
 		accepted += c->node[i].accepted;
 	}
 	c->rate_found = false;
-	for (int pass = 0; accepted >= LOCK_PULSES && pass < PASSES; pass++) {
+	for (int pass = 0; accepted >= FRAME_CLOCK_LOCK && pass < PASSES; pass++) {
 		for (size_t i = 0; i < c->nodes; i++)
 			c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
 		gather_jumps(c);
@@ -508,7 +389,7 @@ size_t frame_clock_solve(struct frame_clock *c)
 			choose(c, scale);
 		accepted = measure_residuals(c);
 	}
-	c->accepted = accepted >= LOCK_PULSES ? accepted : 0;
+	c->accepted = accepted >= FRAME_CLOCK_LOCK ? accepted : 0;
 	if (c->accepted)
 		residuals_of_the_rejected(c);
 	label_seconds(c);

@@ -4,9 +4,9 @@
 
 #include "limbwatch/frame_clock.h"
 
-/* What frame_clock.c (pulses) and frame_labels.c (labels, readings) share. */
+/* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth) and frame_labels.c (labels, readings) share. */
 
-enum { FRAME_CLOCK_LABELS = 512, FRAME_CLOCK_GAPS = 256 };
+enum { FRAME_CLOCK_LABELS = 512, FRAME_CLOCK_GAPS = 256, FRAME_CLOCK_LOCK = 5 };
 
 /* The card's accumulated error x, seconds, and relative frequency error y, with their covariance. */
 struct state { double x, y, xx, xy, yy; };
@@ -56,6 +56,8 @@ struct frame_clock {
 	struct tai line_base;
 };
 
+/** Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */
+void frame_comb_find(struct frame_clock *clock);
 /** Seconds from k = 0 at a frame, by the pulses; `sigma` (may be NULL) of the smooth alone. Needs accepted pulses. */
 double clock_seconds(const struct frame_clock *clock, double frame, double *sigma);
 /** Labels older than a node that will be the oldest are moved onto it by the last solution. */
