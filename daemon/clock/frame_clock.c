@@ -1,8 +1,8 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
- * Pulses are tracked as a comb of whole seconds, then smoothed: the state is the card's accumulated error x (seconds)
- * and its relative frequency error y, y a random walk; Kalman filter forward, Rauch-Tung-Striebel (1965, AIAA J. 3, 1445)
- * backward.  The strength of the walk is the one under which the pulses are most likely.
+ * Pulses on a comb of whole seconds (frame_comb.c) are smoothed: the state is the card's accumulated error x (seconds) and
+ * its relative frequency error y, y a random walk; Kalman filter forward, Rauch-Tung-Striebel (1965, AIAA J. 3,
+ * 1445) backward.  The strength of the walk comes from the pulses, by their likelihood under it.
  *
  * Whole second k (counted from the first accepted pulse) begins at frame F with F / rate = k + x(k).
  */
@@ -13,13 +13,11 @@
 #include "frame_clock_inner.h"
 #include "limbwatch/log.h"
 
-enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, SEED_WINDOW = 40, LOCK_PULSES = 5, PASSES = 3 };
+enum { REMEMBERED = 30000, LIKELIHOOD_PULSES = 600, PASSES = 4 };
 
-static const double gate_floor_s = 20e-6;       /* a pulse this near its place is never refused by tracking */
-static const double settled_ppm = 5e-6;         /* the rate is known this well after a few pulses */
-static const double longest_outage_s = 900;     /* pulses missing longer: the comb is found anew */
 static const double reject_sigmas = 5;
 static const double found_sigma = 1e-6;
+static const double relock_s = 0.3;              /* any phase of a second */
 /* Random walk of y, variance per second: 1e-11 to 3e-8 per root second.  Common practice for crystals: 1e-10 to 1e-9. */
 static const double walks[] = { 1e-22, 1e-21, 1e-20, 1e-19, 1e-18, 1e-17, 1e-16, 1e-15 };
 enum { WALKS = sizeof(walks) / sizeof(*walks) };
@@ -48,6 +46,14 @@ void frame_clock_destroy(struct frame_clock *clock)
 	free(clock);
 }
 
+static bool any_accepted(const struct frame_clock *c)
+{
+	for (size_t i = 0; i < c->nodes; i++)
+		if (c->node[i].accepted)
+			return true;
+	return false;
+}
+
 /* Room for one more pulse; the oldest quarter goes when the memory is full. */
 static bool make_room(struct frame_clock *c)
 {
@@ -55,8 +61,11 @@ static bool make_room(struct frame_clock *c)
 	size_t room;
 
 	if (c->nodes == REMEMBERED) {
+		carry_labels(c, &c->node[REMEMBERED / 4]);
 		c->nodes -= REMEMBERED / 4;
 		memmove(c->node, c->node + REMEMBERED / 4, c->nodes * sizeof(*c->node));
+		if (!any_accepted(c))
+			c->accepted = 0;
 	}
 	if (c->nodes < c->room)
 		return true;
@@ -88,98 +97,9 @@ void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frame
 {
 	c->gap_s = hypot(c->gap_s, sigma_frames / c->settings.rate);
 	c->gap_frame = frame;
-	if (c->gaps < FRAME_CLOCK_GAPS)
-		c->gap_at[c->gaps++] = (struct gap_at){ frame, sigma_frames / c->settings.rate };
-}
-
-/* ------------------------------------------------------------------ the comb */
-
-/* Number of whole seconds from pulse a to pulse b, or 0 when they are not on one comb. */
-static double steps(const struct frame_clock *c, const struct node *a, const struct node *b, double rate,
-                    double tolerance)
-{
-	double seconds = (b->frame - a->frame) / rate, n = rint(seconds);
-	double gate = tolerance * n + gate_floor_s + 5 * (a->sigma_s + b->sigma_s) + 5 * b->gap_s;
-
-	(void)c;
-	return n >= 1 && n <= longest_outage_s && gate < 0.3 && fabs(seconds - n) <= gate ? n : 0;
-}
-
-/* Follows the comb that begins at node `seed` through at most `most` nodes; marks them when `mark`. @return length */
-static size_t follow(struct frame_clock *c, size_t seed, size_t most, bool mark, size_t *last)
-{
-	struct node *from = &c->node[seed];
-	double rate = c->settings.rate, tolerance = c->settings.rate_tolerance, k = from->k;
-	const struct node *first = from;
-	size_t length = 1;
-
-	*last = seed;
-	if (mark)
-		from->accepted = true;
-	for (size_t i = seed + 1; i < c->nodes && i - seed <= most; i++) {
-		struct node *to = &c->node[i];
-		double n = steps(c, from, to, rate, tolerance);
-
-		if (n == 0 || (length == 1 && n > 10)) {
-			if (to->frame - from->frame > longest_outage_s * rate)
-				break;
-			continue;
-		}
-		k += n;
-		length++;
-		if (mark) {
-			to->accepted = true;
-			to->k = k;
-		}
-		/* The rate from the last half minute or so: the first pulse of the base moves along. */
-		if (to->gap_s > 0 || k - first->k > 40)
-			first = from;
-		if (k - first->k >= 3 && to->gap_s == 0) {
-			rate = (to->frame - first->frame) / rint((to->frame - first->frame) / rate);
-			tolerance = settled_ppm;
-		}
-		from = to;
-		if (mark)
-			*last = i;
-	}
-	return length;
-}
-
-/* Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */
-static void find_comb(struct frame_clock *c)
-{
-	size_t i = 0, last;
-	double k = 0;
-	bool any = false;
-
-	for (size_t j = 0; j < c->nodes; j++)
-		c->node[j].accepted = false;
-	while (i < c->nodes) {
-		size_t best = i, length = 0;
-
-		for (size_t seed = i; seed < c->nodes && seed < i + SEED_WINDOW; seed++) {
-			size_t here = follow(c, seed, SEED_WINDOW, false, &last);
-
-			if (here > length) {
-				length = here;
-				best = seed;
-			}
-			if (here >= SEED_WINDOW * 3 / 4)
-				break;
-		}
-		if (length < LOCK_PULSES) {
-			i += SEED_WINDOW / 2;
-			continue;
-		}
-		/* A further comb keeps the count of seconds as well as the nominal rate can. */
-		c->node[best].k = any ? rint(k + (c->node[best].frame - c->lock_frame) / c->settings.rate) : 0;
-		c->node[best].relock = any;
-		follow(c, best, c->nodes, true, &last);
-		any = true;
-		k = c->node[last].k;
-		c->lock_frame = c->node[last].frame;
-		i = last + 1;
-	}
+	if (c->gaps == FRAME_CLOCK_GAPS)
+		memmove(c->gap_at, c->gap_at + 1, --c->gaps * sizeof(*c->gap_at));
+	c->gap_at[c->gaps++] = (struct gap_at){ frame, sigma_frames / c->settings.rate };
 }
 
 /* ------------------------------------------------------------------ filter and smoother */
@@ -197,10 +117,30 @@ static void predict(struct state *s, double dt, double walk, double jump)
 	s->yy += walk * dt;
 }
 
-static double jump_before(const struct node *n)
+/*
+ * How far the phase may have jumped since the accepted pulse before, and where.  A comb found anew says nothing about the phase
+ * of the old one.  What stood before a pulse that was rejected counts for the next.
+ */
+static void gather_jumps(struct frame_clock *c)
 {
-	/* A comb found anew: the phase says nothing about the old one. */
-	return n->relock ? 0.3 : n->gap_s;
+	double jump_s = 0, jump_frame = 0;
+
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (n->gap_s > 0)
+			jump_frame = n->gap_frame;
+		jump_s = hypot(jump_s, n->gap_s);
+		if (n->relock) {
+			jump_s = relock_s;
+			jump_frame = fmax(jump_frame, n->frame);
+		}
+		if (!n->accepted)
+			continue;
+		n->jump_s = jump_s;
+		n->jump_frame = jump_frame;
+		jump_s = jump_frame = 0;
+	}
 }
 
 /*
@@ -221,7 +161,7 @@ static void find_rate(struct frame_clock *c)
 	c->rate_found = false;
 	for (size_t i = 0; !c->rate_found && i < c->nodes; i++)
 		if (c->node[i].accepted) {
-			c->first_rate = c->node[i].smoothed.y;
+			c->first_rate = c->node[i].state.y;
 			c->rate_found = true;
 		}
 }
@@ -255,10 +195,10 @@ static double unlikelihood(const struct frame_clock *c, double walk)
 		} else {
 			double v, total;
 
-			predict(&s, n->k - before->k, walk, jump_before(n));
+			predict(&s, n->k - before->k, walk, n->jump_s);
 			v = measured(c, n) - s.x;
 			total = s.xx + n->variance;
-			if (seen > 3 && n->gap_s == 0 && !n->relock)
+			if (seen > 3 && n->jump_s == 0)
 				sum += v * v / total + log(total);
 			update(&s, measured(c, n), n->variance);
 		}
@@ -268,19 +208,25 @@ static double unlikelihood(const struct frame_clock *c, double walk)
 	return sum;
 }
 
+/*
+ * Mean of the logarithm under the likelihoods.  The likeliest one alone jumps with the noise of a few pulses: 15% more error of a
+ * steady card.
+ */
 static double likely_walk(const struct frame_clock *c)
 {
-	double best = INFINITY, walk = walks[0];
+	double u[WALKS], least = INFINITY, sum = 0, mean = 0;
 
 	for (size_t k = 0; k < WALKS; k++) {
-		double u = unlikelihood(c, walks[k]);
-
-		if (u < best) {
-			best = u;
-			walk = walks[k];
-		}
+		u[k] = unlikelihood(c, walks[k]);
+		least = fmin(least, u[k]);
 	}
-	return walk;
+	for (size_t k = 0; k < WALKS; k++) {
+		double weight = exp(0.5 * (least - u[k]));
+
+		sum += weight;
+		mean += weight * log(walks[k]);
+	}
+	return exp(mean / sum);
 }
 
 static void filter(struct frame_clock *c)
@@ -296,10 +242,10 @@ static void filter(struct frame_clock *c)
 		if (!before) {
 			start(c, n, &s);
 		} else {
-			predict(&s, n->k - before->k, c->walk, jump_before(n));
+			predict(&s, n->k - before->k, c->walk, n->jump_s);
 			update(&s, measured(c, n), n->variance);
 		}
-		n->filtered = s;
+		n->state = s;
 		before = n;
 	}
 }
@@ -315,29 +261,29 @@ static void smooth(struct frame_clock *c)
 
 		if (!n->accepted)
 			continue;
-		n->smoothed = f = n->filtered;
+		f = n->state;
 		if (after) {
 			dt = after->k - n->k;
 			p = f;
-			predict(&p, dt, c->walk, jump_before(after));
+			predict(&p, dt, c->walk, after->jump_s);
 			det = p.xx * p.yy - p.xy * p.xy;
 			/* G = P F' Pp^-1 */
 			g[0][0] = ((f.xx + dt * f.xy) * p.yy - f.xy * p.xy) / det;
 			g[0][1] = (-(f.xx + dt * f.xy) * p.xy + f.xy * p.xx) / det;
 			g[1][0] = ((f.xy + dt * f.yy) * p.yy - f.yy * p.xy) / det;
 			g[1][1] = (-(f.xy + dt * f.yy) * p.xy + f.yy * p.xx) / det;
-			ex = after->smoothed.x - p.x;
-			ey = after->smoothed.y - p.y;
-			dxx = after->smoothed.xx - p.xx;
-			dxy = after->smoothed.xy - p.xy;
-			dyy = after->smoothed.yy - p.yy;
-			n->smoothed.x += g[0][0] * ex + g[0][1] * ey;
-			n->smoothed.y += g[1][0] * ex + g[1][1] * ey;
-			n->smoothed.xx += g[0][0] * g[0][0] * dxx + 2 * g[0][0] * g[0][1] * dxy + g[0][1] * g[0][1] * dyy;
-			n->smoothed.xy += g[0][0] * g[1][0] * dxx + (g[0][0] * g[1][1] + g[0][1] * g[1][0]) * dxy +
+			ex = after->state.x - p.x;
+			ey = after->state.y - p.y;
+			dxx = after->state.xx - p.xx;
+			dxy = after->state.xy - p.xy;
+			dyy = after->state.yy - p.yy;
+			n->state.x += g[0][0] * ex + g[0][1] * ey;
+			n->state.y += g[1][0] * ex + g[1][1] * ey;
+			n->state.xx += g[0][0] * g[0][0] * dxx + 2 * g[0][0] * g[0][1] * dxy + g[0][1] * g[0][1] * dyy;
+			n->state.xy += g[0][0] * g[1][0] * dxx + (g[0][0] * g[1][1] + g[0][1] * g[1][0]) * dxy +
 				g[0][1] * g[1][1] * dyy;
-			n->smoothed.yy += g[1][0] * g[1][0] * dxx + 2 * g[1][0] * g[1][1] * dxy + g[1][1] * g[1][1] * dyy;
-			n->smoothed.xx = fmax(n->smoothed.xx, 0);
+			n->state.yy += g[1][0] * g[1][0] * dxx + 2 * g[1][0] * g[1][1] * dxy + g[1][1] * g[1][1] * dyy;
+			n->state.xx = fmax(n->state.xx, 0);
 		}
 		after = n;
 	}
@@ -373,7 +319,7 @@ static double excess(const struct frame_clock *c)
 	return fmax(1, median);
 }
 
-static size_t judge(struct frame_clock *c, double scale, bool reject)
+static size_t measure_residuals(struct frame_clock *c)
 {
 	size_t accepted = 0;
 	double squares = 0;
@@ -383,16 +329,28 @@ static size_t judge(struct frame_clock *c, double scale, bool reject)
 
 		if (!n->accepted)
 			continue;
-		n->residual = measured(c, n) - n->smoothed.x;
-		if (reject && fabs(n->residual) > reject_sigmas * scale * n->sigma_s) {
-			n->accepted = false;
-			continue;
-		}
+		n->residual = measured(c, n) - n->state.x;
 		accepted++;
 		squares += n->residual * n->residual;
 	}
 	c->rms_residual_s = accepted ? sqrt(squares / (double)accepted) : NAN;
 	return accepted;
+}
+
+/* One bad pulse draws the smooth away from its good neighbours: those it took along come back when it is gone. */
+static void choose(struct frame_clock *c, double scale)
+{
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		if (n->comb && !n->accepted)
+			n->residual = clock_seconds(c, n->frame, NULL) - n->k;
+	}
+	for (size_t i = 0; i < c->nodes; i++) {
+		struct node *n = &c->node[i];
+
+		n->accepted = n->comb && fabs(n->residual) <= reject_sigmas * scale * n->sigma_s;
+	}
 }
 
 /* Pulses that were dropped by the smooth still have a residual to be shown. */
@@ -411,27 +369,27 @@ size_t frame_clock_solve(struct frame_clock *c)
 	double scale = 1;
 	size_t accepted = 0;
 
-	find_comb(c);
-	for (size_t i = 0; i < c->nodes; i++)
+	frame_comb_find(c);
+	for (size_t i = 0; i < c->nodes; i++) {
+		c->node[i].comb = c->node[i].accepted;
 		accepted += c->node[i].accepted;
-	c->accepted = 0;
-	c->rate_found = false;
-	if (accepted >= LOCK_PULSES) {
-		for (int pass = 0; pass < PASSES; pass++) {
-			for (size_t i = 0; i < c->nodes; i++)
-				c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
-			c->walk = likely_walk(c);
-			filter(c);
-			smooth(c);
-			find_rate(c);
-			judge(c, 1, false);
-			scale = excess(c);
-			accepted = judge(c, scale, pass < PASSES - 1);
-			if (accepted < LOCK_PULSES)
-				break;
-		}
-		c->accepted = accepted >= LOCK_PULSES ? accepted : 0;
 	}
+	c->rate_found = false;
+	for (int pass = 0; accepted >= FRAME_CLOCK_LOCK && pass < PASSES; pass++) {
+		for (size_t i = 0; i < c->nodes; i++)
+			c->node[i].variance = pow(scale * c->node[i].sigma_s, 2);
+		gather_jumps(c);
+		c->walk = likely_walk(c);
+		filter(c);
+		smooth(c);
+		find_rate(c);
+		measure_residuals(c);
+		scale = excess(c);
+		if (pass < PASSES - 1)
+			choose(c, scale);
+		accepted = measure_residuals(c);
+	}
+	c->accepted = accepted >= FRAME_CLOCK_LOCK ? accepted : 0;
 	if (c->accepted)
 		residuals_of_the_rejected(c);
 	label_seconds(c);
@@ -465,7 +423,7 @@ void frame_clock_summarise(const struct frame_clock *c, struct clock_summary *ou
 			newest = &c->node[i];
 	*out = (struct clock_summary){
 		.accepted = c->accepted, .rejected = c->nodes - c->accepted, .rms_residual_s = c->rms_residual_s,
-		.rate_error = c->accepted && newest ? newest->smoothed.y : NAN,
+		.rate_error = c->accepted && newest ? newest->state.y : NAN,
 		.second_confirmed = c->second_confirmed,
 	};
 }

@@ -4,9 +4,9 @@
 
 #include "limbwatch/frame_clock.h"
 
-/* What frame_clock.c (pulses) and frame_labels.c (labels, readings) share. */
+/* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth) and frame_labels.c (labels, readings) share. */
 
-enum { FRAME_CLOCK_LABELS = 512, FRAME_CLOCK_GAPS = 256 };
+enum { FRAME_CLOCK_LABELS = 512, FRAME_CLOCK_GAPS = 256, FRAME_CLOCK_LOCK = 5 };
 
 /* The card's accumulated error x, seconds, and relative frequency error y, with their covariance. */
 struct state { double x, y, xx, xy, yy; };
@@ -14,10 +14,12 @@ struct state { double x, y, xx, xy, yy; };
 struct node {
 	double frame, sigma_s;
 	double gap_s, gap_frame;        /* uncertainty of frames lost since the pulse before, and where */
+	double jump_s, jump_frame;      /* the same since the accepted pulse before */
 	double k;                       /* whole seconds from the first accepted pulse */
 	double variance, residual;
-	bool accepted, relock;          /* relock: first of a comb found anew */
-	struct state filtered, smoothed;
+	bool comb, accepted;            /* on a comb of seconds; and near the smooth */
+	bool relock;                    /* first of a comb found anew */
+	struct state state;             /* filtered forward, then smoothed */
 };
 
 struct label {
@@ -27,13 +29,17 @@ struct label {
 	enum time_quality quality;
 };
 
+/* Where the comb was followed to: the node, its frame and second, and the rate there. */
+struct lock { size_t last; double frame, k, rate; };
+
 struct gap_at { double frame, sigma_s; };
 
 struct frame_clock {
 	struct frame_clock_settings settings;
 	size_t nodes, room;
 	struct node *node;
-	double gap_s, gap_frame, lock_frame;    /* since the newest pulse */
+	double gap_s, gap_frame;        /* since the newest pulse */
+	struct lock lock;
 	size_t gaps;
 	struct gap_at gap_at[FRAME_CLOCK_GAPS];
 	size_t labels;
@@ -50,8 +56,12 @@ struct frame_clock {
 	struct tai line_base;
 };
 
+/** Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */
+void frame_comb_find(struct frame_clock *clock);
 /** Seconds from k = 0 at a frame, by the pulses; `sigma` (may be NULL) of the smooth alone. Needs accepted pulses. */
 double clock_seconds(const struct frame_clock *clock, double frame, double *sigma);
+/** Labels older than a node that will be the oldest are moved onto it by the last solution. */
+void carry_labels(struct frame_clock *clock, const struct node *oldest);
 /** Decides which second k = 0 is, and fits the line through the labels. */
 void label_seconds(struct frame_clock *clock);
 

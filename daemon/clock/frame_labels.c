@@ -7,12 +7,13 @@
 
 static const double sure_sigma_s = 0.1;         /* far below half a second */
 static const double half_second_s = 0.5;
+static const double least_walk = 1e-20;         /* 1e-10 per root second: a good crystal (common practice) */
 static const double slope_baseline_s = 300;     /* labels over less time say nothing about the rate */
 
 void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when, double sigma_s, bool late,
                            enum time_quality quality)
 {
-	if (!isfinite(frame) || !(sigma_s >= 0))
+	if (!isfinite(frame) || !(sigma_s >= 0) || quality == TIME_FREE)
 		return;
 	/* A full list is thinned: every second label goes, the first stays. */
 	if (c->labels == FRAME_CLOCK_LABELS) {
@@ -24,6 +25,27 @@ void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when,
 }
 
 /* ------------------------------------------------------------------ between pulses */
+
+/*
+ * Without this the seconds of a long run would hang on a label that is ever farther away: 2 ppm of drift are half a second in
+ * three days.  A label at a gap or beyond the pulses moves as well as the clock knows.
+ */
+void carry_labels(struct frame_clock *c, const struct node *oldest)
+{
+	double there;
+
+	if (!c->accepted)
+		return;
+	there = clock_seconds(c, oldest->frame, NULL);
+	for (size_t k = 0; k < c->labels; k++) {
+		struct label *l = &c->label[k];
+
+		if (l->frame < oldest->frame) {
+			l->when = tai_add(l->when, there - clock_seconds(c, l->frame, NULL));
+			l->frame = oldest->frame;
+		}
+	}
+}
 
 /* Accepted pulses around a frame; either may be NULL. */
 static void neighbours(const struct frame_clock *c, double frame, const struct node **before, const struct node **after)
@@ -47,12 +69,18 @@ static void neighbours(const struct frame_clock *c, double frame, const struct n
 			*after = &c->node[i];
 }
 
+/* Where no pulses are the card may walk more than it did under them: calm for a minute is not calm for an hour. */
+static double walk_unseen(const struct frame_clock *c)
+{
+	return fmax(c->walk, least_walk);
+}
+
 /* Error of the card `dt` seconds from a pulse, by its smoothed state alone. */
 static double extrapolate(const struct frame_clock *c, const struct node *n, double dt, double *variance)
 {
-	const struct state *s = &n->smoothed;
+	const struct state *s = &n->state;
 
-	*variance = s->xx + 2 * dt * s->xy + dt * dt * s->yy + c->walk * fabs(dt * dt * dt) / 3;
+	*variance = s->xx + 2 * dt * s->xy + dt * dt * s->yy + walk_unseen(c) * fabs(dt * dt * dt) / 3;
 	return s->x + s->y * dt;
 }
 
@@ -60,11 +88,11 @@ static double extrapolate(const struct frame_clock *c, const struct node *n, dou
 static double between(const struct frame_clock *c, const struct node *a, const struct node *b, double k, double *variance)
 {
 	double span = b->k - a->k, u = (k - a->k) / span, v = 1 - u;
-	double hermite = (1 + 2 * u) * v * v * a->smoothed.x + u * v * v * span * a->smoothed.y +
-		u * u * (3 - 2 * u) * b->smoothed.x - u * u * v * span * b->smoothed.y;
+	double hermite = (1 + 2 * u) * v * v * a->state.x + u * v * v * span * a->state.y +
+		u * u * (3 - 2 * u) * b->state.x - u * u * v * span * b->state.y;
 	double bridge = span * u * v;
 
-	*variance = v * a->smoothed.xx + u * b->smoothed.xx + c->walk * bridge * bridge * bridge / 3;
+	*variance = v * a->state.xx + u * b->state.xx + walk_unseen(c) * bridge * bridge * bridge / 3;
 	return hermite;
 }
 
@@ -85,10 +113,10 @@ static double card_error(const struct frame_clock *c, double frame, double k, do
 	double x;
 
 	neighbours(c, frame, &before, &after);
-	if (before && after && after->gap_s == 0 && !after->relock)
+	if (before && after && after->jump_s == 0)
 		return between(c, before, after, k, variance);
 	/* Frames were lost in between: told from the pulse on the same side of the gap. */
-	if (before && after && frame >= after->gap_frame && after->gap_s > 0)
+	if (before && after && frame >= after->jump_frame)
 		before = NULL;
 	if (before) {
 		x = extrapolate(c, before, k - before->k, variance);
@@ -204,7 +232,7 @@ static double line_slope(const struct frame_clock *c, bool late, double *sigma)
 		}
 	}
 	slope = (last - first) / (last_at - first_at);
-	if (fabs(slope) > c->settings.rate_tolerance)
+	if (!(fabs(slope) <= c->settings.rate_tolerance))
 		return 0;
 	*sigma = fmin(c->settings.rate_tolerance, 0.001 / span + 1e-6);
 	return slope;
@@ -213,16 +241,20 @@ static double line_slope(const struct frame_clock *c, bool late, double *sigma)
 static void fit_line(struct frame_clock *c)
 {
 	const struct label *best = &c->label[0];
-	double offset, best_offset = INFINITY;
+	double best_offset = INFINITY;
+	bool late = c->labels > 0;
 
 	if (!c->labels)
 		return;
-	c->line_slope = line_slope(c, best->late, &c->line_slope_sigma);
+	/* One label that does not err late is worth more than any that do. */
+	for (size_t k = 0; k < c->labels; k++)
+		late &= c->label[k].late;
+	c->line_slope = line_slope(c, late, &c->line_slope_sigma);
 	for (size_t k = 0; k < c->labels; k++) {
 		const struct label *l = &c->label[k];
+		double offset = line_offset(c, l) - c->line_slope * (l->frame - c->label[0].frame) / c->settings.rate;
 
-		offset = line_offset(c, l) - c->line_slope * (l->frame - c->label[0].frame) / c->settings.rate;
-		if (best->late ? offset < best_offset : k == 0 || l->sigma_s < best->sigma_s) {
+		if (late ? offset < best_offset : !l->late && (best->late || l->sigma_s < best->sigma_s)) {
 			best = l;
 			best_offset = offset;
 		}
@@ -302,7 +334,7 @@ double frame_clock_rate(const struct frame_clock *c, double frame)
 	if (!c->accepted)
 		return c->settings.rate / (1 + (c->labels ? c->line_slope : 0));
 	neighbours(c, frame, &before, &after);
-	return c->settings.rate * (1 + (before ? before : after)->smoothed.y);
+	return c->settings.rate * (1 + (before ? before : after)->state.y);
 }
 
 double frame_clock_frame(const struct frame_clock *c, struct tai when)

@@ -1,10 +1,13 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
  * Blocks of about a millisecond are screened by their largest difference over a few frames; where it stands far above
- * what is usual, the edge is located: levels before and after are followed to the edge by parabolas (an AC-coupled
- * pulse sags), and the instant is where the band-limited signal, rebuilt between frames by a windowed sinc (Shannon 1949, Proc. IRE
+ * what is usual, the edge is located: levels before and after are followed to the edge (an AC-coupled pulse sags), and the
+ * instant is where the band-limited signal, rebuilt between frames by a windowed sinc (Shannon 1949, Proc. IRE
  * 37, 10), passes half way.  For an edge of the full band the slope there is nearly all the information the samples hold:
  * a fit of the whole edge would gain 5%.
+ *
+ * A level is followed to the edge by a straight line, and bent as an exponential of that slope is (one-pole high-pass).  A free
+ * parabola would do as well without that assumption, but its value at the edge is so noisy that it costs more than the crossing.
  *
  * A leading edge is followed by the opposite one within half a second; what is not a pulse after all is the frame
  * clock's to judge.
@@ -19,7 +22,8 @@
 enum {
 	LAG = 2,                        /* the screening difference is x[k + LAG] - x[k - LAG] */
 	SINC = 24,                      /* half width of the interpolation */
-	INNER = 8, OUTER = 64,          /* frames from the edge where levels are taken */
+	INNER = 8, OUTER = 64,          /* frames from the edge where levels are taken, at most */
+	OUTER_LEAST = 20,
 	REACH = OUTER + SINC + 8,       /* frames needed on both sides of a block */
 	EDGES = 64,                     /* held until their opposite comes */
 	CHUNK = 4096,
@@ -29,12 +33,19 @@ enum {
 static const double screening = 4;              /* times the usual largest difference of a block */
 static const double least_difference = 2e-5;    /* full scale = 1: below this nothing is a pulse */
 static const double widest_s = 0.5;
+static const double half_second_s = 0.45;       /* a pulse this long cannot be told from its pause */
+static const double level_s = 0.002;            /* levels are taken within this: an AC-coupled pulse sags in 8 ms at 20 Hz */
 
 struct edge { double frame, sigma, height; bool opposed; };
+
+/* One side of an edge: level and slope (per `outer` frames, away from the edge) at the edge. */
+struct side { double value, slope, variance; };
 
 struct pulse_detector {
 	struct pulse_settings settings;
 	size_t block;                   /* frames screened at once */
+	int outer, points;              /* levels: frames from the edge, and their number */
+	double extreme;                 /* median of the largest of `block` differences over the rms of one sample */
 	double usual;                   /* median of the blocks' largest difference, tracked */
 	unsigned blocks;
 	/* Samples [base, base + filled); everything before `screened` has been looked at. */
@@ -44,47 +55,69 @@ struct pulse_detector {
 	size_t edges;
 	struct edge edge[EDGES];
 	double newest;                  /* frame of the newest edge, so that none is found twice */
-	double weight[LEVEL_POINTS], weights;   /* of the level points, and their sum */
-	double parabola[3][LEVEL_POINTS];       /* coefficients from the level points; see make_parabola() */
+	double weight[LEVEL_POINTS];    /* of the level points; sum 1 */
+	double tilt[LEVEL_POINTS];      /* slope of the line = sum of tilt * y */
+	double centre;                  /* weighted mean distance of the points, in `outer` */
+	double bow_value, bow_slope;    /* value and slope at the edge of the line fitted to the square of the distance */
+	double level_noise;             /* variance of a level at the edge in unit noise */
 };
 
-/*
- * Rows that give the coefficients of the weighted least-squares parabola through points at INNER + 1/2 ... OUTER - 1/2.  The weights
- * rise and fall smoothly, so that the fast ripple which an anti-alias filter leaves beside an edge averages out.
- */
-static void make_parabola(struct pulse_detector *d)
+static double distance(const struct pulse_detector *d, int point)
 {
-	double m[3][6] = { { 0 } };
+	return (INNER + point + 0.5) / d->outer;
+}
 
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double u = (INNER + k + 0.5) / OUTER, power[3] = { 1, u, u * u }, s = sin(M_PI * (k + 0.5) / LEVEL_POINTS);
+/*
+ * Weighted least-squares line through points at INNER + 1/2 ... outer - 1/2.  The weights rise and fall smoothly, so that the
+ * fast ripple which an anti-alias filter leaves beside an edge averages out.
+ */
+static void make_line(struct pulse_detector *d)
+{
+	double sum = 0, spread = 0, square = 0;
 
-		d->weight[k] = s * s;
-		d->weights += s * s;
-		for (int i = 0; i < 3; i++)
-			for (int j = 0; j < 3; j++)
-				m[i][j] += s * s * power[i] * power[j];
+	for (int k = 0; k < d->points; k++) {
+		d->weight[k] = pow(sin(M_PI * (k + 0.5) / d->points), 2);
+		sum += d->weight[k];
 	}
-	for (int i = 0; i < 3; i++)
-		m[i][3 + i] = 1;
-	for (int i = 0; i < 3; i++) {           /* Gauss-Jordan; the matrix is small and positive definite */
-		double pivot = m[i][i];
-
-		for (int j = 0; j < 6; j++)
-			m[i][j] /= pivot;
-		for (int r = 0; r < 3; r++) {
-			double f = m[r][i];
-
-			for (int j = 0; r != i && j < 6; j++)
-				m[r][j] -= f * m[i][j];
-		}
+	for (int k = 0; k < d->points; k++) {
+		d->weight[k] /= sum;
+		d->centre += d->weight[k] * distance(d, k);
+		square += d->weight[k] * pow(distance(d, k), 2);
 	}
-	for (int i = 0; i < 3; i++)
-		for (int k = 0; k < LEVEL_POINTS; k++) {
-			double u = (INNER + k + 0.5) / OUTER;
+	for (int k = 0; k < d->points; k++)
+		spread += d->weight[k] * pow(distance(d, k) - d->centre, 2);
+	for (int k = 0; k < d->points; k++) {
+		d->tilt[k] = d->weight[k] * (distance(d, k) - d->centre) / spread;
+		d->bow_slope += d->tilt[k] * pow(distance(d, k), 2);
+		d->level_noise += pow(d->weight[k] - d->centre * d->tilt[k], 2);
+	}
+	d->bow_value = square - d->centre * d->bow_slope;
+}
 
-			d->parabola[i][k] = d->weight[k] * (m[i][3] + m[i][4] * u + m[i][5] * u * u);
-		}
+/* Half of all blocks of white noise have no difference above m sqrt(2) times its rms: erf(m / sqrt(2))^block = 1/2. */
+static double extreme_of(size_t block)
+{
+	double low = 0, high = 10;
+
+	for (int k = 0; k < 60; k++) {
+		double m = 0.5 * (low + high);
+
+		if (pow(erf(m * M_SQRT1_2), (double)block) < 0.5)
+			low = m;
+		else
+			high = m;
+	}
+	return M_SQRT2 * low;
+}
+
+/* Levels are taken near the edge, and within the pulse. */
+static int outer_of(const struct pulse_settings *settings)
+{
+	double outer = fmin(OUTER, fmax(OUTER / 2, settings->rate * level_s));
+
+	if (settings->width_s > 0)
+		outer = fmin(outer, settings->rate * settings->width_s - INNER);
+	return (int)fmax(outer, OUTER_LEAST);
 }
 
 int pulse_detector_create(struct pulse_detector **out, const struct pulse_settings *settings)
@@ -102,7 +135,10 @@ int pulse_detector_create(struct pulse_detector **out, const struct pulse_settin
 	if (d->block > CHUNK / 4)
 		d->block = CHUNK / 4;
 	d->newest = -INFINITY;
-	make_parabola(d);
+	d->outer = outer_of(settings);
+	d->points = d->outer - INNER;
+	d->extreme = extreme_of(d->block);
+	make_line(d);
 	*out = d;
 	return 0;
 }
@@ -114,29 +150,31 @@ void pulse_detector_destroy(struct pulse_detector *detector)
 
 /* ------------------------------------------------------------------ one edge */
 
-/*
- * Level from the frames INNER to OUTER after (side +1) or before (-1) the middle of frames `at` and `at` + 1, followed to
- * `beyond` frames after that middle; and the residual's variance.
- */
-static double level(const struct pulse_detector *d, const double *x, long at, int side, double beyond, double *variance)
+/* The frames INNER to `outer` after (direction +1) or before (-1) the middle of frames `at` and `at` + 1. */
+static struct side side_of(const struct pulse_detector *d, const double *x, long at, int direction)
 {
-	double value[3] = { 0 }, squares = 0;
+	const double *near = x + at + direction * INNER + (direction > 0 ? 1 : 0);
+	double mean = 0, slope = 0, squares = 0;
 
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
-
-		for (int i = 0; i < 3; i++)
-			value[i] += d->parabola[i][k] * y;
+	for (int k = 0; k < d->points; k++) {
+		mean += d->weight[k] * near[direction * k];
+		slope += d->tilt[k] * near[direction * k];
 	}
-	for (int k = 0; k < LEVEL_POINTS; k++) {
-		double u = (INNER + k + 0.5) / OUTER;
-		double y = x[at + side * (INNER + k) + (side > 0 ? 1 : 0)];
-		double r = y - value[0] - value[1] * u - value[2] * u * u;
+	for (int k = 0; k < d->points; k++) {
+		double r = near[direction * k] - mean - slope * (distance(d, k) - d->centre);
 
 		squares += d->weight[k] * r * r;
 	}
-	*variance = squares / d->weights;
-	return value[0] + value[1] * side * beyond / OUTER;
+	return (struct side){ mean - d->centre * slope, slope, squares };
+}
+
+/* height * exp(-u s) has the slope -height s and the bow height s^2 u^2 / 2, which has tilted the line. */
+static void bend(const struct pulse_detector *d, struct side *side, double height)
+{
+	double bow = side->slope * side->slope / (2 * height);
+
+	side->value -= bow * d->bow_value;
+	side->slope -= bow * d->bow_slope;
 }
 
 static double interpolate(const double *x, double at)
@@ -155,20 +193,31 @@ static double interpolate(const double *x, double at)
 	return sum;
 }
 
-/* Where the signal passes `half` between frames low and low + 1. */
-static double crossing(const double *x, long low, double half, double sign)
+/*
+ * Where the signal passes `half` between frames low and low + 1: false position with the Illinois rule (Dowell & Jarratt 1971, BIT
+ * 11, 168), half a dozen evaluations.
+ */
+static double crossing(const double *x, long low, double half)
 {
-	double a = (double)low, b = (double)low + 1;
+	double a = (double)low, b = a + 1, fa = x[low] - half, fb = x[low + 1] - half, at = a;
 
-	for (int k = 0; k < 40; k++) {
-		double middle = 0.5 * (a + b);
+	for (int k = 0; k < 30; k++) {
+		double f, before = at;
 
-		if (sign * (interpolate(x, middle) - half) < 0)
-			a = middle;
-		else
-			b = middle;
+		at = fb == fa ? 0.5 * (a + b) : (a * fb - b * fa) / (fb - fa);
+		f = interpolate(x, at) - half;
+		if (fabs(at - before) < 1e-9 || f == 0)
+			break;
+		if (f * fb < 0) {
+			a = b;
+			fa = fb;
+		} else {
+			fa *= 0.5;
+		}
+		b = at;
+		fb = f;
 	}
-	return 0.5 * (a + b);
+	return at;
 }
 
 /* Low frame of the two between which x passes `half`, within the reach of the screening difference; -1: none. */
@@ -180,29 +229,45 @@ static long bracket(const double *x, long at, double half, double sign)
 	return -1;
 }
 
-/* `at`: index of the largest difference. @return false: no edge there after all */
-static bool locate(const struct pulse_detector *d, long at, struct edge *out)
+/* The level half way of both sides, at the instant itself: the sides slope. @return false: there is no crossing */
+static bool half_way(const struct pulse_detector *d, long at, const struct side side[2], double *frame)
 {
-	const double *x = d->x;
-	double variance[2], before, after, sign, beyond = 0, frame = 0;
+	double beyond = 0;
 
 	for (int pass = 0; pass < 2; pass++) {
-		long low;
+		double half = 0.5 * (side[0].value + side[1].value + (side[1].slope - side[0].slope) * beyond / d->outer);
+		double sign = side[1].value > side[0].value ? 1 : -1;
+		long low = bracket(d->x, at, half, sign);
 
-		before = level(d, x, at, -1, beyond, &variance[0]);
-		after = level(d, x, at, 1, beyond, &variance[1]);
-		sign = after > before ? 1 : -1;
-		low = bracket(x, at, 0.5 * (before + after), sign);
 		if (low < 0)
 			return false;
-		frame = crossing(x, low, 0.5 * (before + after), sign);
-		beyond = frame - ((double)at + 0.5);
+		*frame = crossing(d->x, low, half);
+		beyond = *frame - ((double)at + 0.5);
 	}
+	return true;
+}
+
+/* `at`: index of the largest difference, `difference` signed. @return false: no edge there after all */
+static bool locate(const struct pulse_detector *d, long at, double difference, struct edge *out)
+{
+	struct side side[2] = { side_of(d, d->x, at, -1), side_of(d, d->x, at, 1) };
+	double height = side[1].value - side[0].value, frame;
+	double noise = sqrt(0.5 * (side[0].variance + side[1].variance));
+
+	/* An edge stands out of its surroundings and is over in a few frames; a click, a burst or a ripple does not. */
+	if (!(noise < 0.25 * 0.9 * fabs(height)) || !(difference / height > 0.4 && difference / height < 2.5))
+		return false;
+	bend(d, &side[0], -height);     /* what sags before a rising edge comes from a falling one */
+	bend(d, &side[1], height);
+	height = side[1].value - side[0].value;
+	if (!half_way(d, at, side, &frame))
+		return false;
+	/* The ripple of the anti-alias filter beside the edge is no noise: it is the same in every pulse. */
+	noise = fmin(noise, d->usual / d->extreme);
 	out->frame = (double)d->base + frame;
-	out->height = after - before;
-	out->sigma = sqrt(0.5 * (variance[0] + variance[1])) / (0.9 * fabs(out->height));
-	/* An edge stands out of its surroundings; a click or a burst does not. */
-	return out->sigma < 0.25;
+	out->height = height;
+	out->sigma = noise * sqrt(1 + 0.5 * d->level_noise) / (0.9 * fabs(height));
+	return true;
 }
 
 /* ------------------------------------------------------------------ edges into pulses */
@@ -231,12 +296,12 @@ static void keep_edge(struct pulse_detector *d, const struct edge *edge)
 
 static bool leads(const struct pulse_detector *d, const struct edge *e)
 {
-	if (d->settings.polarity && (e->height > 0) != (d->settings.polarity > 0))
-		return false;
-	/* Pulses of half a second lead with either edge: only the setting can tell, or else the rising one is taken. */
-	if (!d->settings.polarity && d->settings.width_s > 0.45)
-		return e->height > 0;
-	return e->opposed;
+	int polarity = d->settings.polarity;
+
+	/* Pulses of half a second could lead with either edge: only the setting can tell, or else the rising one is taken. */
+	if (d->settings.width_s > half_second_s)
+		return (e->height > 0) == (polarity >= 0);
+	return e->opposed && (!polarity || (e->height > 0) == (polarity > 0));
 }
 
 /* Edges old enough to be judged. */
@@ -297,10 +362,10 @@ static void screen(struct pulse_detector *d, size_t from)
 	if (largest > limit && d->blocks > 20) {
 		/* Each local maximum of the difference in the block. */
 		for (long k = 0; k < (long)d->block; k++) {
-			double here = fabs(x[k + LAG] - x[k - LAG]);
+			double difference = x[k + LAG] - x[k - LAG], here = fabs(difference);
 
-			if (here > limit && here >= fabs(x[k + 1 + LAG] - x[k + 1 - LAG]) &&
-			    here > fabs(x[k - 1 + LAG] - x[k - 1 - LAG]) && locate(d, (long)from + k, &edge))
+			if (here > limit && here > 0.5 * largest && here >= fabs(x[k + 1 + LAG] - x[k + 1 - LAG]) &&
+			    here > fabs(x[k - 1 + LAG] - x[k - 1 - LAG]) && locate(d, (long)from + k, difference, &edge))
 				keep_edge(d, &edge);
 		}
 	}

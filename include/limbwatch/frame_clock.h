@@ -11,6 +11,10 @@
  * Frame number -> TAI.  Fed with pulse edges (which say when a second begins, not which) and labels (which say
  * roughly what time it is); maps any frame by a robust smooth through the accepted pulses, sigma growing away from
  * them.  Without pulses the labels alone give the time.  One thread at a time.
+ *
+ * Pulses count once five of them, among 40 edges at most and none more than 10 s after the one before, keep whole seconds at one
+ * rate.  False lock: random clicks, 0.03 to 8 a second, never did it in 1000 simulated days; spikes more than ten times a
+ * second cannot.
  */
 struct frame_clock;
 
@@ -28,10 +32,13 @@ void frame_clock_destroy(struct frame_clock *clock);
 
 /** An edge at that frame; frames in ascending order.  The newest 30000 are remembered. */
 void frame_clock_add_pulse(struct frame_clock *clock, double frame, double sigma_frames);
-/** A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true). */
+/**
+ * A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true).  Frames in
+ * ascending order.  Labels of quality TIME_FREE say nothing and are not kept; of many the list is thinned.
+ */
 void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai when, double sigma_s, bool late,
                            enum time_quality quality);
-/** Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
+/** The newest 256 are remembered.  Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
 void frame_clock_add_gap(struct frame_clock *clock, double frame, double sigma_frames);
 
 /** Fits again with all that is known.  Cheap enough for once a second. @return pulses accepted */

@@ -5,17 +5,24 @@
 #include <stddef.h>
 #include <stdint.h>
 
-/* One-second ticks in a sampled channel: DC- or AC-coupled, either polarity. */
+/*
+ * One-second ticks in a sampled channel: DC- or AC-coupled, either polarity.
+ *
+ * The instant of an edge is where it passes half its height.  For a card whose anti-alias filter has linear phase that is the
+ * instant of the pulse plus the filter's delay, to a thousandth of a frame (AC coupling of 20 Hz included, at 48 kHz).  A
+ * minimum-phase filter moves it by a constant part of a frame or two, the same for every pulse: it belongs into the delay that is
+ * calibrated (pulse_delay_s).  The level is taken within 20 to 64 frames of the edge, so a pulse shorter than 20 frames is not timed.
+ */
 
 struct pulse_settings {
 	double rate;                    /* frames per second, nominal */
-	double width_s;                 /* pulse length, 0.001 to 0.5; 0: unknown */
+	double width_s;                 /* pulse length, to 0.5; 0: unknown, as good as anything above 2 ms */
 	int    polarity;                /* +1 rising edge leads, -1 falling edge leads, 0: find out */
 };
 
 struct pulse_edge {
-	double frame;                   /* leading edge (half-height instant of the average pulse), fractional frame number */
-	double sigma_frames;            /* from the noise around it */
+	double frame;                   /* leading edge (half-height instant), fractional frame number */
+	double sigma_frames;            /* one standard deviation, from the channel's noise */
 	double height;                  /* full scale = 1, signed */
 };
 
