@@ -1,7 +1,7 @@
 #!/bin/sh
 # Bad input: one clear sentence, the right exit status, nothing lost, no crash.
 . tests/support/tap.sh
-plan 14
+plan 15
 head='station = { name = "Brackenfold"; };
 channels = ( { name = "diode"; column = 1; wavelength_nm = 620; } );'
 
@@ -69,3 +69,9 @@ refused 2 'AC-coupled' "an AC-coupled input for a slow edge is refused, with wha
 printf 'intake = { driver = "file"; path = ' > "$work/broken.conf"
 record broken
 refused 2 'broken.conf' "a broken configuration is refused with file and line"
+
+# The folder belongs to one recorder at a time.
+config lock "driver = \"file\"; path = \"$work/good.wav\";"
+mkdir -p "$work/kept"
+run flock "$work/kept" "$build/limbwatchd" --config "$work/lock.conf"
+refused 1 'in use by another' "a folder in use by another recorder is refused"

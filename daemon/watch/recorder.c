@@ -5,6 +5,7 @@
 #include <pthread.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/file.h>
 #include <time.h>
 #include <unistd.h>
 #include "acquire.h"
@@ -46,35 +47,67 @@ static double monotonic_s(void)
 	return (double)now.tv_sec + (double)now.tv_nsec * 1e-9;
 }
 
-/* The folder must take files before recording begins: better refused at dusk than found out at the contact. */
+/* One recorder a folder: another would take what this one is writing for the remains of a power cut. */
+static int lock_folder(const char *folder)
+{
+	int fd = open(folder, O_RDONLY | O_DIRECTORY | O_CLOEXEC), ret;
+
+	if (fd < 0) {
+		ret = -errno;
+		log_error("keep.folder %s cannot be opened: %s", folder, strerror(-ret));
+		return ret;
+	}
+	if (flock(fd, LOCK_EX | LOCK_NB) == 0)
+		return fd;
+	ret = -errno;
+	if (ret == -EWOULDBLOCK)
+		log_error("keep.folder %s is in use by another limbwatchd", folder);
+	else
+		log_error("keep.folder %s cannot be locked: %s", folder, strerror(-ret));
+	close(fd);
+	return ret;
+}
+
+/*
+ * The folder must take files before recording begins: better refused at dusk than found out at the contact.
+ *
+ * @return descriptor that holds the lock until it is closed, or -errno
+ */
 static int prepare_folder(const struct config *config)
 {
 	const char *folder = config->keep.folder;
 	char path[4096];
-	int fd, ret;
+	int fd, ret, lock;
 
 	ret = disk_real.make_folder(folder, 0775);
 	if (ret < 0) {
 		log_error("keep.folder %s cannot be made: %s", folder, strerror(-ret));
 		return ret;
 	}
+	lock = lock_folder(folder);
+	if (lock < 0)
+		return lock;
 	snprintf(path, sizeof(path), "%s/.limbwatch-%ld", folder, (long)getpid());
 	fd = disk_real.open(path, O_CREAT | O_WRONLY | O_EXCL | O_CLOEXEC, 0600);
 	if (fd < 0) {
-		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-fd));
-		return fd;
+		ret = fd;
+		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
+		goto unlock;
 	}
 	ret = disk_real.write(fd, path, 1) < 1 ? -ENOSPC : 0;
 	disk_real.close(fd);
 	disk_real.unlink(path);
 	if (ret < 0) {
 		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
-		return ret;
+		goto unlock;
 	}
 	ret = segment_repair(&disk_real, folder);
-	if (ret < 0)
-		log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
-	return ret < 0 ? ret : 0;
+	if (ret >= 0)
+		return lock;
+	log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
+unlock:
+	close(lock);
+	return ret;
 }
 
 static int create_ring(struct recorder *r)
@@ -260,15 +293,15 @@ close_plans:
 int recorder_run(const struct config *config, const struct recorder_hooks *hooks)
 {
 	struct recorder r = { .config = config, .hooks = hooks, .said_s = monotonic_s() };
-	int ret;
+	int lock = prepare_folder(config), ret;
 
-	ret = prepare_folder(config);
-	if (ret < 0)
-		return ret;
+	if (lock < 0)
+		return lock;
 	ret = config->driver->open(&r.intake, config->driver_values);
-	if (ret < 0)
-		return ret;
-	ret = run(&r);
-	config->driver->close(r.intake);
+	if (ret == 0) {
+		ret = run(&r);
+		config->driver->close(r.intake);
+	}
+	close(lock);
 	return ret;
 }
