@@ -65,7 +65,7 @@ $(tests): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
 $(benches) $(fuzzers): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
 	$(call say,LD,$@)$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
 
-tests: all $(tests) $(fuzzers)
+tests: all $(tests) $(fuzzers) $(BUILD)/tests/bench/bench_detector
 
 # Set up everything, build, pass the tests.
 check: deps-check
