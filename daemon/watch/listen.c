@@ -8,6 +8,7 @@
 #include "listen_inner.h"
 
 static const double settle_s = 4;       /* pulses come up to two seconds late, and one more each side helps */
+static const double patience_s = 2;     /* stamps of a live device come with the first blocks */
 static const double fill_s = 600;       /* longer gaps end a segment instead of filling it with zeros */
 static const double gap_sigma_s = 0.001;/* how well an intake knows the length of a gap, at worst: see alsa.c */
 
@@ -255,6 +256,18 @@ static void handle_gap(struct listener *l, const struct ring_news *news)
 		plans_break(l, l->next_frame, news->first);
 }
 
+/* Without any label no vigil can be kept: said once, when labels had their time to come. */
+static void say_undated(struct listener *l, bool now)
+{
+	if (l->dated || l->undated_said || !l->config->expecteds || (!now && (double)l->next_frame < patience_s * l->rate))
+		return;
+	l->undated_said = true;
+	log_warning("nothing says when these samples were taken (%s): the expected contacts cannot be placed%s",
+	            l->settings.intake->real_time ? "this computer's clock says it is not synchronised; clock.host_sigma_s "
+	            "would trust it all the same" : "the intake's start_utc would",
+	            l->config->watch.outside ? ", any contact is watched for" : "");
+}
+
 static void hear(struct listener *l, size_t count, const struct ring_news *news)
 {
 	struct contact contact[SIGHTINGS];
@@ -267,6 +280,7 @@ static void hear(struct listener *l, size_t count, const struct ring_news *news)
 		sightings_add(l, contact, lane_execute(l->lane[k], l->frames, count, news->first, contact, SIGHTINGS));
 	vigils_execute(l, l->frames, count, news->first);
 	l->next_frame = news->first + count;
+	say_undated(l, false);
 	solve_clock(l, false);
 }
 
@@ -289,6 +303,7 @@ static void finish(struct listener *l)
 	size_t n;
 
 	label_stamps(l);
+	say_undated(l, true);
 	while (l->pulses && (n = pulse_detector_finish(l->pulses, edge, 16)) > 0)
 		for (size_t k = 0; k < n; k++)
 			frame_clock_add_pulse(l->clock, edge[k].frame, edge[k].sigma_frames);
@@ -309,8 +324,6 @@ void *listener_run(void *argument)
 	struct ring_news news;
 
 	label_origin(l);
-	if (!l->dated && l->config->expecteds && !l->settings.intake->real_time)
-		log_warning("the samples do not say when they were taken: expected contacts cannot be placed, watching for any");
 	frame_clock_solve(l->clock);
 	for (;;) {
 		size_t count = ring_read(l->settings.reader, l->frames, CHUNK, &news);

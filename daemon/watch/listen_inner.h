@@ -40,6 +40,7 @@ struct listener {
 	uint64_t next_frame;            /* after the newest heard */
 	uint64_t solved;                /* frame at the last solution */
 	bool dated;                     /* some label says what time it is */
+	bool undated_said;
 	uint64_t hold, settle;          /* frames: until all lanes have spoken; until later pulses are in */
 	uint64_t startup;               /* frames the lanes hold back at the beginning */
 	size_t sightings;
