@@ -85,11 +85,11 @@ const char *report_interval(char text[32], double seconds)
 	double size = fabs(seconds);
 
 	if (size < 1e-4)
-		snprintf(text, 32, "%.1f \xc2\xb5s", seconds * 1e6);
+		snprintf(text, 32, "%.3g \xc2\xb5s", seconds * 1e6);
 	else if (size < 1)
-		snprintf(text, 32, "%.2f ms", seconds * 1e3);
+		snprintf(text, 32, "%.3g ms", seconds * 1e3);
 	else
-		snprintf(text, 32, "%.2f s", seconds);
+		snprintf(text, 32, "%.3g s", seconds);
 	return text;
 }
 
