@@ -1,7 +1,7 @@
 #!/bin/sh
 # The whole recorder: synthetic, file and pipe intakes, what it says and what it leaves behind.
 . tests/support/tap.sh
-plan 17
+plan 18
 
 channels='channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );'
@@ -117,3 +117,14 @@ ok $? "a second run into the same folder overwrites nothing"
 run "$build/limbwatch" settings --sample
 cmp -s "$work/out" etc/limbwatch.conf
 ok $? "etc/limbwatch.conf is what the table of settings says"
+
+# Two predictions for one edge: it belongs to the nearer.
+cat > "$work/f.conf" <<END
+$station intake = { $synthetic }; $channels
+expected = ( { source = "Brock"; kind = "immersion"; utc = "2031-04-02T01:23:47.9Z"; sigma_s = 0.8; shadow_speed_mps = 640; },
+  { source = "Anwen"; kind = "immersion"; utc = "2031-04-02T01:23:45.5Z"; sigma_s = 0.8; shadow_speed_mps = 612; } );
+keep = { folder = "$work/f"; };
+END
+run "$build/limbwatchd" --config "$work/f.conf" --json
+[ "$(wc -l < "$work/out")" -eq 1 ] && grep -q '"source":"Anwen"' "$work/out"
+ok $? "an edge that two vigils see is one contact, of the nearer prediction"

@@ -38,11 +38,24 @@ static bool same_contact(const struct listener *l, const struct contact *a, cons
 	return a->channel == b->channel && fabs(a->frame - b->frame) < near;
 }
 
-/* The lane that was built for an expected contact of this kind knows best; otherwise the higher peak. */
-static bool better(const struct contact *a, const struct contact *b)
+/* How far from its prediction, in standard uncertainties. */
+static double surprise(const struct listener *l, const struct contact *c)
+{
+	const struct config_expected *e = &l->config->expected[c->expected];
+
+	return fabs(c->frame - frame_clock_frame(l->clock, e->when)) / (e->sigma_s * l->rate);
+}
+
+/*
+ * The lane that was built for an expected contact of this kind knows best; of two such lanes the one whose prediction is
+ * nearer, for the edge itself does not say whose it is; otherwise the higher peak.
+ */
+static bool better(const struct listener *l, const struct contact *a, const struct contact *b)
 {
 	if ((a->expected >= 0) != (b->expected >= 0) && a->kind == b->kind)
 		return a->expected >= 0;
+	if (a->expected >= 0 && b->expected >= 0 && a->kind == b->kind)
+		return surprise(l, a) < surprise(l, b);
 	return a->snr > b->snr;
 }
 
@@ -56,7 +69,7 @@ static void add(struct listener *l, const struct contact *contact)
 			continue;
 		if (!same_contact(l, known, contact))
 			continue;
-		if (!l->sighting[k].announced && better(contact, known))
+		if (!l->sighting[k].announced && better(l, contact, known))
 			*known = *contact;
 		return;
 	}
