@@ -1,16 +1,18 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /* The table of settings: it drives parsing, range checks, etc/limbwatch.conf and the manual. */
+#include <math.h>
+#include <stdio.h>
 #include <string.h>
 #include "config_table.h"
 
 const struct setting station_settings[] = {
 	[STATION_NAME] = { "name", SETTING_TEXT, .text = "unnamed",
 		.meaning = "name of the station, stands in file names and in every recording", .example = "\"Brackenfold\"" },
-	[STATION_LATITUDE] = { "latitude_deg", SETTING_NUMBER, 0, -90, 90,
+	[STATION_LATITUDE] = { "latitude_deg", SETTING_NUMBER, NAN, -90, 90,
 		.meaning = "geodetic latitude (WGS84), north positive" },
-	[STATION_LONGITUDE] = { "longitude_deg", SETTING_NUMBER, 0, -180, 180,
+	[STATION_LONGITUDE] = { "longitude_deg", SETTING_NUMBER, NAN, -180, 180,
 		.meaning = "longitude (WGS84), east positive" },
-	[STATION_HEIGHT] = { "height_m", SETTING_NUMBER, 0, -500, 9000,
+	[STATION_HEIGHT] = { "height_m", SETTING_NUMBER, NAN, -500, 9000,
 		.meaning = "height above the WGS84 ellipsoid" },
 	{ .name = NULL },
 };
@@ -33,12 +35,12 @@ const struct setting channel_settings[] = {
 	[CHANNEL_POLARITY] = { "polarity", SETTING_CHOICE, .text = "auto", .choices = "auto|normal|inverted",
 		.meaning = "normal: more light, higher voltage; a pulse's leading edge rises; auto: normal for a "
 			"detector, found out for a pulse" },
-	[CHANNEL_WAVELENGTH] = { "wavelength_nm", SETTING_NUMBER, 0, 100, 20000,
+	[CHANNEL_WAVELENGTH] = { "wavelength_nm", SETTING_NUMBER, NAN, 100, 20000,
 		.meaning = "effective wavelength of an optical detector (follows the star's colour); each detector "
 			"needs this or frequency_mhz", .example = "620", .shown = true },
 	[CHANNEL_PASSBAND] = { "passband_nm", SETTING_NUMBER, 0, 0, 5000,
 		.meaning = "width of the optical passband (full width of a top hat, FWHM of a Gaussian)" },
-	[CHANNEL_FREQUENCY] = { "frequency_mhz", SETTING_NUMBER, 0, 1, 1e6,
+	[CHANNEL_FREQUENCY] = { "frequency_mhz", SETTING_NUMBER, NAN, 1, 1e6,
 		.meaning = "centre frequency of a radio receiver, instead of wavelength_nm", .example = "1420" },
 	[CHANNEL_BANDWIDTH] = { "passband_mhz", SETTING_NUMBER, 0, 0, 1e5,
 		.meaning = "width of the radio passband" },
