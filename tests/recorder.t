@@ -1,7 +1,7 @@
 #!/bin/sh
 # The whole recorder: synthetic, file and pipe intakes, what it says and what it leaves behind.
 . tests/support/tap.sh
-plan 18
+plan 19
 
 channels='channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );'
@@ -128,3 +128,13 @@ END
 run "$build/limbwatchd" --config "$work/f.conf" --json
 [ "$(wc -l < "$work/out")" -eq 1 ] && grep -q '"source":"Anwen"' "$work/out"
 ok $? "an edge that two vigils see is one contact, of the nearer prediction"
+
+# A pipe without a date of its own is dated by the host's clock, from its first segment on.
+cat > "$work/g.conf" <<END
+intake = { driver = "pipe"; path = "-"; rate_hz = 48000; channels = 2; format = "S24_3"; };
+clock = { host_sigma_s = 0.01; };
+$channels keep = { folder = "$work/g"; everything = true; };
+END
+"$build/limbwatchd" --quiet --config "$work/g.conf" < "$work/raw" > "$work/out" 2> "$work/err"
+ls "$work/g" | grep -q "^$(date -u +%Y%m)[0-9]*T[0-9]*Z_unnamed.wav\$"
+ok $? "a pipe is dated by the host's clock"

@@ -194,6 +194,7 @@ static void without_pulses_the_label_counts_with_the_card_in_its_error(void **st
 	assert_int_equal(r.quality, TIME_FREE);
 	assert_true(isnan(r.sigma_s) && r.when.ns == INT64_C(10000000000));
 	frame_clock_add_label(c, 0, tai_s(0.25), 0.05, false, TIME_HOST);
+	assert_int_equal(read_at(c, 480000).quality, TIME_FREE);       /* not solved yet: no date out of nowhere */
 	frame_clock_solve(c);
 	r = read_at(c, 48000 * 1000);
 	assert_int_equal(r.quality, TIME_HOST);

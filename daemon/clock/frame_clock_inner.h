@@ -54,6 +54,7 @@ struct frame_clock {
 	/* Without pulses: TAI seconds = base + frame / rate * (1 + slope), about frame `pivot`. */
 	double line_pivot, line_slope, line_sigma_s, line_slope_sigma;
 	struct tai line_base;
+	bool line_fitted;
 };
 
 /** Marks the pulses of the comb, with k; where it is lost for long, a new one begins. */

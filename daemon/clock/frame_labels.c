@@ -261,6 +261,7 @@ static void fit_line(struct frame_clock *c)
 	}
 	c->line_pivot = best->frame;
 	c->line_base = best->when;
+	c->line_fitted = true;
 	c->line_sigma_s = best->sigma_s;
 }
 
@@ -321,7 +322,7 @@ void frame_clock_at(const struct frame_clock *c, double frame, struct clock_read
 	*out = (struct clock_reading){ .quality = TIME_FREE, .sigma_s = NAN };
 	if (c->accepted)
 		read_pulses(c, frame, out);
-	else if (c->labels)
+	else if (c->line_fitted)
 		read_line(c, frame, out);
 	else
 		out->when = tai_of(0, frame / c->settings.rate);
@@ -332,7 +333,7 @@ double frame_clock_rate(const struct frame_clock *c, double frame)
 	const struct node *before, *after;
 
 	if (!c->accepted)
-		return c->settings.rate / (1 + (c->labels ? c->line_slope : 0));
+		return c->settings.rate / (1 + (c->line_fitted ? c->line_slope : 0));
 	neighbours(c, frame, &before, &after);
 	return c->settings.rate * (1 + (before ? before : after)->state.y);
 }

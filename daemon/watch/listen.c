@@ -210,6 +210,8 @@ static void label_stamps(struct listener *l)
 		if (!host_clock_at(stamp.host_ns, l->config->clock.host_sigma_s, &when, &sigma))
 			continue;
 		frame_clock_add_label(l->clock, (double)stamp.frame, when, sigma, stamp.late, TIME_HOST);
+		if (!l->dated)
+			frame_clock_solve(l->clock);    /* the first segment is named by it */
 		l->dated = true;
 	}
 }
