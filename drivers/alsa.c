@@ -8,7 +8,7 @@
 #include "limbwatch/intake.h"
 #include "limbwatch/log.h"
 #include "origin.h"
-#include "stamp_line.h"
+#include "limbwatch/stamp_line.h"
 
 /*
  * A sound card or any other PCM that ALSA knows.  Nothing on the way may touch the samples: no rate is converted, and

@@ -14,7 +14,7 @@
 #include "limbwatch/intake.h"
 #include "limbwatch/log.h"
 #include "origin.h"
-#include "stamp_line.h"
+#include "limbwatch/stamp_line.h"
 
 /*
  * Raw interleaved frames from whatever program receives: standard input, a FIFO, a Unix stream socket that is

@@ -6,7 +6,7 @@
 #include <math.h>
 #include <stdint.h>
 #include <stdlib.h>
-#include "../drivers/stamp_line.h"
+#include "limbwatch/stamp_line.h"
 
 /* A card of known rate; stamps late by a random part of `late_s`. */
 struct card { double rate, late_s; uint64_t chance; };

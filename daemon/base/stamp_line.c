@@ -1,6 +1,6 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <math.h>
-#include "stamp_line.h"
+#include "limbwatch/stamp_line.h"
 
 /*
  * Stamps are late by up to a millisecond or two (USB packets, DMA bursts), so a minute gives the rate to some 30 ppm,
