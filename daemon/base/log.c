@@ -16,6 +16,9 @@ static enum log_level log_least = LEVEL_NOTICE;
 static void (*log_sink)(void *context, enum log_level level, const char *sentence);
 static void *log_sink_context;
 
+static _Thread_local bool hushed;
+static _Thread_local char hushed_sentence[512];
+
 static const char *const level_word[] = {
 	[LEVEL_ERROR] = "error: ", [LEVEL_WARNING] = "warning: ", [LEVEL_NOTICE] = "", [LEVEL_DETAIL] = "",
 };
@@ -30,6 +33,18 @@ void log_set_sink(void (*sink)(void *context, enum log_level level, const char *
 {
 	log_sink = sink;
 	log_sink_context = context;
+}
+
+void log_hush(bool on)
+{
+	hushed = on;
+	if (on)
+		*hushed_sentence = 0;
+}
+
+const char *log_hushed(void)
+{
+	return hushed_sentence;
 }
 
 /* A name from outside may hold line ends, terminal commands or no text at all: none of it reaches the log. */
@@ -64,7 +79,9 @@ static void __attribute__((format(printf, 2, 0))) say(enum log_level level, cons
 	int saved_errno = errno;
 	int head, n;
 
-	if (!log_sink && level > log_least)
+	if (hushed)
+		level = LEVEL_DETAIL;
+	if (!log_sink && !hushed && level > log_least)
 		return;
 	head = snprintf(line, sizeof(line) / 2, "%s: %s", log_program, level_word[level]);
 	if (head < 0 || head >= (int)sizeof(line) / 2)
@@ -77,9 +94,11 @@ static void __attribute__((format(printf, 2, 0))) say(enum log_level level, cons
 		memcpy(line + head + n - 3, "...", 3);
 	}
 	clean(line);
+	if (hushed)
+		snprintf(hushed_sentence, sizeof(hushed_sentence), "%.511s", line + head);
 	if (log_sink) {
 		log_sink(log_sink_context, level, line + head);
-	} else {
+	} else if (level <= log_least) {
 		line[head + n] = '\n';
 		write_whole(line, (size_t)(head + n + 1));
 	}

@@ -3,6 +3,7 @@
 #define LIMBWATCH_LOG_H
 
 #include <stdarg.h>
+#include <stdbool.h>
 
 /*
  * One clear sentence per event, to stderr: "limbwatchd: error: ...".  The function that knows what went
@@ -16,6 +17,11 @@ void log_open(const char *program, enum log_level least);
 
 /** Sends every sentence to `sink` instead of stderr, all levels; NULL restores.  For tests. */
 void log_set_sink(void (*sink)(void *context, enum log_level level, const char *sentence), void *context);
+
+/** While on, this thread's sentences become details: for what is tried again and again and has been said. */
+void log_hush(bool on);
+/** The last sentence of this thread since log_hush(true), without what stands before it; "" when there was none. */
+const char *log_hushed(void);
 
 void log_error(const char *format, ...) __attribute__((format(printf, 1, 2)));
 void log_warning(const char *format, ...) __attribute__((format(printf, 1, 2)));
