@@ -18,9 +18,9 @@ SYSCONFDIR ?= $(if $(filter /usr,$(PREFIX)),/etc,$(PREFIX)/etc)
 comma      := ,
 BUILD      ?= build$(if $(CROSS),-$(CROSS:-=))$(if $(SAN),-$(subst $(comma),-,$(SAN)))
 
-PKGS       := alsa sndfile libconfig erfa gsl jansson
+PKGS       := alsa sndfile libconfig erfa gsl jansson libsystemd
 DEPS_BUILD := gcc libc6-dev make pkg-config libasound2-dev libsndfile1-dev libconfig-dev liberfa-dev \
-              libgsl-dev libjansson-dev tzdata
+              libgsl-dev libjansson-dev libsystemd-dev tzdata
 DEPS_CHECK := libcmocka-dev perl python3-numpy python3-scipy sox libsox-fmt-base pulseaudio \
               libasound2-plugins
 DEPS_BENCH := valgrind
