@@ -14,6 +14,8 @@ enum { EXIT_USAGE = 2 };
 struct options {
 	const char *config;
 	bool check, json, quiet, verbose;
+	struct config next;             /* read by the last reload and not taken up yet */
+	bool renewed;
 };
 
 static void help(FILE *out)
@@ -68,8 +70,10 @@ static int parse_options(struct options *o, int argc, char **argv)
 
 static void on_signal(int number)
 {
-	(void)number;
-	recorder_stop();
+	if (number == SIGHUP)
+		recorder_reload();
+	else
+		recorder_stop();
 }
 
 static void catch_signals(void)
@@ -78,6 +82,7 @@ static void catch_signals(void)
 
 	sigaction(SIGINT, &stop, NULL);
 	sigaction(SIGTERM, &stop, NULL);
+	sigaction(SIGHUP, &stop, NULL);
 	signal(SIGPIPE, SIG_IGN);       /* a reader of --json that goes away must not end the recording */
 }
 
@@ -89,10 +94,44 @@ static void print_contact(void *context, const struct config *config, const stru
 	(o->json ? report_json : report_text)(stdout, config, contact, segment);
 }
 
+/* A bad configuration changes nothing: the last good one runs on. */
+static bool reload(void *context)
+{
+	struct options *o = context;
+	struct config config;
+
+	if (config_load(&config, o->config) < 0) {
+		log_error("%s is refused; the recorder runs on as it was", o->config);
+		return false;
+	}
+	log_notice("%s is read anew", o->config);
+	if (o->renewed)
+		config_free(&o->next);
+	o->next = config;
+	o->renewed = true;
+	return true;
+}
+
+static int record(struct config *config, struct options *o)
+{
+	struct recorder_hooks hooks = {
+		.context = o, .contact = print_contact, .progress = true, .service = true, .reload = reload,
+	};
+	int ret;
+
+	while ((ret = recorder_run(config, &hooks)) == RECORDER_RENEW) {
+		config_free(config);
+		*config = o->next;
+		o->renewed = false;
+	}
+	if (o->renewed)
+		config_free(&o->next);
+	return ret;
+}
+
 int main(int argc, char **argv)
 {
 	struct options options = { .config = "/etc/limbwatch/limbwatch.conf" };
-	struct recorder_hooks hooks = { .context = &options, .contact = print_contact, .progress = true };
 	struct config config;
 	int ret;
 
@@ -105,7 +144,7 @@ int main(int argc, char **argv)
 	if (ret < 0)
 		return EXIT_USAGE;
 	catch_signals();
-	ret = options.check ? recorder_describe(&config, stdout) : recorder_run(&config, &hooks);
+	ret = options.check ? recorder_describe(&config, stdout) : record(&config, &options);
 	config_free(&config);
 	if (ret == -EINVAL)
 		return EXIT_USAGE;

@@ -302,5 +302,5 @@ const struct intake_driver intake_alsa = {
 	.name = "alsa", .summary = "a sound card, or any other PCM of ALSA",
 	.settings = alsa_settings,
 	.open = alsa_open, .start = alsa_start, .stop = alsa_stop, .close = alsa_close,
-	.read = alsa_read, .explain = alsa_explain,
+	.read = alsa_read, .explain = alsa_explain, .comes_back = true,
 };

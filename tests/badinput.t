@@ -1,7 +1,7 @@
 #!/bin/sh
 # Bad input: one clear sentence, the right exit status, nothing lost, no crash.
 . tests/support/tap.sh
-plan 15
+plan 16
 head='station = { name = "Brackenfold"; };
 channels = ( { name = "diode"; column = 1; wavelength_nm = 620; } );'
 
@@ -50,8 +50,11 @@ record nan
 [ "$status" -eq 0 ] && [ ! -s "$work/out" ]
 ok $? "a file full of NaN triggers nothing"
 config alsa 'driver = "alsa"; device = "hw:77,0";'
-record alsa
+run "$build/limbwatchd" --config "$work/alsa.conf" --check
 refused 1 'hw:77,0' "a missing sound card is named"
+run timeout -s TERM 1 "$build/limbwatchd" --config "$work/alsa.conf"
+grep -q 'tried again until it is' "$work/err" && grep -q 'hw:77,0' "$work/err"
+ok $? "and waited for by the recorder"
 config pipe "driver = \"pipe\"; path = \"$work/nopipe\"; rate_hz = 8000; channels = 1; format = \"S16\";"
 record pipe
 refused 1 'nopipe' "a missing pipe is named"

@@ -204,6 +204,15 @@ static void read_keep(struct config *c, const struct setting_value *v)
 	c->keep.remove_contacts = v[KEEP_REMOVE_CONTACTS].integer;
 }
 
+static void read_live(struct config *c, const struct setting_value *v, const struct setting_value *state)
+{
+	c->live.priority = (int)v[LIVE_PRIORITY].integer;
+	c->live.lock_memory = v[LIVE_LOCK].integer;
+	c->live.silence_s = v[LIVE_SILENCE].number;
+	c->state.socket = state[STATE_SOCKET].text;
+	c->state.given = state[STATE_SOCKET].given;
+}
+
 /* Everything after the settings have been read; takes `settings` over. */
 static int interpret(struct config *out, struct settings *settings)
 {
@@ -218,6 +227,7 @@ static int interpret(struct config *out, struct settings *settings)
 	c.driver = intake_driver_find(drivers[v[INTAKE_DRIVER].integer]);
 	c.driver_values = v + INTAKE_OWN;
 	read_keep(&c, settings_values(settings, "keep", 0));
+	read_live(&c, settings_values(settings, "live", 0), settings_values(settings, "state", 0));
 	read_watch(&c, settings_values(settings, "watch", 0), path, &wrong);
 	v = settings_values(settings, "clock", 0);
 	c.clock.leap_seconds = v[CLOCK_LEAP_SECONDS].text;

@@ -152,6 +152,23 @@ const struct setting keep_settings[] = {
 	{ .name = NULL },
 };
 
+const struct setting live_settings[] = {
+	[LIVE_PRIORITY] = { "priority", SETTING_INTEGER, 60, 0, 99,
+		.meaning = "real-time priority of the thread that reads a live device (SCHED_FIFO); 0: none" },
+	[LIVE_LOCK] = { "lock_memory", SETTING_BOOLEAN, 1, 0, 1,
+		.meaning = "keep the recorder's memory from being paged out while it listens to a live device" },
+	[LIVE_SILENCE] = { "silence_s", SETTING_NUMBER, 5, 0.5, 3600,
+		.meaning = "a sound card that delivers nothing, or a read of it that hangs, for so long is given up and the "
+			"card opened anew" },
+	{ .name = NULL },
+};
+
+const struct setting state_settings[] = {
+	[STATE_SOCKET] = { "socket", SETTING_TEXT, .text = "/run/limbwatch/state.sock", .max = 4095,
+		.meaning = "Unix socket on which the recorder shows what it is doing, as lines of JSON; empty: none" },
+	{ .name = NULL },
+};
+
 static const struct setting *driver_settings(const struct setting_value *values)
 {
 	static const char *const order[] = { "alsa", "file", "pipe", "synthetic" };    /* of the driver choice */
@@ -186,5 +203,7 @@ const struct setting_group config_groups[] = {
 	{ .name = "watch", .settings = watch_settings, .meaning = "recognising contacts" },
 	{ .name = "clock", .settings = clock_settings, .meaning = "tying samples to UTC" },
 	{ .name = "keep", .settings = keep_settings, .required = true, .meaning = "recording" },
+	{ .name = "live", .settings = live_settings, .meaning = "staying on time with a live device" },
+	{ .name = "state", .settings = state_settings, .meaning = "letting others look in" },
 	{ .name = NULL },
 };

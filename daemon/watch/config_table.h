@@ -25,8 +25,10 @@ enum { CLOCK_LEAP_SECONDS, CLOCK_HOST_SIGMA, CLOCK_CARD_TOLERANCE };
 enum {
 	KEEP_FOLDER, KEEP_EVERYTHING, KEEP_PRE, KEEP_POST, KEEP_RING, KEEP_PART, KEEP_FREE, KEEP_REMOVE_CONTACTS,
 };
+enum { LIVE_PRIORITY, LIVE_LOCK, LIVE_SILENCE };
+enum { STATE_SOCKET };
 
 extern const struct setting station_settings[], intake_settings[], channel_settings[], expected_settings[],
-	watch_settings[], clock_settings[], keep_settings[];
+	watch_settings[], clock_settings[], keep_settings[], live_settings[], state_settings[];
 
 #endif

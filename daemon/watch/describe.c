@@ -195,7 +195,7 @@ static void say_keep(const struct config *c, const struct intake *in, const stru
 
 static int describe(const struct config *c, struct intake *in, FILE *out)
 {
-	struct acquire acquire = { .intake = in };
+	static struct acquire acquire;  /* only its address counts here */
 	struct plans plans;
 	struct listener_settings settings = { .config = c, .intake = in, .acquire = &acquire, .plans = &plans };
 	struct listener *listener;

@@ -38,6 +38,7 @@ struct work {
 int keeper_open(struct keeper *keeper)
 {
 	keeper->delivery = NULL;
+	atomic_init(&keeper->free_bytes, -1);
 	keeper->last = &keeper->delivery;
 	return -pthread_mutex_init(&keeper->mutex, NULL);
 }
@@ -111,10 +112,18 @@ static int create_segment(struct work *w, struct piece *piece, uint64_t first)
 	return segment_create(&piece->segment, keeper->disk, &header);
 }
 
+static int make_space(struct keeper *keeper)
+{
+	const struct config *config = keeper->config;
+	int ret = space_make(keeper->disk, config->keep.folder, config->keep.free_bytes, config->keep.remove_contacts);
+
+	atomic_store(&keeper->free_bytes, keeper->disk->free_bytes(config->keep.folder));
+	return ret;
+}
+
 /* Begins a piece at frame `first`; when the disk is full, after removing what may be removed. */
 static int begin_piece(struct work *w, uint64_t first)
 {
-	const struct config *config = w->keeper->config;
 	struct piece *piece = &w->piece[w->pieces];
 	int ret;
 
@@ -122,14 +131,15 @@ static int begin_piece(struct work *w, uint64_t first)
 		return -EMFILE;
 	*piece = (struct piece){ .first = first, .end = first };
 	choose_name(w->keeper, piece->name, w->plan->name);
-	ret = space_make(w->keeper->disk, config->keep.folder, config->keep.free_bytes, config->keep.remove_contacts);
+	ret = make_space(w->keeper);
 	if (ret == 0)
 		ret = create_segment(w, piece, first);
 	if (ret < 0)
 		return ret;
 	w->pieces++;
 	w->version = 0;                 /* its sidecar is due */
-	log_detail("recording %s/%s.wav", config->keep.folder, piece->name);
+	atomic_store(&w->keeper->writing, true);
+	log_detail("recording %s/%s.wav", w->keeper->config->keep.folder, piece->name);
 	return 0;
 }
 
@@ -150,6 +160,7 @@ static void end_piece(struct work *w)
 	piece->end = segment_position(piece->segment);
 	ret = segment_close(piece->segment);
 	piece->segment = NULL;
+	atomic_store(&w->keeper->writing, false);
 	if (ret < 0) {
 		log_error("%s/%s.wav: cannot be closed: %s; the next start repairs it", w->keeper->config->keep.folder,
 		          piece->name, strerror(-ret));
@@ -286,6 +297,7 @@ static void disk_failed(struct work *w, int ret)
 		          strerror(-ret));
 	trouble(w->keeper, ret);
 	w->refused = true;
+	atomic_store(&w->keeper->refusing, ret);
 	w->again = now.tv_sec + 5;
 }
 
@@ -301,13 +313,10 @@ static bool disk_ready(struct work *w)
 
 static int keep_space(struct work *w, uint64_t first)
 {
-	const struct keeper *keeper = w->keeper;
-
-	if ((double)(first - w->checked) < 10 * keeper->intake->rate)
+	if ((double)(first - w->checked) < 10 * w->keeper->intake->rate)
 		return 0;
 	w->checked = first;
-	return space_make(keeper->disk, keeper->config->keep.folder, keeper->config->keep.free_bytes,
-	                  keeper->config->keep.remove_contacts);
+	return make_space(w->keeper);
 }
 
 static void write_frames(struct work *w, size_t count, const struct ring_news *news)
@@ -333,6 +342,7 @@ static void write_frames(struct work *w, size_t count, const struct ring_news *n
 			if (w->refused)
 				log_notice("%s: recording again", w->keeper->config->keep.folder);
 			w->refused = false;
+			atomic_store(&w->keeper->refusing, 0);
 			return;
 		}
 		disk_failed(w, ret);

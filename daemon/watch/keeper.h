@@ -4,6 +4,7 @@
 
 #include <pthread.h>
 #include <stdatomic.h>
+#include <stdbool.h>
 #include "limbwatch/config.h"
 #include "limbwatch/disk.h"
 #include "limbwatch/intake.h"
@@ -30,6 +31,9 @@ struct keeper {
 	pthread_mutex_t mutex;
 	struct delivery *delivery, **last;
 	atomic_int trouble;             /* first -errno of the disk, 0: none */
+	atomic_int refusing;            /* -errno while the disk takes nothing, 0: it does, or has not been asked */
+	atomic_bool writing;            /* a segment is open */
+	atomic_llong free_bytes;        /* at the last look; -1: not looked yet */
 	atomic_uint segments;           /* closed */
 	atomic_ullong lost;             /* frames the keeper was too slow for */
 };

@@ -5,12 +5,15 @@
 #include <time.h>
 #include "limbwatch/host_clock.h"
 #include "limbwatch/log.h"
+#include "limbwatch/stamp_line.h"
 #include "listen_inner.h"
 
 static const double settle_s = 4;       /* pulses come up to two seconds late, and one more each side helps */
 static const double patience_s = 2;     /* stamps of a live device come with the first blocks */
+static const double show_every_s = 0.2;
 static const double fill_s = 600;       /* longer gaps end a segment instead of filling it with zeros */
 static const double gap_sigma_s = 0.001;/* how well an intake knows the length of a gap, at worst: see alsa.c */
+static const double gap_sigma_relative = 30e-6;        /* and the rate by which it is counted: see stamp_line.c */
 
 /* Latency is the same number of series samples for every detector: what counts is the slowest series. */
 static void measure_hold(struct listener *l, const struct lane_settings *settings, double *latency_samples)
@@ -120,7 +123,7 @@ int listener_create(struct listener **out, const struct listener_settings *setti
 	l->config = settings->config;
 	l->rate = settings->intake->rate;
 	l->frames = malloc(CHUNK * frame_bytes(settings->intake->format));
-	l->samples = malloc(CHUNK * sizeof(*l->samples));
+	l->samples = malloc(CHUNK * sizeof(*l->samples));       /* of doubles; of floats for the strip chart */
 	if (!l->frames || !l->samples)
 		goto destroy;
 	ret = create_clock(l);
@@ -130,6 +133,8 @@ int listener_create(struct listener **out, const struct listener_settings *setti
 	if (ret < 0)
 		goto destroy;
 	l->settle = (uint64_t)(settle_s * l->rate) + 1;
+	strip_create(&l->strip, l->rate);
+	vigils_create(l);
 	*out = l;
 	return 0;
 destroy:
@@ -178,6 +183,16 @@ uint64_t listener_heard(const struct listener *l)
 unsigned listener_contacts(const struct listener *l)
 {
 	return atomic_load(&l->contacts);
+}
+
+unsigned long long listener_beats(const struct listener *l)
+{
+	return atomic_load(&l->beats);
+}
+
+const struct latency *listener_latency(const struct listener *l)
+{
+	return &l->latency;
 }
 
 uint64_t listener_lost(const struct listener *l)
@@ -253,7 +268,8 @@ static void handle_gap(struct listener *l, const struct ring_news *news)
 		log_error("the signal thread was too slow: %llu frames not looked at", (unsigned long long)news->overrun);
 	}
 	if (news->lost > news->overrun)
-		frame_clock_add_gap(l->clock, (double)news->first, gap_sigma_s * l->rate);
+		frame_clock_add_gap(l->clock, (double)news->first,
+		                    hypot(gap_sigma_s * l->rate, gap_sigma_relative * (double)(news->lost - news->overrun)));
 	if ((double)news->lost > fill_s * l->rate)
 		plans_break(l, l->next_frame, news->first);
 }
@@ -281,9 +297,59 @@ static void hear(struct listener *l, size_t count, const struct ring_news *news)
 	for (size_t k = 0; k < l->lanes; k++)
 		sightings_add(l, contact, lane_execute(l->lane[k], l->frames, count, news->first, contact, SIGHTINGS));
 	vigils_execute(l, l->frames, count, news->first);
+	if (l->settings.glance)
+		strip_execute(&l->strip, l->settings.glance, l->config, l->settings.intake->format, l->frames, count,
+		              news->first, (float *)l->samples);
 	l->next_frame = news->first + count;
 	say_undated(l, false);
 	solve_clock(l, false);
+}
+
+static void show_vigils(const struct listener *l, struct glance_view *v)
+{
+	v->open = v->next = -1;
+	v->busy = l->sightings > 0;
+	for (size_t k = 0; k < l->plans; k++)
+		v->busy |= l->plan[k]->reason != REASON_ALL;
+	for (int k = 0; k < (int)l->config->expecteds; k++) {
+		const struct vigil *vigil = &l->vigil[k];
+
+		if (vigil->state == VIGIL_OPEN) {
+			v->open = k;
+			v->busy = true;
+		}
+		if (vigil->state == VIGIL_WAITING && l->dated &&
+		    (v->next < 0 || tai_difference(vigil->begin, v->next_begin) < 0)) {
+			v->next = k;
+			v->next_begin = vigil->begin;
+		}
+	}
+}
+
+static void show(struct listener *l)
+{
+	struct glance *glance = l->settings.glance;
+	struct glance_view *v = &glance->view;
+
+	if ((double)(l->next_frame - l->shown) < show_every_s * l->rate)
+		return;
+	l->shown = l->next_frame;
+	pthread_mutex_lock(&glance->mutex);
+	v->frame = l->next_frame;
+	v->bin_s = (double)l->strip.frames / l->rate;
+	frame_clock_at(l->clock, (double)l->next_frame, &v->now);
+	frame_clock_summarise(l->clock, &v->clock);
+	show_vigils(l, v);
+	pthread_mutex_unlock(&glance->mutex);
+}
+
+/* How long after the newest frame was taken all of it has been looked at. */
+static void time_it(struct listener *l)
+{
+	int64_t taken;
+
+	if (l->settings.intake->real_time && acquire_frame_time(l->settings.acquire, l->next_frame, &taken))
+		latency_add(&l->latency, host_now() - taken);
 }
 
 static void decide(struct listener *l, bool ended)
@@ -330,6 +396,7 @@ void *listener_run(void *argument)
 	for (;;) {
 		size_t count = ring_read(l->settings.reader, l->frames, CHUNK, &news);
 
+		atomic_fetch_add_explicit(&l->beats, 1, memory_order_relaxed);
 		if (count == 0 && news.ended)
 			break;
 		if (count == 0) {
@@ -341,6 +408,9 @@ void *listener_run(void *argument)
 		sightings_update(l, false);
 		plans_update(l, false);
 		decide(l, false);
+		time_it(l);
+		if (l->settings.glance)
+			show(l);
 	}
 	finish(l);
 	return NULL;

@@ -8,6 +8,8 @@
 #include "limbwatch/frame_clock.h"
 #include "limbwatch/intake.h"
 #include "limbwatch/ring.h"
+#include "device.h"
+#include "glance.h"
 #include "plan.h"
 
 /* The signal thread: series, detection, pulses, clock, and what is to be kept. */
@@ -15,8 +17,10 @@ struct listener;
 
 struct listener_settings {
 	const struct config *config;
-	const struct intake *intake;
+	const struct intake *intake;    /* format, rate and the like: a copy, no calls through it */
+	struct device *device;          /* for its name and controls as they are now; NULL: as in `intake` */
 	struct acquire *acquire;
+	struct glance *glance;          /* NULL: nobody looks */
 	struct ring_reader *reader;
 	struct plans *plans;
 	long idle_ns;
@@ -38,6 +42,9 @@ void *listener_run(void *listener);
 /* Any thread. */
 uint64_t listener_heard(const struct listener *listener);       /* frames */
 unsigned listener_contacts(const struct listener *listener);
+unsigned long long listener_beats(const struct listener *listener);     /* grows while the thread makes progress */
+/** From a chunk's last sample until everything has looked at it: when a trigger in it would be out.  Live devices only. */
+const struct latency *listener_latency(const struct listener *listener);
 uint64_t listener_lost(const struct listener *listener);        /* frames it was too slow for */
 
 #endif

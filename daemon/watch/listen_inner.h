@@ -51,13 +51,17 @@ struct listener {
 	uint64_t clipped;               /* of lanes already gone */
 	void *frames;                   /* one chunk */
 	double *samples;
-	atomic_ullong heard, lost;
+	struct strip strip;
+	uint64_t shown;                 /* frame at the last glance */
+	struct latency latency;
+	atomic_ullong heard, lost, beats;
 	atomic_uint contacts;
 };
 
 enum { CHUNK = 4096 };                  /* frames */
 
 /* vigil.c */
+void vigils_create(struct listener *l);
 /** Opens, refreshes and closes vigils as the frames pass. `ending`: no more frames will come. */
 void vigils_update(struct listener *l, bool ending);
 /** Feeds the open vigils' lanes. */

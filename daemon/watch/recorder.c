@@ -13,30 +13,51 @@
 #include "limbwatch/log.h"
 #include "limbwatch/recorder.h"
 #include "limbwatch/segment.h"
+#include "limbwatch/stamp_line.h"
 #include "listen.h"
+#include "realtime.h"
+#include "service.h"
+#include "show.h"
 
 static const long idle_live_ns = 2000000, idle_replay_ns = 200000, poll_ns = 50000000;
 static const double progress_every_s = 5;
+static const int64_t stuck_ns = 10000000000;    /* the signal thread looks for frames every 2 ms */
 
-static atomic_bool stop_requested;
+static atomic_bool stop_requested, reload_requested;
 
 struct recorder {
 	const struct config *config;
 	const struct recorder_hooks *hooks;
-	struct intake *intake;
+	atomic_bool stop;               /* this run's: also set when a new configuration is taken up */
+	bool renew;                     /* a new configuration waits for the end of the vigil */
+	bool renewing_said;
+	struct device device;
+	struct intake face;             /* the device's, as first opened: format and rate stay */
 	struct ring *ring;
 	struct ring_reader *hearing, *keeping;
 	struct plans plans;
 	struct keeper keeper;
 	struct listener *listener;
 	struct acquire acquire;
-	pthread_t acquire_thread, signal_thread, keeper_thread;
+	struct glance glance;
+	struct shown shown;
+	pthread_t signal_thread, keeper_thread;
+	unsigned long long beats;       /* of the signal thread */
+	int64_t beat_ns;
+	bool stuck_said;
+	unsigned losses_shown;
+	enum device_state state_shown;
 	double said_s;                  /* CLOCK_MONOTONIC of the last progress line */
 };
 
 void recorder_stop(void)
 {
 	atomic_store(&stop_requested, true);
+}
+
+void recorder_reload(void)
+{
+	atomic_store(&reload_requested, true);
 }
 
 static double monotonic_s(void)
@@ -112,13 +133,13 @@ unlock:
 
 static int create_ring(struct recorder *r)
 {
-	double frames = (double)listener_backlog(r->listener) + r->config->keep.ring_s * r->intake->rate;
-	size_t bytes = frame_bytes(r->intake->format);
+	double frames = (double)listener_backlog(r->listener) + r->config->keep.ring_s * r->face.rate;
+	size_t bytes = frame_bytes(r->face.format);
 	int ret;
 
 	ret = ring_create(&r->ring, bytes, (size_t)frames);
 	if (ret < 0) {
-		log_error("no memory for a ring of %.0f s (%.0f MB): %s", frames / r->intake->rate,
+		log_error("no memory for a ring of %.0f s (%.0f MB): %s", frames / r->face.rate,
 		          frames * (double)bytes / 1e6, strerror(-ret));
 		return ret;
 	}
@@ -149,9 +170,11 @@ static void deliver(struct recorder *r)
 	struct delivery *delivery;
 
 	while ((delivery = keeper_deliver(&r->keeper))) {
+		const char *segment = *delivery->segment ? delivery->segment : NULL;
+
 		if (r->hooks->contact)
-			r->hooks->contact(r->hooks->context, r->config, &delivery->contact,
-			                  *delivery->segment ? delivery->segment : NULL);
+			r->hooks->contact(r->hooks->context, r->config, &delivery->contact, segment);
+		show_contact(&r->shown, &delivery->contact, segment);
 		free(delivery);
 	}
 }
@@ -161,27 +184,109 @@ static void say_progress(struct recorder *r)
 	double now = monotonic_s();
 	double heard = (double)listener_heard(r->listener);
 
-	if (!r->hooks->progress || r->intake->real_time || now - r->said_s < progress_every_s)
+	if (!r->hooks->progress || r->face.real_time || now - r->said_s < progress_every_s)
 		return;
 	r->said_s = now;
-	if (r->intake->total_frames)
+	if (r->face.total_frames)
 		log_notice("replay: %.0f%% (%.1f of %.1f h), contacts so far: %u",
-		           100 * heard / (double)r->intake->total_frames, heard / r->intake->rate / 3600,
-		           (double)r->intake->total_frames / r->intake->rate / 3600, listener_contacts(r->listener));
+		           100 * heard / (double)r->face.total_frames, heard / r->face.rate / 3600,
+		           (double)r->face.total_frames / r->face.rate / 3600, listener_contacts(r->listener));
 	else
-		log_notice("replay: %.1f h, contacts so far: %u", heard / r->intake->rate / 3600,
+		log_notice("replay: %.1f h, contacts so far: %u", heard / r->face.rate / 3600,
 		           listener_contacts(r->listener));
 }
 
-/* The main thread's loop: contacts out, progress, until the keeper has carried out the last plan. */
+/* ------------------------------------------------------------------ the main thread's loop */
+
+/* Signals become this run's own flags here, for a handler may not do more. */
+static void heed_signals(struct recorder *r)
+{
+	if (atomic_load(&stop_requested)) {
+		if (!atomic_exchange(&r->stop, true) && r->hooks->service)
+			service_stopping();
+		r->renew = false;
+	}
+	if (!atomic_exchange(&reload_requested, false) || !r->hooks->reload)
+		return;
+	if (r->hooks->service)
+		service_reloading();
+	r->renew = r->hooks->reload(r->hooks->context) || r->renew;
+	r->renewing_said = false;
+	if (r->hooks->service && !r->renew)
+		service_ready();
+}
+
+/* A new configuration is taken up between vigils, and not while a contact is still being timed. */
+static void renew_when_quiet(struct recorder *r)
+{
+	bool busy;
+
+	if (!r->renew || atomic_load(&r->stop))
+		return;
+	pthread_mutex_lock(&r->glance.mutex);
+	busy = r->glance.view.busy;
+	pthread_mutex_unlock(&r->glance.mutex);
+	if (!busy)
+		atomic_store(&r->stop, true);
+	else if (!r->renewing_said)
+		log_notice("the new configuration is taken up when the vigil is over");
+	if (busy && !r->renewing_said && r->hooks->service)
+		service_ready();
+	r->renewing_said = true;
+}
+
+/* What the manager's watchdog is tied to: acquire (looked after by device_watch), signal, and this thread itself. */
+static void check_progress(struct recorder *r)
+{
+	unsigned long long beats = r->listener ? listener_beats(r->listener) : r->beats + 1;
+	int64_t now = host_now();
+
+	if (beats != r->beats || !r->face.real_time) {
+		r->beats = beats;
+		r->beat_ns = now;
+		r->stuck_said = false;
+	}
+	if (now - r->beat_ns < stuck_ns) {
+		service_alive();
+		return;
+	}
+	if (!r->stuck_said)
+		log_error("the signal thread has made no progress for %.0f s", (double)(now - r->beat_ns) * 1e-9);
+	r->stuck_said = true;
+}
+
+static void show_changes(struct recorder *r)
+{
+	if (r->device.losses != r->losses_shown)
+		show_event(&r->shown, r->device.why);
+	else if (r->device.state != r->state_shown && r->device.state == DEVICE_RUNNING && r->losses_shown)
+		show_event(&r->shown, "the device is back");
+	r->losses_shown = r->device.losses;
+	r->state_shown = r->device.state;
+	show_round(&r->shown, &r->device, &r->acquire, &r->keeper, &r->glance, listener_latency(r->listener),
+	           listener_contacts(r->listener));
+	state_poll(r->shown.state);
+}
+
+/* Until the keeper has carried out the last plan. */
 static void watch_over(struct recorder *r)
 {
-	const struct timespec moment = { .tv_nsec = r->intake->real_time ? poll_ns : poll_ns / 10 };
+	const struct timespec moment = { .tv_nsec = r->face.real_time ? poll_ns : poll_ns / 10 };
 
 	while (pthread_tryjoin_np(r->keeper_thread, NULL) == EBUSY) {
+		heed_signals(r);
+		renew_when_quiet(r);
+		device_watch(&r->device);
 		deliver(r);
 		say_progress(r);
+		if (r->hooks->service)
+			show_changes(r);
+		check_progress(r);
 		nanosleep(&moment, NULL);
+	}
+	while (r->device.state != DEVICE_ENDED) {       /* its thread ends the ring a moment before itself */
+		device_watch(&r->device);
+		nanosleep(&(struct timespec){ .tv_nsec = idle_replay_ns }, NULL);
 	}
 	deliver(r);
 }
@@ -207,12 +312,16 @@ static int run_threads(struct recorder *r)
 	ret = start_thread(&r->signal_thread, "signal", listener_run, r->listener);
 	if (ret < 0)
 		goto end_plans;
-	ret = start_thread(&r->acquire_thread, "acquire", acquire_run, &r->acquire);
+	ret = device_start(&r->device, &r->acquire);
 	if (ret < 0)
 		goto end_ring;
+	if (r->hooks->service && r->face.real_time)
+		realtime_say(r->config->live.lock_memory ? realtime_lock_memory() : 0,
+		             r->device.realtime < 0 ? r->device.realtime : 0);
+	if (r->hooks->service)
+		service_ready();
 	watch_over(r);
 	pthread_join(r->signal_thread, NULL);
-	pthread_join(r->acquire_thread, NULL);
 	return 0;
 end_ring:
 	ring_end(r->ring);
@@ -223,35 +332,71 @@ end_plans:
 	return ret;
 }
 
+static void say_latency(const char *what, const struct latency *latency)
+{
+	struct latency_summary s;
+	char p50[32], p999[32], worst[32];
+
+	latency_read(latency, &s);
+	if (s.count)
+		log_detail("sample in to %s: %s half the time, %s at 99.9%%, %s at worst (%llu times)", what,
+		           report_interval(p50, s.p50_s), report_interval(p999, s.p999_s), report_interval(worst, s.worst_s),
+		           s.count);
+}
+
 /* How it ended, in words; the result of the run. */
 static int say_end(struct recorder *r)
 {
-	int result = atomic_load(&r->acquire.result), disk = atomic_load(&r->keeper.trouble);
+	int result = r->device.result, disk = atomic_load(&r->keeper.trouble);
 	unsigned long long lost = atomic_load(&r->keeper.lost), gaps = atomic_load(&r->acquire.lost);
-	char sentence[512] = "";
+	const char *sentence = r->device.why;
 
-	if (result != -ECANCELED && r->intake->driver->explain)
-		r->intake->driver->explain(r->intake, sentence, sizeof(sentence));
 	if (result != -ECANCELED && result != -ENODATA)
-		log_error("%s", *sentence ? sentence : strerror(-result));
+		log_error("%s", sentence);
 	else if (*sentence)
 		log_warning("%s", sentence);
 	if (gaps)
-		log_warning("%s lost %llu frames; the gaps are noted in the sidecars", r->intake->name, gaps);
+		log_warning("%s lost %llu frames; the gaps are noted in the sidecars", r->face.name, gaps);
+	say_latency("ring", &r->acquire.latency);
+	say_latency("trigger", listener_latency(r->listener));
 	log_notice("%.3f s of samples heard, %u contact%s, %u segment%s in %s",
-	           (double)listener_heard(r->listener) / r->intake->rate, listener_contacts(r->listener),
+	           (double)listener_heard(r->listener) / r->face.rate, listener_contacts(r->listener),
 	           listener_contacts(r->listener) == 1 ? "" : "s", atomic_load(&r->keeper.segments),
 	           atomic_load(&r->keeper.segments) == 1 ? "" : "s", r->config->keep.folder);
 	if (result != -ECANCELED && result != -ENODATA)
 		return result;
+	if (r->renew)
+		return RECORDER_RENEW;
 	return disk ? disk : lost || *sentence ? -EIO : 0;      /* incomplete data count as a failure, kept though they are */
+}
+
+/* Waits for a device that is not there yet. @return 1: found; 0: stopped, or a new configuration to take up; -errno */
+static int find_device(struct recorder *r)
+{
+	const struct timespec moment = { .tv_nsec = poll_ns };
+	int ret;
+
+	while ((ret = device_find(&r->device)) == 0) {
+		heed_signals(r);
+		if (r->renew || atomic_load(&r->stop))
+			return 0;
+		if (r->hooks->service) {
+			service_ready();
+			show_waiting(&r->shown);
+			state_poll(r->shown.state);
+		}
+		check_progress(r);
+		nanosleep(&moment, NULL);
+	}
+	return ret;
 }
 
 static int run(struct recorder *r)
 {
-	long idle = r->intake->real_time ? idle_live_ns : idle_replay_ns;
+	long idle = r->face.real_time ? idle_live_ns : idle_replay_ns;
 	struct listener_settings listener = {
-		.config = r->config, .intake = r->intake, .acquire = &r->acquire, .plans = &r->plans, .idle_ns = idle,
+		.config = r->config, .intake = &r->face, .device = &r->device, .acquire = &r->acquire, .plans = &r->plans,
+		.glance = r->hooks->service ? &r->glance : NULL, .idle_ns = idle,
 	};
 	int ret;
 
@@ -265,43 +410,83 @@ static int run(struct recorder *r)
 	if (ret < 0)
 		goto destroy_listener;
 	r->keeper = (struct keeper){
-		.config = r->config, .disk = &disk_real, .intake = r->intake, .reader = r->keeping, .plans = &r->plans,
+		.config = r->config, .disk = &disk_real, .intake = &r->face, .reader = r->keeping, .plans = &r->plans,
 		.idle_ns = idle,
 	};
 	ret = keeper_open(&r->keeper);
 	if (ret < 0)
 		goto destroy_ring;
-	r->acquire = (struct acquire){ .intake = r->intake, .ring = r->ring, .stop = &stop_requested };
-	ret = r->intake->driver->start(r->intake);
-	if (ret < 0)
-		goto close_keeper;
+	acquire_create(&r->acquire, r->ring, r->face.rate, &r->stop);
 	ret = run_threads(r);
 	if (ret == 0)
 		ret = say_end(r);
-	r->intake->driver->stop(r->intake);
-close_keeper:
 	keeper_close(&r->keeper);
 destroy_ring:
 	destroy_ring(r);
 destroy_listener:
 	listener_destroy(r->listener);
+	r->listener = NULL;
 close_plans:
 	plans_close(&r->plans);
 	return ret;
 }
 
+static void open_state(struct recorder *r)
+{
+	const char *path = r->config->state.socket;
+	int ret;
+
+	r->shown = (struct shown){ .config = r->config };
+	if (!r->hooks->service || !*path)
+		return;
+	ret = state_open(&r->shown.state, path);
+	if (ret == 0)
+		show_hello(&r->shown);
+	else if (r->config->state.given)
+		log_warning("state.socket %s cannot be made: %s; nobody can look in", path, strerror(-ret));
+	else
+		log_detail("no state socket at %s: %s", path, strerror(-ret));
+}
+
+static int find_and_run(struct recorder *r)
+{
+	int ret = find_device(r);
+
+	if (ret < 0)
+		return ret;
+	if (ret == 0)
+		return r->renew ? RECORDER_RENEW : 0;
+	device_face(&r->device, &r->face);
+	return run(r);
+}
+
 int recorder_run(const struct config *config, const struct recorder_hooks *hooks)
 {
-	struct recorder r = { .config = config, .hooks = hooks, .said_s = monotonic_s() };
-	int lock = prepare_folder(config), ret;
+	struct recorder *r = calloc(1, sizeof(*r));
+	int lock, ret;
 
+	if (!r)
+		return -ENOMEM;
+	r->config = config;
+	r->hooks = hooks;
+	r->said_s = monotonic_s();
+	r->beat_ns = host_now();
+	pthread_mutex_init(&r->glance.mutex, NULL);
+	r->glance.view.open = r->glance.view.next = -1;
+	ret = lock = prepare_folder(config);
 	if (lock < 0)
-		return lock;
-	ret = config->driver->open(&r.intake, config->driver_values);
-	if (ret == 0) {
-		ret = run(&r);
-		config->driver->close(r.intake);
-	}
+		goto free_recorder;
+	ret = device_create(&r->device, config, &r->stop);
+	if (ret < 0)
+		goto unlock;
+	open_state(r);
+	ret = find_and_run(r);
+	state_close(r->shown.state);
+	device_destroy(&r->device);
+unlock:
 	close(lock);
+free_recorder:
+	pthread_mutex_destroy(&r->glance.mutex);
+	free(r);
 	return ret;
 }

@@ -4,6 +4,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include "limbwatch/recorder.h"
+#include "report.h"
 
 /* JSON knows no NaN: what is not known is null. */
 static json_t *number(double x)
@@ -46,11 +47,13 @@ static void add_expectation(json_t *o, const struct config *config, const struct
 		json_object_set_new(o, "late_s", json_real(tai_difference(c->when, e->when)));
 }
 
-void report_json(FILE *out, const struct config *config, const struct contact *c, const char *segment)
+char *report_line(const struct config *config, const struct contact *c, const char *segment, const char *what)
 {
 	json_t *o = json_object();
 	char *text;
 
+	if (what)
+		json_object_set_new(o, "what", json_string(what));
 	json_object_set_new(o, "utc", instant(c->when, c->time_quality));
 	json_object_set_new(o, "sigma_s", rounded(c->sigma_s, 4));
 	json_object_set_new(o, "sigma_parts_s", json_pack("{s:o,s:o,s:o}", "fit", rounded(c->terms.fit, 4),
@@ -74,6 +77,13 @@ void report_json(FILE *out, const struct config *config, const struct contact *c
 	json_object_set_new(o, "clean", json_boolean(!c->marked));
 	text = json_dumps(o, JSON_COMPACT | JSON_REAL_PRECISION(15));
 	json_decref(o);
+	return text;
+}
+
+void report_json(FILE *out, const struct config *config, const struct contact *c, const char *segment)
+{
+	char *text = report_line(config, c, segment, NULL);
+
 	if (text)
 		fprintf(out, "%s\n", text);
 	fflush(out);

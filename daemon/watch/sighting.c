@@ -343,19 +343,21 @@ static void describe_contacts(const struct listener *l, struct plan *plan, struc
 static void describe(struct listener *l, struct plan *plan, bool final)
 {
 	const struct config *config = l->config;
-	const struct intake *intake = l->settings.intake;
+	struct intake face = *l->settings.intake;
 	uint64_t end = plan->to < l->next_frame ? plan->to : l->next_frame > plan->from ? l->next_frame : plan->from;
 	struct sidecar s = {
 		.format = SIDECAR_FORMAT, .latitude_deg = config->station.latitude_deg,
 		.longitude_deg = config->station.longitude_deg, .height_m = config->station.height_m,
-		.frames = intake->format, .rate = l->rate, .reason = plan->reason, .first = plan->from,
+		.frames = face.format, .rate = l->rate, .reason = plan->reason, .first = plan->from,
 		.clipped = l->clipped,
 	};
 
+	if (l->settings.device)
+		device_face(l->settings.device, &face);
 	snprintf(s.version, sizeof(s.version), "%s", LIMBWATCH_VERSION);
 	snprintf(s.station, sizeof(s.station), "%s", config->station.name);
-	snprintf(s.driver, sizeof(s.driver), "%s", intake->driver->name);
-	snprintf(s.device, sizeof(s.device), "%s", intake->name);
+	snprintf(s.driver, sizeof(s.driver), "%s", face.driver->name);
+	snprintf(s.device, sizeof(s.device), "%s", face.name);
 	for (size_t k = 0; k < l->lanes; k++)
 		s.clipped += lane_clipped(l->lane[k]);
 	describe_channels(l, &s);

@@ -14,6 +14,12 @@ static void place(struct vigil *vigil, const struct config *config, const struct
 	vigil->end = tai_add(e->when, vigil_half(config, e, config->watch.vigil_after_s));
 }
 
+void vigils_create(struct listener *l)
+{
+	for (size_t k = 0; k < l->config->expecteds; k++)
+		place(&l->vigil[k], l->config, &l->config->expected[k]);
+}
+
 static void create_lanes(struct listener *l, struct vigil *vigil, int expected)
 {
 	for (size_t k = 0; k < l->config->channels; k++) {
@@ -91,7 +97,6 @@ static void update_vigil(struct listener *l, int k, const struct clock_reading *
 	char text[TAI_TEXT];
 
 	if (vigil->state == VIGIL_WAITING && l->dated) {
-		place(vigil, l->config, e);
 		if (tai_difference(now->when, vigil->begin) < -margin)
 			return;
 		if (tai_difference(now->when, vigil->end) > 0) {

@@ -61,6 +61,8 @@ struct config {
 		int64_t part_bytes, free_bytes;
 		bool remove_contacts;
 	} keep;
+	struct { int priority; bool lock_memory; double silence_s; } live;
+	struct { const char *socket; bool given; } state;       /* path, or "" */
 };
 
 /**

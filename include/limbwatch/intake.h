@@ -46,6 +46,9 @@ struct intake_driver {
 	 * NULL: a driver that never has.
 	 */
 	void (*explain)(struct intake *intake, char *sentence, size_t size);
+	/* A device that may be lost and found again: the recorder opens it anew.  open gives -ENODEV or -EBUSY for what may
+	 * pass, -EINVAL for a fault of the configuration. */
+	bool comes_back;
 };
 
 struct intake {                         /* first member of every driver's own struct */

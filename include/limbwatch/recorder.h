@@ -13,18 +13,29 @@ struct recorder_hooks {
 	 * `segment`: path of the file that holds it once closed; NULL when the disk refused it. */
 	void (*contact)(void *context, const struct config *config, const struct contact *contact, const char *segment);
 	bool progress;                  /* say how far a long replay has come */
+	bool service;                   /* the daemon itself: state socket, service manager, real-time priority */
+	/* Main thread, after recorder_reload(): reads and checks the new configuration.  @return whether it is to be taken up,
+	 * which ends recorder_run() with RECORDER_RENEW when no vigil is open.  NULL: there is none. */
+	bool (*reload)(void *context);
 };
+
+enum { RECORDER_RENEW = 1 };
 
 /**
  * Records, detects and times until the data end or recorder_stop() is called; repairs first what an earlier run left
  * open in the folder.
  *
- * @return 0; -errno on failure (said); what was recorded is closed properly all the same
+ * A sound card that is missing, or lost and found again, is waited for.
+ *
+ * @return 0; RECORDER_RENEW: to be called again with the new configuration; -errno on failure (said); what was recorded
+ *         is closed properly all the same
  */
 int recorder_run(const struct config *config, const struct recorder_hooks *hooks);
 
 /** Ends recorder_run() soon.  Async-signal-safe. */
 void recorder_stop(void);
+/** Has the configuration read anew.  Async-signal-safe. */
+void recorder_reload(void);
 
 /**
  * Says in plain words, with units, everything the configuration means, after opening the intake to see what it delivers.
