@@ -305,19 +305,26 @@ static void hear(struct listener *l, size_t count, const struct ring_news *news)
 	solve_clock(l, false);
 }
 
+/* A vigil, or a contact or recording not finished: no time for changes. */
+static bool is_busy(const struct listener *l)
+{
+	bool busy = l->sightings > 0;
+
+	for (size_t k = 0; k < l->plans; k++)
+		busy |= l->plan[k]->reason != REASON_ALL;
+	for (size_t k = 0; k < l->config->expecteds; k++)
+		busy |= l->vigil[k].state == VIGIL_OPEN;
+	return busy;
+}
+
 static void show_vigils(const struct listener *l, struct glance_view *v)
 {
 	v->open = v->next = -1;
-	v->busy = l->sightings > 0;
-	for (size_t k = 0; k < l->plans; k++)
-		v->busy |= l->plan[k]->reason != REASON_ALL;
 	for (int k = 0; k < (int)l->config->expecteds; k++) {
 		const struct vigil *vigil = &l->vigil[k];
 
-		if (vigil->state == VIGIL_OPEN) {
+		if (vigil->state == VIGIL_OPEN)
 			v->open = k;
-			v->busy = true;
-		}
 		if (vigil->state == VIGIL_WAITING && l->dated &&
 		    (v->next < 0 || tai_difference(vigil->begin, v->next_begin) < 0)) {
 			v->next = k;
@@ -326,11 +333,24 @@ static void show_vigils(const struct listener *l, struct glance_view *v)
 	}
 }
 
+void listener_show_busy(struct listener *l, bool busy)
+{
+	struct glance *glance = l->settings.glance;
+
+	if (!glance || busy == l->busy)
+		return;
+	l->busy = busy;
+	pthread_mutex_lock(&glance->mutex);
+	glance->view.busy = busy;
+	pthread_mutex_unlock(&glance->mutex);
+}
+
 static void show(struct listener *l)
 {
 	struct glance *glance = l->settings.glance;
 	struct glance_view *v = &glance->view;
 
+	listener_show_busy(l, is_busy(l));
 	if ((double)(l->next_frame - l->shown) < show_every_s * l->rate)
 		return;
 	l->shown = l->next_frame;

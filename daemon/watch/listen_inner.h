@@ -53,12 +53,17 @@ struct listener {
 	double *samples;
 	struct strip strip;
 	uint64_t shown;                 /* frame at the last glance */
+	bool busy;                      /* as shown */
 	struct latency latency;
 	atomic_ullong heard, lost, beats;
 	atomic_uint contacts;
 };
 
 enum { CHUNK = 4096 };                  /* frames */
+
+/* listen.c */
+/** Shows at once that there is no time for changes, or that there is again. */
+void listener_show_busy(struct listener *l, bool busy);
 
 /* vigil.c */
 void vigils_create(struct listener *l);

@@ -56,6 +56,7 @@ static void open_vigil(struct listener *l, struct vigil *vigil, int expected)
 	double first = frame_clock_frame(l->clock, vigil->begin), last = frame_clock_frame(l->clock, vigil->end);
 	char text[TAI_TEXT];
 
+	listener_show_busy(l, true);
 	vigil->state = VIGIL_OPEN;
 	vigil->first = clamp_frame(first);
 	vigil->last = clamp_frame(ceil(last));

@@ -1,0 +1,254 @@
+# SPDX-License-Identifier: GPL-3.0-or-later
+"""Drives a live recorder (the synthetic intake at a device's pace) from outside and prints TAP."""
+import ctypes, glob, json, os, re, signal, socket, subprocess, sys, threading, time
+
+pause = threading.Event().wait
+program, work = sys.argv[1:3]
+tests, speaking = 0, threading.Lock()
+
+
+def ok(good, claim, why=""):
+    global tests
+    with speaking:
+        tests += 1
+        print(("ok" if good else "not ok"), tests, "-", claim)
+        if not good:
+            print("#", str(why).replace("\n", "\n# "))
+        sys.stdout.flush()
+
+
+def config(name, seconds, extra="", expected=""):
+    path = f"{work}/{name}.conf"
+    with open(path, "w") as out:
+        out.write(f'''station = {{ name = "Brackenfold"; }};
+intake = {{ driver = "synthetic"; real_time_pace = true; pulse = true; duration_s = {seconds}; rate_hz = 8000;
+  contact_s = {seconds / 2}; snr = 40; start_utc = "2031-04-02T01:23:15.25Z"; }};
+channels = ( {{ name = "photodiode"; column = 1; wavelength_nm = 620; }},
+             {{ name = "gps"; column = 2; measure = "pulse"; }} );
+{expected}
+keep = {{ folder = "{work}/{name}"; free_mib = 0; {extra} }};
+state = {{ socket = "{work}/{name}.sock"; }};
+''')
+    return path
+
+
+class Manager:
+    """What the service manager is told."""
+
+    def __init__(self, path):
+        self.path, self.lines = path, []
+        self.socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)
+        self.socket.bind(path)
+        self.socket.setblocking(False)
+
+    def read(self):
+        try:
+            while True:
+                self.lines += self.socket.recv(4096).decode().split("\n")
+        except BlockingIOError:
+            pass
+        return self.lines
+
+
+class Recorder:
+    def __init__(self, path, **environment):
+        self.log = open(f"{path}.log", "w+")
+        self.process = subprocess.Popen([program, "--config", path, "--json", "--verbose"], stdout=subprocess.PIPE,
+                                        stderr=self.log, env=dict(os.environ, **environment))
+
+    def said(self):
+        self.log.seek(0)
+        return self.log.read()
+
+    def wait_for(self, what, seconds=30):
+        """Until `what()` is true."""
+        end = time.monotonic() + seconds
+        while time.monotonic() < end and self.process.poll() is None:
+            if what():
+                return True
+            pause(0.02)
+        return bool(what())
+
+    def end(self, seconds=60):
+        try:
+            out, _ = self.process.communicate(timeout=seconds)
+        except subprocess.TimeoutExpired:
+            self.process.kill()
+            out, _ = self.process.communicate()
+            return None, out.decode(), self.said()
+        return self.process.returncode, out.decode(), self.said()
+
+
+def connect(path, seconds=10):
+    end = time.monotonic() + seconds
+    while True:
+        reader = socket.socket(socket.AF_UNIX)
+        try:
+            reader.connect(path)
+            return reader
+        except OSError:
+            reader.close()
+            if time.monotonic() > end:
+                raise
+            pause(0.02)
+
+
+def lines_of(reader, until, seconds=20):
+    """Lines of JSON until `until(lines)`."""
+    data, lines, end = b"", [], time.monotonic() + seconds
+    reader.settimeout(0.2)
+    while time.monotonic() < end and not until(lines):
+        try:
+            more = reader.recv(65536)
+        except socket.timeout:
+            continue
+        except ConnectionError:
+            break
+        if not more:
+            break
+        data += more
+        *whole, data = data.split(b"\n")
+        lines += [json.loads(line) for line in whole]
+    return lines
+
+
+def thread(process, name):
+    for task in glob.glob(f"/proc/{process.pid}/task/*/comm"):
+        if open(task).read().strip() == name:
+            return int(task.split("/")[-2])
+    return None
+
+
+def looked_at():
+    recorder = Recorder(config("look", 14))
+    idle = [connect(f"{work}/look.sock") for _ in range(14)]     # nobody reads here
+    reader = connect(f"{work}/look.sock")
+    reader.shutdown(socket.SHUT_WR)
+    lines = lines_of(reader, lambda seen: any(line["what"] == "contact" for line in seen))
+    kinds = [line["what"] for line in lines]
+    ok(kinds and kinds[0] == "hello" and lines[0]["station"] == "Brackenfold" and
+       lines[0]["channels"] == ["photodiode", "gps"], "a new reader is greeted", kinds[:3])
+    ok({"device", "clock", "vigil", "disk", "latency", "series", "contact"} <= set(kinds), "and told everything", set(kinds))
+    last = {line["what"]: line for line in lines}
+    ok(last["clock"]["time_quality"] == "pulse" and last["clock"]["pulses_accepted"] >= 5, "the clock is shown", last["clock"])
+    ok(abs(last["contact"]["snr"] - 40) < 12 and last["contact"]["utc"].startswith("2031-04-02T01:23:22.2"),
+       "the contact is shown with its UTC", last["contact"])
+    bins = sum(len(line["channels"]["photodiode"]["mean"]) for line in lines if line["what"] == "series")
+    mean = [m for line in lines if line["what"] == "series" for m in line["channels"]["photodiode"]["mean"]]
+    ok(bins > 60 and 0.25 < mean[0] < 0.35, "the strip chart has its bins", (bins, mean[:1]))
+    ok(last["latency"]["to_ring"]["count"] > 500, "latencies are counted", last["latency"])
+    extra = [connect(f"{work}/look.sock") for _ in range(3)]
+    told = lines_of(extra[-1], lambda seen: len(seen) > 0, 5)
+    ok(bool(told) and told[0]["what"] == "full", "too many readers are told so", told[:1])
+    status, out, said = recorder.end()
+    ok(status == 0 and len(out.splitlines()) == 1 and "lost" not in said.replace("times_lost", ""),
+       "readers that never read cost nothing", (status, out, said))
+    ok(not os.path.exists(f"{work}/look.sock"), "the socket is gone with the recorder")
+    for each in idle + extra:
+        each.close()
+
+
+def left_over():
+    path = config("left", 600)
+    recorder = Recorder(path)
+    connect(f"{work}/left.sock").close()
+    recorder.process.kill()
+    recorder.end()
+    ok(os.path.exists(f"{work}/left.sock"), "a killed recorder leaves its socket")
+    recorder = Recorder(path)
+    try:
+        connect(f"{work}/left.sock").close()
+        ok(True, "and the next one takes its place")
+    except OSError as error:
+        ok(False, "and the next one takes its place", error)
+    recorder.process.terminate()
+    status, _, said = recorder.end()
+    ok(status == 0, "a recorder asked to end ends well", (status, said))
+
+
+def reloaded():
+    manager = Manager(f"{work}/notify")
+    path = config("reload", 600)
+    recorder = Recorder(path, NOTIFY_SOCKET=manager.path, WATCHDOG_USEC="2000000")
+    recorder.wait_for(lambda: manager.read().count("WATCHDOG=1") > 2)
+    ok("READY=1" in manager.lines, "the manager hears that it is ready", manager.lines)
+    ok(manager.lines.count("WATCHDOG=1") > 2, "and that it lives", manager.lines)
+    ok(any(line.startswith("STATUS=") for line in manager.lines), "and what it does", manager.lines)
+    good = open(path).read()
+    open(path, "w").write(good.replace('column = 1;', 'column = 99;'))
+    recorder.process.send_signal(signal.SIGHUP)
+    recorder.wait_for(lambda: "is refused" in recorder.said())
+    ok(re.search(r"line \d+.*column.*99", recorder.said()) and "runs on as it was" in recorder.said(),
+       "a bad configuration is refused with its line", recorder.said())
+    open(path, "w").write(good.replace("Brackenfold", "Hollowmere"))
+    recorder.process.send_signal(signal.SIGHUP)
+
+    def station():
+        try:
+            reader = connect(f"{work}/reload.sock", 1)
+        except OSError:
+            return False
+        with reader:
+            lines = lines_of(reader, lambda seen: len(seen) > 0, 2)
+        return bool(lines) and lines[0].get("station") == "Hollowmere"
+    ok(recorder.wait_for(station), "a good one is taken up", recorder.said())
+    manager.read()
+    ok("RELOADING=1" in manager.lines and manager.lines.index("RELOADING=1") <
+       len(manager.lines) - 1 - manager.lines[::-1].index("READY=1"), "and the manager hears of it", manager.lines)
+    recorder.process.terminate()
+    status, _, said = recorder.end()
+    ok(status == 0 and "STOPPING=1" in manager.read(), "and of the end", (status, said))
+
+
+def renewed_after_the_vigil():
+    expected = '''expected = ( { source = "Anwen"; kind = "immersion"; utc = "2031-04-02T01:23:20.25Z"; sigma_s = 0.2; } );
+watch = { outside_vigils = false; vigil_before_s = 2; vigil_after_s = 2; };'''
+    path = config("vigil", 10, expected=expected)
+    recorder = Recorder(path)
+    recorder.wait_for(lambda: "vigil for" in recorder.said())
+    open(path, "a").write("\n")
+    recorder.process.send_signal(signal.SIGHUP)
+    recorder.wait_for(lambda: "read anew" in recorder.said())
+    status, out, said = recorder.end()
+    ok("when the vigil is over" in said, "during a vigil a new configuration waits", said)
+    ok(out.count('"source":"Anwen"') >= 1, "and the contact is caught", (out, said))
+
+
+def stuck():
+    manager = Manager(f"{work}/notify-stuck")
+    recorder = Recorder(config("stuck", 600), NOTIFY_SOCKET=manager.path, WATCHDOG_USEC="1000000")
+    recorder.wait_for(lambda: manager.read().count("WATCHDOG=1") > 2)
+    libc = ctypes.CDLL(None, use_errno=True)
+    tid = thread(recorder.process, "signal")
+    attach, detach = 16, 17         # PTRACE_ATTACH stops one thread, the others run on: linux/ptrace.h
+    if libc.ptrace(attach, tid, None, None) != 0:
+        ok(True, "a thread that stands still stops the watchdog # SKIP ptrace is not allowed here")
+    else:
+        os.waitpid(tid, 0x40000000)     # __WALL
+        said = recorder.wait_for(lambda: manager.read() and "no progress" in recorder.said(), 30)
+        pause(0.5)
+        manager.read()
+        before = len(manager.lines)
+        pause(1.5)
+        silent = "WATCHDOG=1" not in manager.read()[before:]
+        ok(said and silent, "a thread that stands still stops the watchdog", (said, silent, recorder.said()))
+        libc.ptrace(detach, tid, None, None)
+    recorder.process.terminate()
+    status, _, said = recorder.end()
+    ok(status == 0, "and the recorder still ends", (status, said))
+
+
+def guarded(part):
+    try:
+        part()
+    except Exception as error:          # the plan tells of the tests that are missing then
+        print("#", part.__name__, repr(error))
+
+
+print("1..23")
+parts = [threading.Thread(target=guarded, args=(part,))
+         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck)]
+for part in parts:
+    part.start()
+for part in parts:
+    part.join()
