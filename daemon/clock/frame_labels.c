@@ -21,7 +21,10 @@ void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when,
 			c->label[k] = c->label[2 * k];
 		c->labels /= 2;
 	}
-	c->label[c->labels++] = (struct label){ frame, sigma_s, when, late, quality };
+	c->label[c->labels++] = (struct label){
+		.told = frame, .frame = clock_counted(c, frame, NULL), .told_sigma_s = sigma_s, .sigma_s = sigma_s, .when = when,
+		.late = late, .quality = quality,
+	};
 }
 
 /* ------------------------------------------------------------------ between pulses */
@@ -43,6 +46,7 @@ void carry_labels(struct frame_clock *c, const struct node *oldest)
 		if (l->frame < oldest->frame) {
 			l->when = tai_add(l->when, there - clock_seconds(c, l->frame, NULL));
 			l->frame = oldest->frame;
+			l->told = oldest->told;
 		}
 	}
 }
@@ -317,7 +321,7 @@ static void read_pulses(const struct frame_clock *c, double frame, struct clock_
 	}
 }
 
-void frame_clock_at(const struct frame_clock *c, double frame, struct clock_reading *out)
+static void read_counted(const struct frame_clock *c, double frame, struct clock_reading *out)
 {
 	*out = (struct clock_reading){ .quality = TIME_FREE, .sigma_s = NAN };
 	if (c->accepted)
@@ -328,7 +332,16 @@ void frame_clock_at(const struct frame_clock *c, double frame, struct clock_read
 		out->when = tai_of(0, frame / c->settings.rate);
 }
 
-double frame_clock_rate(const struct frame_clock *c, double frame)
+void frame_clock_at(const struct frame_clock *c, double frame, struct clock_reading *out)
+{
+	double sigma;
+
+	read_counted(c, clock_counted(c, frame, &sigma), out);
+	out->terms.interpolation = hypot(out->terms.interpolation, sigma / c->settings.rate);
+	out->sigma_s = hypot(out->sigma_s, sigma / c->settings.rate);
+}
+
+static double counted_rate(const struct frame_clock *c, double frame)
 {
 	const struct node *before, *after;
 
@@ -336,6 +349,11 @@ double frame_clock_rate(const struct frame_clock *c, double frame)
 		return c->settings.rate / (1 + (c->line_fitted ? c->line_slope : 0));
 	neighbours(c, frame, &before, &after);
 	return c->settings.rate * (1 + (before ? before : after)->state.y);
+}
+
+double frame_clock_rate(const struct frame_clock *c, double frame)
+{
+	return counted_rate(c, clock_counted(c, frame, NULL));
 }
 
 double frame_clock_frame(const struct frame_clock *c, struct tai when)
@@ -347,11 +365,11 @@ double frame_clock_frame(const struct frame_clock *c, struct tai when)
 	for (int pass = 0; pass < 6; pass++) {
 		double off;
 
-		frame_clock_at(c, frame, &reading);
+		read_counted(c, frame, &reading);
 		off = tai_difference(when, reading.when);
-		frame += off * frame_clock_rate(c, frame);
+		frame += off * counted_rate(c, frame);
 		if (fabs(off) * c->settings.rate < 1e-4)
 			break;
 	}
-	return frame;
+	return clock_told(c, frame);
 }

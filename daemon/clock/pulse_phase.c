@@ -57,8 +57,9 @@ struct pulse_phase {
 	int shifts;
 	struct shift shift[SHIFTS];
 	double jumped;                  /* frame of the newest jump */
+	bool gap;                       /* declared, and not passed by an edge yet */
+	double first_gap, newest_gap;   /* frames, of those */
 	int stamps;
-	double stamp_zero;
 	struct stamp stamp[STAMPS];
 };
 
@@ -312,9 +313,11 @@ static void weigh(const struct pulse_phase *p, const struct shift *s, struct pha
 		(off > 0 ? off - p->slope : off + p->slope) : off;
 
 	*out = (struct phase_loss){
-		.after = (uint64_t)fmax(0, floor(p->newest)), .before = (uint64_t)fmax(0, ceil(s->first)), .frames = usual,
+		.after = (uint64_t)fmax(0, ceil(p->newest)), .before = (uint64_t)fmax(0, floor(s->first)), .frames = usual,
 		.sigma_frames = sigma,
 	};
+	if (out->before < out->after)
+		out->before = out->after;
 	if (lost_by_stamps(p, p->newest, s->first, &frames, &stamp_sigma)) {
 		out->frames = off + rint((frames - off) / p->slope) * p->slope;
 		out->pulse_moved = fabs(frames - out->frames) > sigmas * stamp_sigma;
@@ -442,6 +445,32 @@ static enum phase_verdict off(struct pulse_phase *p, double distance, double fra
 	return PHASE_OFF;
 }
 
+/* Edges come up to two seconds after news of a gap: it counts from the first edge behind it. */
+static void pass_gap(struct pulse_phase *p, double frame)
+{
+	int old = 0;
+
+	if (!p->gap || frame < p->first_gap)
+		return;
+	p->line = p->seen = p->shifts = 0;
+	while (old < p->stamps && p->stamp[old].frame < p->first_gap)
+		old++;
+	p->stamps -= old;
+	memmove(p->stamp, p->stamp + old, (size_t)p->stamps * sizeof(*p->stamp));
+	p->gap = frame < p->newest_gap;
+	p->first_gap = p->newest_gap;
+}
+
+void pulse_phase_add_gap(struct pulse_phase *p, double frame, double sigma_frames)
+{
+	if (!(sigma_frames > whole_frame))
+		return;
+	if (!p->gap)
+		p->first_gap = frame;
+	p->newest_gap = frame;
+	p->gap = true;
+}
+
 enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, double sigma_frames, struct phase_loss *loss)
 {
 	struct edge e = { frame + p->lost, sigma_of(p, sigma_frames), 0 };
@@ -449,6 +478,7 @@ enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, dou
 
 	if (!isfinite(frame) || !(sigma_frames >= 0))
 		return PHASE_OFF;
+	pass_gap(p, frame);
 	if (p->line && frame - p->newest > outage_s * p->settings.rate)
 		p->line = p->seen = 0;
 	if (!p->line) {
@@ -464,12 +494,4 @@ enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, dou
 	p->settled = p->ratio;
 	keep(p, &e);
 	return PHASE_KEPT;
-}
-
-void pulse_phase_add_gap(struct pulse_phase *p, double frame, double sigma_frames)
-{
-	(void)frame;
-	if (sigma_frames <= whole_frame)
-		return;
-	p->line = p->seen = p->shifts = p->stamps = 0;
 }

@@ -40,6 +40,14 @@ void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai w
                            enum time_quality quality);
 /** The newest 256 are remembered.  Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
 void frame_clock_add_gap(struct frame_clock *clock, double frame, double sigma_frames);
+/**
+ * Frames that no frame number counts were lost (negative: given twice) somewhere between `after` and `before`; their number is
+ * known to +- sigma_frames.  Told when it is recognised: pulses and labels of later frames may be in already.  Losses in ascending
+ * order.  Between the two, a time may be off by all of the loss, and sigma says so.
+ *
+ * @return 0; -EINVAL: not numbers, or before < after; -ENOMEM
+ */
+int  frame_clock_add_loss(struct frame_clock *clock, double after, double before, double frames, double sigma_frames);
 
 /** Fits again with all that is known.  Cheap enough for once a second. @return pulses accepted */
 size_t frame_clock_solve(struct frame_clock *clock);
