@@ -393,11 +393,11 @@ static int needed(const struct pulse_phase *p, const struct shift *s)
 	return ENOUGH;
 }
 
-static bool proven(const struct pulse_phase *p, const struct shift *s, struct phase_loss *loss)
+static bool proven(const struct pulse_phase *p, const struct shift *s, int edges, struct phase_loss *loss)
 {
 	double sigma = sqrt(shift_variance(p, s));
 
-	if (p->settled.count < ACQUAINTED || s->count < needed(p, s) || s->last_k - s->first_k > 2 * s->count + 1 ||
+	if (p->settled.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
 	    fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
 		return false;
 	weigh(p, s, loss);
@@ -435,7 +435,7 @@ static enum phase_verdict off(struct pulse_phase *p, double distance, double fra
 	/* Pulses worse than stated are off their place too, until that is learnt. */
 	if (fabs(distance) < rough_s * p->settings.rate)
 		note_ratio(p, fabs(distance) / e->sigma);
-	if (proven(p, s, loss)) {
+	if (proven(p, s, needed(p, s), loss)) {
 		jump(p, s, loss);
 		return PHASE_JUMPED;
 	}
@@ -494,4 +494,14 @@ enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, dou
 	p->settled = p->ratio;
 	keep(p, &e);
 	return PHASE_KEPT;
+}
+
+enum phase_verdict pulse_phase_finish(struct pulse_phase *p, struct phase_loss *loss)
+{
+	for (int i = p->shifts; p->line && i-- > 0; )
+		if (proven(p, &p->shift[i], ENOUGH_AGAIN, loss)) {
+			p->shifts = 0;
+			return PHASE_JUMPED;
+		}
+	return PHASE_OFF;
 }

@@ -42,6 +42,8 @@ void pulse_phase_destroy(struct pulse_phase *phase);
 
 /** Signal thread.  No allocation.  An edge; in ascending order of frames. @param loss  filled with PHASE_JUMPED only */
 enum phase_verdict pulse_phase_add_edge(struct pulse_phase *phase, double frame, double sigma_frames, struct phase_loss *loss);
+/** At the end of the data: two edges that agree on a whole number of frames will do. @return PHASE_JUMPED with *loss, or PHASE_OFF */
+enum phase_verdict pulse_phase_finish(struct pulse_phase *phase, struct phase_loss *loss);
 /** Signal thread.  Frames were lost just before `frame` and that was said; their number is known to +- sigma_frames. */
 void pulse_phase_add_gap(struct pulse_phase *phase, double frame, double sigma_frames);
 /**
