@@ -4,8 +4,8 @@
 
 #include "limbwatch/frame_clock.h"
 
-/* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth), frame_loss.c (frames that no number counts) and
- * frame_labels.c (labels, readings) share.
+/* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth), frame_loss.c (frames that no number counts),
+ * frame_belief.c (which labels are right) and frame_labels.c (seconds, readings) share.
  *
  * `told`: the number the card gives to a frame.  `frame`: with the frames lost in silence before it added, made anew by each
  * solution. */
@@ -32,6 +32,8 @@ struct label {
 	struct tai when;
 	bool late;
 	enum time_quality quality;
+	double offset;                  /* TAI less seconds by the frames, against the newest label */
+	bool vague, believed;
 };
 
 /* Where the comb was followed to: the node, its frame and second, and the rate there. */
@@ -60,6 +62,8 @@ struct frame_clock {
 	bool labelled, second_confirmed, contradiction_said;
 	double second_zero;             /* TAI second of k = 0 */
 	double label_sigma_s;           /* of the label that decided */
+	double label_doubt_s;           /* by how much labels disagree, as long as it is not decided which are right */
+	double doubt_said_s;
 	/* Without pulses: TAI seconds = base + frame / rate * (1 + slope), about frame `pivot`. */
 	double line_pivot, line_slope, line_sigma_s, line_slope_sigma;
 	struct tai line_base;
@@ -81,6 +85,10 @@ double clock_told(const struct frame_clock *clock, double frame);
 void clock_count_all(struct frame_clock *clock);
 /** Labels older than a node that will be the oldest are moved onto it by the last solution. */
 void carry_labels(struct frame_clock *clock, const struct node *oldest);
+/** Marks the labels that are believed, by the pulses when there are some. */
+void clock_believe_labels(struct frame_clock *clock);
+/** What is not known about the length of the gaps between two frames, variance in seconds squared. */
+double clock_gap_variance(const struct frame_clock *clock, double from, double to);
 /** Decides which second k = 0 is, and fits the line through the labels. */
 void label_seconds(struct frame_clock *clock);
 
