@@ -53,7 +53,7 @@ static struct reference newest_say(const struct frame_clock *c)
 	size_t n = 0, most = r.late ? NEWEST_LATE : NEWEST;
 
 	for (size_t k = c->labels; k-- > 0 && n < most; ) {
-		if (c->label[k].late != r.late || c->label[k].vague)
+		if (c->label[k].late != r.late || c->label[k].vague || c->label[k].setting != c->label[c->labels - 1].setting)
 			continue;
 		offset[n++] = c->label[k].offset;
 		r.sigma_s = fmax(r.sigma_s, c->label[k].sigma_s);
@@ -80,8 +80,10 @@ static double card_slack(const struct frame_clock *c, double a, double b)
 /* 0: agrees; 1: a late label that is only late; -1: contradicts. */
 static int compare(const struct frame_clock *c, const struct label *l, const struct reference *r)
 {
+	/* Late ones are one clock's: they share its error, and scatter by their lateness only. */
+	double sigmas = l->late && r->late ? 0.7 : agreement_sigmas;
 	double off = l->offset - r->offset, slack = agreement_s + card_slack(c, l->frame, r->frame) +
-		agreement_sigmas * hypot(l->sigma_s, r->sigma_s);
+		sigmas * hypot(l->sigma_s, r->sigma_s);
 
 	if (off < -slack - (r->late ? lateness_s : 0))
 		return -1;

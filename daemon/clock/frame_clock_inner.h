@@ -33,6 +33,7 @@ struct label {
 	bool late;
 	enum time_quality quality;
 	double offset;                  /* TAI less seconds by the frames, against the newest label */
+	unsigned setting;               /* of the clock it was read from */
 	bool vague, believed;
 };
 
@@ -55,6 +56,7 @@ struct frame_clock {
 	struct lost *loss;
 	size_t labels;
 	struct label label[FRAME_CLOCK_LABELS];
+	unsigned setting;               /* how often the labels' clock was set */
 	/* The last solution. */
 	size_t accepted;
 	double walk, rms_residual_s, first_rate;

@@ -8,6 +8,7 @@
 static const double sure_sigma_s = 0.1;         /* far below half a second */
 static const double half_second_s = 0.5;
 static const double least_walk = 1e-20;         /* 1e-10 per root second: a good crystal (common practice) */
+static const double one_stamp_s = 0.03;         /* a stamp on arrival may be late by this: common practice for sound devices */
 static const double steady = 1e-6;              /* a card's rate changes by so much with a night's temperature */
 static const double slope_baseline_s = 300;     /* labels over less time say nothing about the rate */
 
@@ -24,8 +25,13 @@ void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when,
 	}
 	c->label[c->labels++] = (struct label){
 		.told = frame, .frame = clock_counted(c, frame, NULL), .told_sigma_s = sigma_s, .sigma_s = sigma_s, .when = when,
-		.late = late, .quality = quality,
+		.late = late, .quality = quality, .setting = c->setting,
 	};
+}
+
+void frame_clock_clock_was_set(struct frame_clock *c)
+{
+	c->setting++;
 }
 
 /* ------------------------------------------------------------------ between pulses */
@@ -287,6 +293,19 @@ static double line_slope(const struct frame_clock *c, bool late, double *sigma)
 	return slope;
 }
 
+/* The least of n delays is about their mean over n above none; one alone says nothing about its own. */
+static double lateness(const struct frame_clock *c, double least)
+{
+	double n = 0, sum = one_stamp_s;
+
+	for (size_t k = 0; k < c->labels; k++)
+		if (c->label[k].believed) {
+			n++;
+			sum += c->label[k].offset - c->line_slope * c->label[k].frame / c->settings.rate - least;
+		}
+	return fmax(0, sum / n) / n;
+}
+
 static void fit_line(struct frame_clock *c)
 {
 	const struct label *best = NULL;
@@ -314,6 +333,8 @@ static void fit_line(struct frame_clock *c)
 	c->line_base = best->when;
 	c->line_fitted = true;
 	c->line_sigma_s = hypot(best->sigma_s, c->label_doubt_s);
+	if (late)
+		c->line_sigma_s = hypot(c->line_sigma_s, lateness(c, best_offset));
 }
 
 void label_seconds(struct frame_clock *c)

@@ -34,10 +34,17 @@ void frame_clock_destroy(struct frame_clock *clock);
 void frame_clock_add_pulse(struct frame_clock *clock, double frame, double sigma_frames);
 /**
  * A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true).  Frames in
- * ascending order.  Labels of quality TIME_FREE say nothing and are not kept; of many the list is thinned.
+ * ascending order.  Labels of quality TIME_FREE say nothing and are not kept; of many the list is thinned.  Where labels
+ * disagree the newest that agree among themselves are right; until there are three of them, the disagreement stands in sigma_s and the second is
+ * not confirmed.
  */
 void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai when, double sigma_s, bool late,
                            enum time_quality quality);
+/**
+ * The clock that labels are read from was set (date -s, NTP's first step): those from now on count.  Without this word it is found from the
+ * labels themselves, after three of them; after eight where they err late.
+ */
+void frame_clock_clock_was_set(struct frame_clock *clock);
 /** The newest 256 are remembered.  Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
 void frame_clock_add_gap(struct frame_clock *clock, double frame, double sigma_frames);
 /**
