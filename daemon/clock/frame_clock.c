@@ -43,6 +43,7 @@ void frame_clock_destroy(struct frame_clock *clock)
 	if (!clock)
 		return;
 	free(clock->node);
+	free(clock->loss);
 	free(clock);
 }
 
@@ -84,22 +85,20 @@ void frame_clock_add_pulse(struct frame_clock *c, double frame, double sigma_fra
 {
 	struct node *n;
 
-	if (!isfinite(frame) || !(sigma_frames >= 0) || (c->nodes && frame <= c->node[c->nodes - 1].frame) || !make_room(c))
+	if (!isfinite(frame) || !(sigma_frames >= 0) || (c->nodes && frame <= c->node[c->nodes - 1].told) || !make_room(c))
 		return;
 	n = &c->node[c->nodes++];
-	*n = (struct node){ .frame = frame, .sigma_s = hypot(c->settings.pulse_sigma_s, sigma_frames / c->settings.rate) };
-	n->gap_s = c->gap_s;            /* uncertainty of the gaps since the pulse before */
-	n->gap_frame = c->gap_frame;
-	c->gap_s = 0;
+	*n = (struct node){
+		.told = frame, .frame = clock_counted(c, frame, NULL),
+		.sigma_s = hypot(c->settings.pulse_sigma_s, sigma_frames / c->settings.rate),
+	};
 }
 
 void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frames)
 {
-	c->gap_s = hypot(c->gap_s, sigma_frames / c->settings.rate);
-	c->gap_frame = frame;
 	if (c->gaps == FRAME_CLOCK_GAPS)
 		memmove(c->gap_at, c->gap_at + 1, --c->gaps * sizeof(*c->gap_at));
-	c->gap_at[c->gaps++] = (struct gap_at){ frame, sigma_frames / c->settings.rate };
+	c->gap_at[c->gaps++] = (struct gap_at){ frame, clock_counted(c, frame, NULL), sigma_frames / c->settings.rate };
 }
 
 /* ------------------------------------------------------------------ filter and smoother */
@@ -129,7 +128,7 @@ static void gather_jumps(struct frame_clock *c)
 		struct node *n = &c->node[i];
 
 		if (n->gap_s > 0)
-			jump_frame = n->gap_frame;
+			jump_frame = clock_counted(c, n->gap_told, NULL);
 		jump_s = hypot(jump_s, n->gap_s);
 		if (n->relock) {
 			jump_s = relock_s;
@@ -369,6 +368,7 @@ size_t frame_clock_solve(struct frame_clock *c)
 	double scale = 1;
 	size_t accepted = 0;
 
+	clock_count_all(c);
 	frame_comb_find(c);
 	for (size_t i = 0; i < c->nodes; i++) {
 		c->node[i].comb = c->node[i].accepted;
@@ -404,10 +404,10 @@ size_t frame_clock_pulses(const struct frame_clock *c, double from, double to, s
 		const struct node *n = &c->node[i];
 		bool accepted = n->accepted && c->accepted;
 
-		if (n->frame < from || n->frame >= to)
+		if (n->told < from || n->told >= to)
 			continue;
 		out[given++] = (struct clock_pulse){
-			.frame = n->frame, .accepted = accepted, .residual_s = c->accepted ? n->residual : NAN,
+			.frame = n->told, .accepted = accepted, .residual_s = c->accepted ? n->residual : NAN,
 			.second.ns = accepted && c->labelled ? (int64_t)(c->second_zero + n->k) * 1000000000 : INT64_MIN,
 		};
 	}

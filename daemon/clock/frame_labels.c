@@ -8,6 +8,8 @@
 static const double sure_sigma_s = 0.1;         /* far below half a second */
 static const double half_second_s = 0.5;
 static const double least_walk = 1e-20;         /* 1e-10 per root second: a good crystal (common practice) */
+static const double one_stamp_s = 0.03;         /* a stamp on arrival may be late by this: common practice for sound devices */
+static const double steady = 1e-6;              /* a card's rate changes by so much with a night's temperature */
 static const double slope_baseline_s = 300;     /* labels over less time say nothing about the rate */
 
 void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when, double sigma_s, bool late,
@@ -21,7 +23,15 @@ void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when,
 			c->label[k] = c->label[2 * k];
 		c->labels /= 2;
 	}
-	c->label[c->labels++] = (struct label){ frame, sigma_s, when, late, quality };
+	c->label[c->labels++] = (struct label){
+		.told = frame, .frame = clock_counted(c, frame, NULL), .told_sigma_s = sigma_s, .sigma_s = sigma_s, .when = when,
+		.late = late, .quality = quality, .setting = c->setting,
+	};
+}
+
+void frame_clock_clock_was_set(struct frame_clock *c)
+{
+	c->setting++;
 }
 
 /* ------------------------------------------------------------------ between pulses */
@@ -43,6 +53,7 @@ void carry_labels(struct frame_clock *c, const struct node *oldest)
 		if (l->frame < oldest->frame) {
 			l->when = tai_add(l->when, there - clock_seconds(c, l->frame, NULL));
 			l->frame = oldest->frame;
+			l->told = oldest->told;
 		}
 	}
 }
@@ -97,7 +108,7 @@ static double between(const struct frame_clock *c, const struct node *a, const s
 }
 
 /* Sum of what is not known about gaps between frame and the pulse it is told from. */
-static double gap_variance(const struct frame_clock *c, double from, double to)
+double clock_gap_variance(const struct frame_clock *c, double from, double to)
 {
 	double sum = 0;
 
@@ -120,10 +131,10 @@ static double card_error(const struct frame_clock *c, double frame, double k, do
 		before = NULL;
 	if (before) {
 		x = extrapolate(c, before, k - before->k, variance);
-		*variance += gap_variance(c, before->frame, frame);
+		*variance += clock_gap_variance(c, before->frame, frame);
 	} else {
 		x = extrapolate(c, after, k - after->k, variance);
-		*variance += gap_variance(c, frame, after->frame);
+		*variance += clock_gap_variance(c, frame, after->frame);
 	}
 	return x;
 }
@@ -159,7 +170,7 @@ static const struct label *best_label(const struct frame_clock *c, bool late, do
 		const struct label *l = &c->label[k];
 		double here;
 
-		if (l->late != late || l->quality == TIME_FREE)
+		if (l->late != late || !l->believed)
 			continue;
 		here = vote(c, l);
 		/* Of late ones the earliest is nearest to the truth. */
@@ -191,13 +202,15 @@ static void choose_second(struct frame_clock *c)
 	if (!c->labelled)
 		return;
 	c->second_zero = rint(second[k]);
-	c->label_sigma_s = label[k]->sigma_s;
+	c->label_sigma_s = hypot(label[k]->sigma_s, c->label_doubt_s);
 	/* Pulses do not begin where the label has whole seconds: then it is not as good as it claims. */
 	slack = 4 * label[k]->sigma_s + 0.02 + (label[k]->late ? 0.1 : 0);
 	if (fabs(second[k] - c->second_zero) > slack) {
 		contradict(c, second[k], label[k]);
 		return;
 	}
+	if (c->label_doubt_s > 0)
+		return;
 	c->second_confirmed = label[k]->sigma_s < sure_sigma_s ||
 		(label[0] && label[1] && label[0]->sigma_s < half_second_s && label[1]->sigma_s < half_second_s &&
 		 rint(second[0]) == rint(second[1]));
@@ -205,69 +218,129 @@ static void choose_second(struct frame_clock *c)
 
 /* ------------------------------------------------------------------ labels alone */
 
-static double line_offset(const struct frame_clock *c, const struct label *l)
+/*
+ * Of labels that err late: the line that touches them from below at two places far apart.  The sigma of the slope allows for the
+ * lateness of those two and for a card that warms up.
+ */
+static double touching_slope(const struct frame_clock *c, double from, double span, double *sigma)
 {
-	return tai_difference(l->when, c->label[0].when) - (l->frame - c->label[0].frame) / c->settings.rate;
-}
+	double first = INFINITY, last = INFINITY, first_at = 0, last_at = 0;
 
-/* Rate from the labels: the line that touches the late ones from below at two places far apart, least squares otherwise. */
-static double line_slope(const struct frame_clock *c, bool late, double *sigma)
-{
-	double span = (c->label[c->labels - 1].frame - c->label[0].frame) / c->settings.rate, third = c->labels / 3.0;
-	double first = INFINITY, last = INFINITY, first_at = 0, last_at = 0, slope;
-
-	*sigma = c->settings.rate_tolerance;
-	if (!late || c->labels < 12 || span < slope_baseline_s)
-		return 0;
 	for (size_t k = 0; k < c->labels; k++) {
-		double offset = line_offset(c, &c->label[k]), at = (c->label[k].frame - c->label[0].frame) / c->settings.rate;
+		double at = (c->label[k].frame - from) / c->settings.rate, offset = c->label[k].offset;
 
-		if ((double)k < third && offset < first) {
+		if (!c->label[k].believed)
+			continue;
+		if (at < span / 3 && offset < first) {
 			first = offset;
 			first_at = at;
 		}
-		if ((double)k >= 2 * third && offset < last) {
+		if (at >= span * 2 / 3 && offset < last) {
 			last = offset;
 			last_at = at;
 		}
 	}
-	slope = (last - first) / (last_at - first_at);
+	*sigma = 0.001 / span + steady;
+	return (last - first) / (last_at - first_at);
+}
+
+/* Least squares, all alike: they are one clock's, whose error they share. */
+static double straight_slope(const struct frame_clock *c, double from, double span, double *sigma)
+{
+	double n = 0, at = 0, offset = 0, spread = 0, cross = 0, rest = 0, slope;
+
+	for (size_t k = 0; k < c->labels; k++)
+		if (c->label[k].believed) {
+			n++;
+			at += (c->label[k].frame - from) / c->settings.rate;
+			offset += c->label[k].offset;
+		}
+	at /= n;
+	offset /= n;
+	for (size_t k = 0; k < c->labels; k++)
+		if (c->label[k].believed) {
+			double dt = (c->label[k].frame - from) / c->settings.rate - at;
+
+			spread += dt * dt;
+			cross += dt * (c->label[k].offset - offset);
+			rest += pow(c->label[k].offset - offset, 2);
+		}
+	slope = cross / spread;
+	rest = fmax(0, rest - slope * cross) / (n - 2);
+	*sigma = sqrt(rest / spread) + 0.001 / span + steady;
+	return slope;
+}
+
+/* Rate from the believed labels, relative to nominal; 0 when they say nothing about it. */
+static double line_slope(const struct frame_clock *c, bool late, double *sigma)
+{
+	double from = NAN, to = NAN, span, slope, here;
+	size_t n = 0;
+
+	for (size_t k = 0; k < c->labels; k++)
+		if (c->label[k].believed) {
+			from = n++ ? from : c->label[k].frame;
+			to = c->label[k].frame;
+		}
+	span = (to - from) / c->settings.rate;
+	*sigma = c->settings.rate_tolerance;
+	if (n < 12 || !(span >= slope_baseline_s))
+		return 0;
+	slope = late ? touching_slope(c, from, span, &here) : straight_slope(c, from, span, &here);
 	if (!(fabs(slope) <= c->settings.rate_tolerance))
 		return 0;
-	*sigma = fmin(c->settings.rate_tolerance, 0.001 / span + 1e-6);
+	*sigma = fmin(*sigma, here);
 	return slope;
+}
+
+/* The least of n delays is about their mean over n above none; one alone says nothing about its own. */
+static double lateness(const struct frame_clock *c, double least)
+{
+	double n = 0, sum = one_stamp_s;
+
+	for (size_t k = 0; k < c->labels; k++)
+		if (c->label[k].believed) {
+			n++;
+			sum += c->label[k].offset - c->line_slope * c->label[k].frame / c->settings.rate - least;
+		}
+	return fmax(0, sum / n) / n;
 }
 
 static void fit_line(struct frame_clock *c)
 {
-	const struct label *best = &c->label[0];
+	const struct label *best = NULL;
 	double best_offset = INFINITY;
-	bool late = c->labels > 0;
+	bool late = true;
 
-	if (!c->labels)
-		return;
 	/* One label that does not err late is worth more than any that do. */
 	for (size_t k = 0; k < c->labels; k++)
-		late &= c->label[k].late;
+		late &= c->label[k].late || !c->label[k].believed;
 	c->line_slope = line_slope(c, late, &c->line_slope_sigma);
 	for (size_t k = 0; k < c->labels; k++) {
 		const struct label *l = &c->label[k];
-		double offset = line_offset(c, l) - c->line_slope * (l->frame - c->label[0].frame) / c->settings.rate;
+		double offset = l->offset - c->line_slope * l->frame / c->settings.rate;
 
-		if (late ? offset < best_offset : !l->late && (best->late || l->sigma_s < best->sigma_s)) {
+		if (!l->believed || (l->late && !late))
+			continue;
+		if (!best || (late ? offset < best_offset : l->sigma_s < best->sigma_s)) {
 			best = l;
 			best_offset = offset;
 		}
 	}
+	if (!best)
+		return;
 	c->line_pivot = best->frame;
 	c->line_base = best->when;
 	c->line_fitted = true;
-	c->line_sigma_s = best->sigma_s;
+	c->line_sigma_s = hypot(best->sigma_s, c->label_doubt_s);
+	if (late)
+		c->line_sigma_s = hypot(c->line_sigma_s, lateness(c, best_offset));
 }
 
 void label_seconds(struct frame_clock *c)
 {
 	c->labelled = c->second_confirmed = false;
+	clock_believe_labels(c);
 	if (c->accepted)
 		choose_second(c);
 	fit_line(c);
@@ -283,7 +356,7 @@ static void read_line(const struct frame_clock *c, double frame, struct clock_re
 	out->when = tai_add(c->line_base, seconds * (1 + c->line_slope));
 	out->terms.label = c->line_sigma_s;
 	out->terms.interpolation = fabs(seconds) * c->line_slope_sigma;
-	out->terms.interpolation = hypot(out->terms.interpolation, sqrt(gap_variance(c, c->line_pivot, frame)));
+	out->terms.interpolation = hypot(out->terms.interpolation, sqrt(clock_gap_variance(c, c->line_pivot, frame)));
 	out->sigma_s = hypot(out->terms.label, out->terms.interpolation);
 }
 
@@ -317,7 +390,7 @@ static void read_pulses(const struct frame_clock *c, double frame, struct clock_
 	}
 }
 
-void frame_clock_at(const struct frame_clock *c, double frame, struct clock_reading *out)
+static void read_counted(const struct frame_clock *c, double frame, struct clock_reading *out)
 {
 	*out = (struct clock_reading){ .quality = TIME_FREE, .sigma_s = NAN };
 	if (c->accepted)
@@ -328,7 +401,16 @@ void frame_clock_at(const struct frame_clock *c, double frame, struct clock_read
 		out->when = tai_of(0, frame / c->settings.rate);
 }
 
-double frame_clock_rate(const struct frame_clock *c, double frame)
+void frame_clock_at(const struct frame_clock *c, double frame, struct clock_reading *out)
+{
+	double sigma;
+
+	read_counted(c, clock_counted(c, frame, &sigma), out);
+	out->terms.interpolation = hypot(out->terms.interpolation, sigma / c->settings.rate);
+	out->sigma_s = hypot(out->sigma_s, sigma / c->settings.rate);
+}
+
+static double counted_rate(const struct frame_clock *c, double frame)
 {
 	const struct node *before, *after;
 
@@ -336,6 +418,11 @@ double frame_clock_rate(const struct frame_clock *c, double frame)
 		return c->settings.rate / (1 + (c->line_fitted ? c->line_slope : 0));
 	neighbours(c, frame, &before, &after);
 	return c->settings.rate * (1 + (before ? before : after)->state.y);
+}
+
+double frame_clock_rate(const struct frame_clock *c, double frame)
+{
+	return counted_rate(c, clock_counted(c, frame, NULL));
 }
 
 double frame_clock_frame(const struct frame_clock *c, struct tai when)
@@ -347,11 +434,11 @@ double frame_clock_frame(const struct frame_clock *c, struct tai when)
 	for (int pass = 0; pass < 6; pass++) {
 		double off;
 
-		frame_clock_at(c, frame, &reading);
+		read_counted(c, frame, &reading);
 		off = tai_difference(when, reading.when);
-		frame += off * frame_clock_rate(c, frame);
+		frame += off * counted_rate(c, frame);
 		if (fabs(off) * c->settings.rate < 1e-4)
 			break;
 	}
-	return frame;
+	return clock_told(c, frame);
 }

@@ -24,6 +24,7 @@ void sidecar_clear(struct sidecar *s)
 	free(s->expected);
 	free(s->part);
 	free(s->gap);
+	free(s->loss);
 	free(s->pulse);
 	free(s->contact);
 	memset(s, 0, sizeof(*s));
@@ -170,6 +171,17 @@ static json_t *gaps(const struct sidecar *s)
 	return array;
 }
 
+static json_t *losses(const struct sidecar *s)
+{
+	json_t *array = json_array();
+
+	for (size_t k = 0; k < s->losses; k++)
+		json_array_append_new(array, json_pack("{s:o,s:o,s:o,s:o}", "after_frame", count(s->loss[k].after),
+			"before_frame", count(s->loss[k].before), "frames", number(s->loss[k].frames),
+			"sigma_frames", number(s->loss[k].sigma_frames)));
+	return array;
+}
+
 /* Short, for there are many: [frame, whole TAI second or null, accepted, residual in seconds]. */
 static json_t *pulses(const struct sidecar *s)
 {
@@ -203,6 +215,7 @@ static json_t *build(const struct sidecar *s)
 	json_object_set_new(o, "first_frame", count(s->first));
 	json_object_set_new(o, "parts", parts(s));
 	json_object_set_new(o, "gaps", gaps(s));
+	json_object_set_new(o, "silent_losses", losses(s));
 	json_object_set_new(o, "clipped_samples", count(s->clipped));
 	json_object_set_new(o, "channels", channels(s));
 	json_object_set_new(o, "expected", expected(s));

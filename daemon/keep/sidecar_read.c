@@ -207,6 +207,16 @@ static void read_gap(struct reader *r, json_t *o, void *out)
 	g->sigma_frames = number(r, o, "sigma_frames", 0, 1e12, true);
 }
 
+static void read_loss(struct reader *r, json_t *o, void *out)
+{
+	struct sidecar_loss *l = out;
+
+	l->after = (uint64_t)integer(r, o, "after_frame", 0, largest_count);
+	l->before = (uint64_t)integer(r, o, "before_frame", (double)l->after, largest_count);
+	l->frames = number(r, o, "frames", -largest_count, largest_count, false);
+	l->sigma_frames = number(r, o, "sigma_frames", 0, largest_count, false);
+}
+
 static void read_pulse(struct reader *r, json_t *o, void *out)
 {
 	struct clock_pulse *p = out;
@@ -312,6 +322,8 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 	read_head(r, root, s);
 	s->part = array(r, root, "parts", 100000, sizeof(*s->part), &s->parts, read_part);
 	s->gap = array(r, root, "gaps", 1000000, sizeof(*s->gap), &s->gaps, read_gap);
+	if (json_object_get(root, "silent_losses"))     /* not in the first sidecars */
+		s->loss = array(r, root, "silent_losses", 1000000, sizeof(*s->loss), &s->losses, read_loss);
 	s->channel = array(r, root, "channels", 1000, sizeof(*s->channel), &s->channels, read_channel);
 	s->expected = array(r, root, "expected", 1000, sizeof(*s->expected), &s->expecteds, read_expected);
 	s->contact = array(r, root, "contacts", 100000, sizeof(*s->contact), &s->contacts, read_contact);

@@ -34,12 +34,27 @@ void frame_clock_destroy(struct frame_clock *clock);
 void frame_clock_add_pulse(struct frame_clock *clock, double frame, double sigma_frames);
 /**
  * A label: frame `frame` was taken at `when`, +- sigma_s (one sigma; block stamps that only err late: late = true).  Frames in
- * ascending order.  Labels of quality TIME_FREE say nothing and are not kept; of many the list is thinned.
+ * ascending order.  Labels of quality TIME_FREE say nothing and are not kept; of many the list is thinned.  Where labels
+ * disagree the newest that agree among themselves are right; until there are three of them, the disagreement stands in sigma_s and the second is
+ * not confirmed.
  */
 void frame_clock_add_label(struct frame_clock *clock, double frame, struct tai when, double sigma_s, bool late,
                            enum time_quality quality);
+/**
+ * The clock that labels are read from was set (date -s, NTP's first step): those from now on count.  Without this word it is found from the
+ * labels themselves, after three of them; after eight where they err late.
+ */
+void frame_clock_clock_was_set(struct frame_clock *clock);
 /** The newest 256 are remembered.  Frames were lost before `frame` and their number is only known to +- sigma_frames: the phase may have jumped. */
 void frame_clock_add_gap(struct frame_clock *clock, double frame, double sigma_frames);
+/**
+ * Frames that no frame number counts were lost (negative: given twice) somewhere between `after` and `before`; their number is
+ * known to +- sigma_frames.  Told when it is recognised: pulses and labels of later frames may be in already.  Losses in ascending
+ * order.  Between the two, a time may be off by all of the loss, and sigma says so.
+ *
+ * @return 0; -EINVAL: not numbers, or before < after; -ENOMEM
+ */
+int  frame_clock_add_loss(struct frame_clock *clock, double after, double before, double frames, double sigma_frames);
 
 /** Fits again with all that is known.  Cheap enough for once a second. @return pulses accepted */
 size_t frame_clock_solve(struct frame_clock *clock);

@@ -38,6 +38,8 @@ struct sidecar_expected {
 
 struct sidecar_part { char file[SIDECAR_TEXT]; uint64_t first, frames; };
 struct sidecar_gap { uint64_t first, frames; double sigma_frames; };    /* filled with zeros in the file */
+/* Frames that neither the file nor its numbers count, somewhere between two frames; negative: given twice. */
+struct sidecar_loss { uint64_t after, before; double frames, sigma_frames; };
 
 struct sidecar {
 	int format;
@@ -57,6 +59,7 @@ struct sidecar {
 	size_t expecteds; struct sidecar_expected *expected;
 	size_t parts;     struct sidecar_part *part;
 	size_t gaps;      struct sidecar_gap *gap;
+	size_t losses;    struct sidecar_loss *loss;
 	size_t pulses;    struct clock_pulse *pulse;
 	size_t contacts;  struct contact *contact;
 	uint64_t clipped;               /* series samples with a frame at full scale */

@@ -1,0 +1,507 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/*
+ * A line through the newest dozen pulses says where the next one belongs.  Edges off their place are gathered by how far they are
+ * off; three in a row that agree, with no pulse in its place between them, are a jump.  The line then goes on with the jump
+ * taken out, so that losses may follow each other.
+ *
+ * Frames inside are counted with the jumps so far added: `at` = frame + lost.
+ */
+#include <errno.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+#include "limbwatch/pulse_phase.h"
+
+enum { LINE = 12, SEEN = 16, LOCK = 5, SHIFTS = 8, STAMPS = 64, ENOUGH = 3, ENOUGH_AGAIN = 2, ACQUAINTED = 8 };
+
+static const double least_frames = 0.5;
+static const double sigmas = 6;
+static const double drift = 1e-8;               /* per second: a crystal warming up by 0.6 ppm a minute; one sigma */
+static const double steady = 5e-7;              /* the rate may change this much over a few seconds and is not a jump */
+static const double span_s = 12;                /* the first pulses found lie within this */
+static const double give_up_s = 10;             /* no pulse in its place for so long: look for pulses anew */
+static const double outage_s = 900;             /* the line is no guide after that */
+static const double again_s = 60;               /* after one jump the next needs two edges only */
+static const double rough_s = 1e-4;             /* no pulse scatters by more */
+static const double whole_frame = 0.02;         /* by so much an edge depends on where in a frame it falls */
+static const double doubled_s = 0.1;            /* more than a buffer is not given twice: it was lost */
+
+struct edge { double at, sigma, k; };
+
+/* Edges off their place by the same amount. */
+struct shift {
+	double sum, first_off, last_off;
+	double first, first_k, last_k, sigma;   /* first: frame as counted by the card */
+	double frames[LINE];            /* of the edges themselves, newest LINE at most */
+	double edge_sigma[LINE], k[LINE];
+	int count;
+};
+
+/* |Distance from the line| over sigma of the newest pulses. */
+struct ratios { int count; double of[LINE]; };
+
+struct stamp { double frame, seconds; bool late; };
+
+struct pulse_phase {
+	struct pulse_phase_settings settings;
+	double lost;                    /* jumps so far */
+	int line;                       /* 0: no pulses found */
+	struct edge pulse[LINE];
+	double newest;                  /* frame of the newest pulse in its place, as counted by the card */
+	double origin, slope, middle;   /* frame `origin` + slope (k - middle) */
+	double variance, slope_variance;
+	double scatter;                 /* how much larger the pulses' scatter is than stated */
+	struct ratios ratio, settled;   /* settled: as they were at the newest pulse in its place */
+	int seen;                       /* edges since there was a line, for finding one */
+	struct edge edge[SEEN];
+	int shifts;
+	struct shift shift[SHIFTS];
+	double jumped;                  /* frame of the newest jump */
+	bool gap;                       /* declared, and not passed by an edge yet */
+	double first_gap, newest_gap;   /* frames, of those */
+	int stamps;
+	struct stamp stamp[STAMPS];
+};
+
+int pulse_phase_create(struct pulse_phase **out, const struct pulse_phase_settings *s)
+{
+	struct pulse_phase *p;
+
+	if (!(s->rate >= 1 && s->rate <= 1e9) || !(s->rate_tolerance > 0 && s->rate_tolerance < 0.1) ||
+	    !(s->pulse_sigma_s > 0 && s->pulse_sigma_s < 0.1))
+		return -EINVAL;
+	p = calloc(1, sizeof(*p));
+	if (!p)
+		return -ENOMEM;
+	p->settings = *s;
+	p->scatter = 1;
+	p->jumped = -INFINITY;
+	*out = p;
+	return 0;
+}
+
+void pulse_phase_destroy(struct pulse_phase *phase)
+{
+	free(phase);
+}
+
+/* ------------------------------------------------------------------ the line */
+
+static double sigma_of(const struct pulse_phase *p, double sigma_frames)
+{
+	return hypot(p->settings.pulse_sigma_s * p->settings.rate, sigma_frames);
+}
+
+static void fit(struct pulse_phase *p)
+{
+	double sum = 0, k = 0, at = 0, spread = 0, cross = 0;
+
+	for (int i = 0; i < p->line; i++) {
+		double weight = pow(p->pulse[i].sigma, -2);
+
+		sum += weight;
+		k += weight * p->pulse[i].k;
+		at += weight * (p->pulse[i].at - p->pulse[0].at);
+	}
+	k /= sum;
+	at /= sum;
+	for (int i = 0; i < p->line; i++) {
+		double weight = pow(p->pulse[i].sigma, -2), dk = p->pulse[i].k - k;
+
+		spread += weight * dk * dk;
+		cross += weight * dk * (p->pulse[i].at - p->pulse[0].at - at);
+	}
+	p->middle = k;
+	p->origin = p->pulse[0].at + at;
+	p->slope = cross / spread;
+	p->variance = 1 / sum;
+	p->slope_variance = 1 / spread;
+}
+
+static double place(const struct pulse_phase *p, double k)
+{
+	return p->origin + p->slope * (k - p->middle);
+}
+
+/* Variance of the line at k: what its pulses leave, and how a drift bends it. */
+static double place_variance(const struct pulse_phase *p, double k)
+{
+	double dk = k - p->middle, bend = 0.5 * drift * dk * dk * p->slope;
+
+	return p->scatter * p->scatter * (p->variance + p->slope_variance * dk * dk) + bend * bend;
+}
+
+static int by_size(const void *a, const void *b)
+{
+	double x = *(const double *)a, y = *(const double *)b;
+
+	return (x > y) - (x < y);
+}
+
+/* From the median, which a spurious edge does not move; a Gaussian's is 0.6745 sigma. */
+static void measure_scatter(struct pulse_phase *p)
+{
+	double sorted[LINE];
+
+	memcpy(sorted, p->ratio.of, sizeof(sorted));
+	qsort(sorted, (size_t)p->ratio.count, sizeof(*sorted), by_size);
+	p->scatter = fmax(1, sorted[p->ratio.count / 2] / 0.6745);
+}
+
+static void note_ratio(struct pulse_phase *p, double ratio)
+{
+	struct ratios *r = &p->ratio;
+
+	if (r->count == LINE)
+		memmove(r->of, r->of + 1, --r->count * sizeof(*r->of));
+	r->of[r->count++] = ratio;
+	measure_scatter(p);
+}
+
+/* How far off its place; the place's second in `k`. */
+static double off_place(const struct pulse_phase *p, double at, double *k)
+{
+	*k = rint((at - p->origin) / p->slope + p->middle);
+	return at - place(p, *k);
+}
+
+static void keep(struct pulse_phase *p, const struct edge *edge)
+{
+	if (p->line == LINE)
+		memmove(p->pulse, p->pulse + 1, --p->line * sizeof(*p->pulse));
+	p->pulse[p->line++] = *edge;
+	p->newest = edge->at - p->lost;
+	p->shifts = 0;
+	p->seen = 0;
+	fit(p);
+}
+
+/* ------------------------------------------------------------------ finding pulses */
+
+/* Whole seconds from a to b at that rate, or 0 when they do not fit. */
+static double seconds_between(const struct edge *a, const struct edge *b, double rate, double slack)
+{
+	double n = rint((b->at - a->at) / rate);
+
+	return n >= 1 && fabs(b->at - a->at - n * rate) <= slack * n + fmax(least_frames, sigmas * hypot(a->sigma, b->sigma)) ? n : 0;
+}
+
+/* Takes the edges that keep whole seconds with the newest one at the rate of one before it. @return how many */
+static int comb(const struct pulse_phase *p, int partner, struct edge out[LINE])
+{
+	const struct edge *newest = &p->edge[p->seen - 1];
+	double n = seconds_between(&p->edge[partner], newest, p->settings.rate, p->settings.rate_tolerance * p->settings.rate);
+	double rate = n > 0 ? (newest->at - p->edge[partner].at) / n : 0;
+	int count = 0;
+
+	if (n == 0)
+		return 0;
+	for (int i = partner; i < p->seen && count < LINE; i++) {
+		double back = i == p->seen - 1 ? 0 : seconds_between(&p->edge[i], newest, rate, 0);
+
+		if (i < p->seen - 1 && (back == 0 || (count && -back <= out[count - 1].k)))
+			continue;
+		out[count] = p->edge[i];
+		out[count++].k = -back;
+	}
+	return count;
+}
+
+static void find(struct pulse_phase *p)
+{
+	struct edge found[LINE];
+
+	for (int partner = 0; partner < p->seen - 1; partner++) {
+		int count;
+
+		if (p->edge[p->seen - 1].at - p->edge[partner].at > span_s * p->settings.rate)
+			continue;
+		count = comb(p, partner, found);
+		if (count < LOCK)
+			continue;
+		p->line = count;
+		memcpy(p->pulse, found, (size_t)count * sizeof(*found));
+		p->newest = found[count - 1].at - p->lost;
+		p->shifts = p->seen = p->ratio.count = 0;
+		fit(p);
+		for (int i = 0; i < count; i++)
+			note_ratio(p, fabs(found[i].at - place(p, found[i].k)) / found[i].sigma * sqrt(count / (count - 2.0)));
+		p->settled = p->ratio;
+		return;
+	}
+}
+
+static void note_edge(struct pulse_phase *p, const struct edge *edge)
+{
+	if (p->seen == SEEN)
+		memmove(p->edge, p->edge + 1, --p->seen * sizeof(*p->edge));
+	p->edge[p->seen++] = *edge;
+}
+
+/* ------------------------------------------------------------------ stamps */
+
+void pulse_phase_add_stamp(struct pulse_phase *p, double frame, int64_t host_ns, bool late)
+{
+	double seconds = (double)host_ns * 1e-9;
+
+	if (!isfinite(frame) || (p->stamps && frame - p->stamp[p->stamps - 1].frame < 0.25 * p->settings.rate))
+		return;
+	if (p->stamps == STAMPS)
+		memmove(p->stamp, p->stamp + 1, --p->stamps * sizeof(*p->stamp));
+	p->stamp[p->stamps++] = (struct stamp){ frame, seconds, late };
+}
+
+/* Time less frames of the stamps in [from, to]: the least (stamps err late), and their spread. @return how many */
+static int stamps_within(const struct pulse_phase *p, double from, double to, double *least, double *spread)
+{
+	double most = -INFINITY;
+	int count = 0;
+
+	*least = INFINITY;
+	for (int i = 0; i < p->stamps; i++) {
+		double offset = p->stamp[i].seconds - (p->stamp[i].frame - p->newest) / p->slope;
+
+		if (p->stamp[i].frame < from || p->stamp[i].frame > to)
+			continue;
+		*least = fmin(*least, offset);
+		most = fmax(most, offset);
+		count++;
+	}
+	*spread = most - *least;
+	return count;
+}
+
+/* Frames lost between two frames by the stamps. @return false: they do not tell */
+static bool lost_by_stamps(const struct pulse_phase *p, double after, double before, double *frames, double *sigma)
+{
+	double then, now, spread[2];
+
+	if (stamps_within(p, after - 15 * p->slope, after, &then, &spread[0]) < 2 ||
+	    stamps_within(p, before, INFINITY, &now, &spread[1]) < 1)
+		return false;
+	*sigma = 0.002 + 0.5 * fmax(spread[0], spread[1]);
+	*frames = (now - then) * p->slope;
+	*sigma *= p->slope;
+	return *sigma < 0.1 * p->slope;
+}
+
+/* ------------------------------------------------------------------ jumps */
+
+static double shift_variance(const struct pulse_phase *p, const struct shift *s)
+{
+	double edges = p->scatter * s->sigma;
+
+	return edges * edges / s->count + place_variance(p, 0.5 * (s->first_k + s->last_k));
+}
+
+/* 1: whole frames; 0: not; -1: the pulses are not sharp enough to tell. */
+static int is_whole(double frames, double sigma)
+{
+	if (4 * sigma + whole_frame > 0.35)
+		return -1;
+	return fabs(frames) > least_frames && fabs(frames - rint(frames)) <= 4 * sigma + whole_frame;
+}
+
+/*
+ * The pulses say what was lost but for whole seconds.  Without stamps: rather lost than given twice, and rather a whole number
+ * of frames.
+ */
+static void weigh(const struct pulse_phase *p, const struct shift *s, struct phase_loss *out)
+{
+	double off = -s->sum / s->count, sigma = sqrt(shift_variance(p, s)), frames, stamp_sigma;
+	double usual = off < -doubled_s * p->slope ? off + p->slope : off, other = usual == off ?
+		(off > 0 ? off - p->slope : off + p->slope) : off;
+
+	*out = (struct phase_loss){
+		.after = (uint64_t)fmax(0, ceil(p->newest)), .before = (uint64_t)fmax(0, floor(s->first)), .frames = usual,
+		.sigma_frames = sigma,
+	};
+	if (out->before < out->after)
+		out->before = out->after;
+	if (lost_by_stamps(p, p->newest, s->first, &frames, &stamp_sigma)) {
+		out->frames = off + rint((frames - off) / p->slope) * p->slope;
+		out->pulse_moved = fabs(frames - out->frames) > sigmas * stamp_sigma;
+		if (out->pulse_moved)
+			out->frames = off;
+	} else if (is_whole(usual, sigma) == 0 && is_whole(other, sigma) == 1) {
+		out->frames = other;
+	}
+	if (!out->pulse_moved && is_whole(out->frames, sigma) == 0) {
+		out->pulse_moved = true;
+		out->frames = off;
+	}
+	if (!out->pulse_moved && is_whole(out->frames, sigma) == 1) {
+		out->frames = rint(out->frames);
+		out->sigma_frames = 0;
+	}
+}
+
+static double wrap(const struct pulse_phase *p, double off)
+{
+	return off - rint(off / p->slope) * p->slope;
+}
+
+static bool agrees(const struct pulse_phase *p, const struct shift *s, double off, double sigma, double k)
+{
+	double span = k - s->first_k, gate = sigmas * p->scatter * hypot(sigma, s->sigma);
+
+	gate = fmax(gate, whole_frame) + steady * p->slope * span + sigmas * p->scatter * sqrt(p->slope_variance) * span;
+	return span > 0 && fabs(wrap(p, off - s->first_off)) <= gate;
+}
+
+static void add_to_shift(struct shift *s, double off, double frame, const struct edge *e)
+{
+	int i = s->count < LINE ? s->count : LINE - 1;
+
+	s->sum += off;
+	s->last_off = off;
+	s->last_k = e->k;
+	s->sigma = fmax(s->sigma, e->sigma);
+	s->frames[i] = frame;
+	s->edge_sigma[i] = e->sigma;
+	s->k[i] = e->k;
+	s->count++;
+}
+
+static struct shift *gather(struct pulse_phase *p, double off, double frame, const struct edge *e)
+{
+	struct shift *s = NULL;
+
+	for (int i = 0; i < p->shifts && !s; i++)
+		if (agrees(p, &p->shift[i], off, e->sigma, e->k))
+			s = &p->shift[i];
+	if (!s) {
+		if (p->shifts == SHIFTS)
+			memmove(p->shift, p->shift + 1, --p->shifts * sizeof(*p->shift));
+		s = &p->shift[p->shifts++];
+		*s = (struct shift){ .first_off = off, .first = frame, .first_k = e->k };
+	} else {
+		off = s->first_off + wrap(p, off - s->first_off);
+	}
+	add_to_shift(s, off, frame, e);
+	return s;
+}
+
+/* Losses that follow each other within seconds leave two edges each: two such are taken for what they are. */
+static int needed(const struct pulse_phase *p, const struct shift *s)
+{
+	if (s->first - p->jumped < again_s * p->settings.rate)
+		return ENOUGH_AGAIN;
+	for (int i = 0; i < p->shifts; i++)
+		if (&p->shift[i] != s && p->shift[i].count >= ENOUGH_AGAIN && p->shift[i].last_k < s->first_k)
+			return ENOUGH_AGAIN;
+	return ENOUGH;
+}
+
+static bool proven(const struct pulse_phase *p, const struct shift *s, int edges, struct phase_loss *loss)
+{
+	double sigma = sqrt(shift_variance(p, s));
+
+	if (p->settled.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
+	    fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
+		return false;
+	weigh(p, s, loss);
+	/* Two edges will do for whole frames only. */
+	return s->count >= ENOUGH || (!loss->pulse_moved && loss->sigma_frames == 0);
+}
+
+/* The line goes on: the pulses before are put where they would have come, those of the shift join them. */
+static void jump(struct pulse_phase *p, const struct shift *s, const struct phase_loss *loss)
+{
+	struct shift joined = *s;
+	int count = s->count < LINE ? s->count : LINE;
+	double frames = loss->sigma_frames == 0 && !loss->pulse_moved ? loss->frames : -s->sum / s->count, k;
+
+	p->lost += frames;
+	p->jumped = s->first;
+	p->ratio = p->settled;          /* those edges were no scatter */
+	measure_scatter(p);
+	for (int i = 0; i < count; i++) {
+		struct edge e = { joined.frames[i] + p->lost, joined.edge_sigma[i], 0 };
+
+		off_place(p, e.at, &k);
+		if (k <= p->pulse[p->line - 1].k)
+			continue;
+		e.k = k;
+		keep(p, &e);
+	}
+}
+
+static enum phase_verdict off(struct pulse_phase *p, double distance, double frame, const struct edge *e,
+                              struct phase_loss *loss)
+{
+	const struct shift *s = gather(p, distance, frame, e);
+
+	/* Pulses worse than stated are off their place too, until that is learnt. */
+	if (fabs(distance) < rough_s * p->settings.rate)
+		note_ratio(p, fabs(distance) / e->sigma);
+	if (proven(p, s, needed(p, s), loss)) {
+		jump(p, s, loss);
+		return PHASE_JUMPED;
+	}
+	note_edge(p, e);
+	if (frame - p->newest > give_up_s * p->settings.rate)
+		find(p);
+	return PHASE_OFF;
+}
+
+/* Edges come up to two seconds after news of a gap: it counts from the first edge behind it. */
+static void pass_gap(struct pulse_phase *p, double frame)
+{
+	int old = 0;
+
+	if (!p->gap || frame < p->first_gap)
+		return;
+	p->line = p->seen = p->shifts = 0;
+	while (old < p->stamps && p->stamp[old].frame < p->first_gap)
+		old++;
+	p->stamps -= old;
+	memmove(p->stamp, p->stamp + old, (size_t)p->stamps * sizeof(*p->stamp));
+	p->gap = frame < p->newest_gap;
+	p->first_gap = p->newest_gap;
+}
+
+void pulse_phase_add_gap(struct pulse_phase *p, double frame, double sigma_frames)
+{
+	if (!(sigma_frames > whole_frame))
+		return;
+	if (!p->gap)
+		p->first_gap = frame;
+	p->newest_gap = frame;
+	p->gap = true;
+}
+
+enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, double sigma_frames, struct phase_loss *loss)
+{
+	struct edge e = { frame + p->lost, sigma_of(p, sigma_frames), 0 };
+	double distance, sigma;
+
+	if (!isfinite(frame) || !(sigma_frames >= 0))
+		return PHASE_OFF;
+	pass_gap(p, frame);
+	if (p->line && frame - p->newest > outage_s * p->settings.rate)
+		p->line = p->seen = 0;
+	if (!p->line) {
+		note_edge(p, &e);
+		find(p);
+		return PHASE_UNKNOWN;
+	}
+	distance = off_place(p, e.at, &e.k);
+	sigma = sqrt(place_variance(p, e.k) + pow(p->scatter * e.sigma, 2));
+	if (e.k <= p->pulse[p->line - 1].k || fabs(distance) > fmax(least_frames, sigmas * sigma))
+		return off(p, distance, frame, &e, loss);
+	note_ratio(p, fabs(distance) / e.sigma);
+	p->settled = p->ratio;
+	keep(p, &e);
+	return PHASE_KEPT;
+}
+
+enum phase_verdict pulse_phase_finish(struct pulse_phase *p, struct phase_loss *loss)
+{
+	for (int i = p->shifts; p->line && i-- > 0; )
+		if (proven(p, &p->shift[i], ENOUGH_AGAIN, loss)) {
+			p->shifts = 0;
+			return PHASE_JUMPED;
+		}
+	return PHASE_OFF;
+}
