@@ -33,7 +33,7 @@ static void hear(void *context, enum log_level level, const char *sentence)
 static struct sidecar_channel channels[] = {
 	{ .name = "diode", .column = 0, .measure = MEASURE_CHOPPED, .polarity = -1, .wavelength_m = 620e-9,
 	  .passband_m = 120e-9, .aperture_m = 0.28, .integration_s = 1e-4 / 3, .low_pass_s = 2e-5 / 7, .high_pass_hz = 0.1,
-	  .rate = 4800.000000000001 },
+	  .response_delay_s = -0.0125, .rate = 4800.000000000001 },
 	{ .name = "gps \xc3\xa9 \"2\"\n", .column = 7, .measure = MEASURE_AUX, .polarity = 1, .wavelength_m = 0.21 },
 };
 static struct sidecar_expected expecteds[] = {
@@ -67,7 +67,8 @@ static struct sidecar everything(void)
 			.second_confirmed = true, .terms = { 1.5e-8, 2.5e-8, 3.5e-8, 4.5e-8 } },
 		.end = { .when = { INT64_C(1932773040000000003) }, .sigma_s = NAN, .quality = TIME_HOST,
 			.terms = { 5.5e-8, 6.5e-8, NAN, 8.5e-8 } },
-		.true_rate = 191992.3200000001, .clipped = 17,
+		.true_rate = 191992.3200000001, .boot_id = "0123456789abcdef0123456789abcdef", .monotonic_ns = 5123456789012345,
+		.clipped = 17,
 		.channels = 2, .channel = channels, .expecteds = 1, .expected = expecteds, .parts = 2, .part = parts,
 		.gaps = 2, .gap = gaps, .losses = 2, .loss = losses, .pulses = 2, .pulse = pulses, .contacts = 1, .contact = contacts,
 	};
@@ -97,7 +98,7 @@ static void assert_same_channels(const struct sidecar *a, const struct sidecar *
 		assert_true(same(x->wavelength_m, y->wavelength_m) && same(x->passband_m, y->passband_m) &&
 		            same(x->aperture_m, y->aperture_m) && same(x->integration_s, y->integration_s) &&
 		            same(x->low_pass_s, y->low_pass_s) && same(x->high_pass_hz, y->high_pass_hz) &&
-		            same(x->rate, y->rate));
+		            x->response_delay_s == y->response_delay_s && same(x->rate, y->rate));
 	}
 }
 
@@ -165,7 +166,8 @@ static void every_member_comes_back_exactly(void **state)
 	assert_true(out.latitude_deg == in.latitude_deg && out.longitude_deg == in.longitude_deg && isnan(out.height_m));
 	assert_true(out.frames.type == in.frames.type && out.frames.channels == in.frames.channels && out.rate == in.rate);
 	assert_true(out.reason == in.reason && out.state == in.state && out.first == in.first && out.clipped == in.clipped &&
-	            out.true_rate == in.true_rate);
+	            out.true_rate == in.true_rate && out.monotonic_ns == in.monotonic_ns);
+	assert_string_equal(out.boot_id, in.boot_id);
 	assert_same_reading(&out.start, &in.start);
 	assert_same_reading(&out.end, &in.end);
 	assert_same_channels(&out, &in);
@@ -211,6 +213,12 @@ static void assert_refused(const json_t *root, const char *member)
 
 static unsigned tried;
 
+/* Not in the first sidecars. */
+static bool optional(const char *name)
+{
+	return !strcmp(name, "silent_losses") || !strcmp(name, "response_delay_s") || !strcmp(name, "boot");
+}
+
 /* Every member below `at` in turn missing and of a type that nothing has there. */
 static void spoil(const json_t *root, json_t *at, const char *where)
 {
@@ -229,7 +237,7 @@ static void spoil(const json_t *root, json_t *at, const char *where)
 		json_object_set_new(at, name, json_is_object(whole) ? json_string("x") : json_pack("{s:s}", "x", "y"));
 		assert_refused(root, here);
 		json_object_del(at, name);
-		if (strcmp(name, "silent_losses"))      /* not in the first sidecars */
+		if (!optional(name))
 			assert_refused(root, here);
 		json_object_set(at, name, whole);
 		tried++;

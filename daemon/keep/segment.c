@@ -11,6 +11,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <time.h>
+#include "bext.h"
 #include "limbwatch/segment.h"
 #include "wave_mend.h"
 
@@ -157,23 +158,17 @@ static int sf_format(enum sample_type type)
 static void set_bext(const struct segment *s, uint64_t first)
 {
 	SF_BROADCAST_INFO info = { .version = 1 };
-	struct tai start = tai_add(s->header.start, (double)(first - s->header.first) / s->header.rate);
-	char text[TAI_TEXT];
-	uint64_t reference;
-	unsigned h, m;
-	double seconds;
+	struct bext_origin origin;
 
 	snprintf(info.description, sizeof(info.description), "%s", s->description);
 	snprintf(info.originator, sizeof(info.originator), "%s", s->station);
 	snprintf(info.originator_reference, sizeof(info.originator_reference), "limbwatch");
 	if (s->header.quality != TIME_FREE) {
-		tai_format_utc(text, start, 9);
-		memcpy(info.origination_date, text, 10);
-		memcpy(info.origination_time, text + 11, 8);
-		sscanf(text + 11, "%2u:%2u:%lf", &h, &m, &seconds);
-		reference = (uint64_t)((h * 3600 + m * 60 + seconds) * s->header.rate + 0.5);
-		info.time_reference_low = (uint32_t)reference;
-		info.time_reference_high = (uint32_t)(reference >> 32);
+		bext_origin(&origin, tai_add(s->header.start, (double)(first - s->header.first) / s->header.rate), s->header.rate);
+		memcpy(info.origination_date, origin.date, sizeof(origin.date));
+		memcpy(info.origination_time, origin.time, sizeof(origin.time));
+		info.time_reference_low = (uint32_t)origin.reference;
+		info.time_reference_high = (uint32_t)(origin.reference >> 32);
 	}
 	sf_command(s->file, SFC_SET_BROADCAST_INFO, &info, sizeof(info));
 }

@@ -90,6 +90,7 @@ static json_t *channels(const struct sidecar *s)
 		json_object_set_new(o, "integration_s", number(c->integration_s));
 		json_object_set_new(o, "low_pass_s", number(c->low_pass_s));
 		json_object_set_new(o, "high_pass_hz", number(c->high_pass_hz));
+		json_object_set_new(o, "response_delay_s", number(c->response_delay_s));
 		json_object_set_new(o, "series_rate_hz", number(c->rate));
 		json_array_append_new(array, o);
 	}
@@ -197,6 +198,14 @@ static json_t *pulses(const struct sidecar *s)
 	return array;
 }
 
+/* Null for what was not recorded live. */
+static json_t *boot(const struct sidecar *s)
+{
+	if (!*s->boot_id || s->monotonic_ns == INT64_MIN)
+		return json_null();
+	return json_pack("{s:o,s:I}", "id", words(s->boot_id), "monotonic_ns", (json_int_t)s->monotonic_ns);
+}
+
 static json_t *build(const struct sidecar *s)
 {
 	json_t *o = json_object();
@@ -222,6 +231,7 @@ static json_t *build(const struct sidecar *s)
 	json_object_set_new(o, "contacts", contacts(s));
 	json_object_set_new(o, "clock", json_pack("{s:o,s:o,s:o}", "true_rate_hz", number(s->true_rate),
 		"start", reading(&s->start), "end", reading(&s->end)));
+	json_object_set_new(o, "boot", boot(s));
 	json_object_set_new(o, "pulses", pulses(s));
 	return o;
 }

@@ -170,6 +170,8 @@ static void read_channel(struct reader *r, json_t *o, void *out)
 	c->integration_s = number(r, o, "integration_s", 0, 1e6, true);
 	c->low_pass_s = number(r, o, "low_pass_s", 0, 1e6, true);
 	c->high_pass_hz = number(r, o, "high_pass_hz", 0, 1e9, true);
+	if (json_object_get(o, "response_delay_s"))     /* not in the first sidecars */
+		c->response_delay_s = number(r, o, "response_delay_s", -1e6, 1e6, false);
 	c->rate = number(r, o, "series_rate_hz", 0, 1e9, true);
 }
 
@@ -309,6 +311,21 @@ static void read_head(struct reader *r, json_t *root, struct sidecar *s)
 	s->clipped = (uint64_t)integer(r, root, "clipped_samples", 0, largest_count);
 }
 
+/* Not in the first sidecars, null in a replay's. */
+static void read_boot(struct reader *r, json_t *root, struct sidecar *s)
+{
+	json_t *boot = json_object_get(root, "boot");
+
+	s->monotonic_ns = INT64_MIN;
+	if (!boot || json_is_null(boot))
+		return;
+	boot = object(r, root, "boot");
+	within(r, "boot.");
+	text(r, boot, "id", s->boot_id, sizeof(s->boot_id));
+	s->monotonic_ns = (int64_t)integer(r, boot, "monotonic_ns", 0, largest_count);
+	within(r, "");
+}
+
 static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 {
 	json_t *clock;
@@ -327,6 +344,7 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 	s->channel = array(r, root, "channels", 1000, sizeof(*s->channel), &s->channels, read_channel);
 	s->expected = array(r, root, "expected", 1000, sizeof(*s->expected), &s->expecteds, read_expected);
 	s->contact = array(r, root, "contacts", 100000, sizeof(*s->contact), &s->contacts, read_contact);
+	read_boot(r, root, s);
 	clock = object(r, root, "clock");
 	within(r, "clock.");
 	s->true_rate = number(r, clock, "true_rate_hz", 0, 1e9, true);

@@ -1,5 +1,6 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <errno.h>
+#include <math.h>
 #include <sched.h>
 #include <string.h>
 #include <time.h>
@@ -17,6 +18,11 @@ void acquire_create(struct acquire *a, struct ring *ring, double rate, atomic_bo
 	a->stamped = INT64_MIN;
 	atomic_init(&a->origin_ns, INT64_MIN);
 	stamp_line_create(&a->line, rate);
+}
+
+double gap_sigma_frames(double rate, uint64_t lost)
+{
+	return hypot(1e-3 * rate, 30e-6 * (double)lost);        /* see stamp_line.c */
 }
 
 bool acquire_stamp(struct acquire *a, struct stamp *out)

@@ -41,6 +41,8 @@ struct acquire {
 };
 
 void acquire_create(struct acquire *acquire, struct ring *ring, double rate, atomic_bool *stop);
+/** How well the length of a gap is known, frames: stamps are late by up to a millisecond, rates are known to 30 ppm. */
+double gap_sigma_frames(double rate, uint64_t lost);
 /** Signal thread: the next stamp. @return false: none */
 bool acquire_stamp(struct acquire *acquire, struct stamp *out);
 /** Any thread: when frame `frame` was taken, CLOCK_MONOTONIC by the newest block. @return false: unknown */

@@ -5,21 +5,13 @@
 #include <stdlib.h>
 #include <string.h>
 #include <time.h>
+#include "acquire.h"
 #include "keeper.h"
 #include "limbwatch/log.h"
 #include "limbwatch/segment.h"
+#include "limbwatch/host_clock.h"
 #include "limbwatch/space.h"
-
-/*
- * A plan becomes one segment, or several when the disk failed in between or a gap was too long: pieces.
- * A piece's sidecar is written when it begins, whenever the plan knows more, and for good when the plan is final.
- */
-struct piece {
-	char name[SIDECAR_TEXT];
-	uint64_t first, end;            /* frames [first, end) */
-	struct segment *segment;        /* NULL once closed */
-	struct sidecar described;       /* parts and gaps only */
-};
+#include "limbwatch/undated.h"
 
 struct work {
 	struct keeper *keeper;
@@ -220,6 +212,9 @@ static int write_piece_sidecar(struct work *w, struct piece *piece)
 	s.part = move_array((void **)&piece->described.part, &piece->described.parts, &s.parts);
 	s.gap = move_array((void **)&piece->described.gap, &piece->described.gaps, &s.gaps);
 	s.first = piece->first;
+	if (w->plan->host_ns != INT64_MIN)
+		s.monotonic_ns = w->plan->host_ns +
+			llround(((double)piece->first - (double)w->plan->start_frame) / w->keeper->intake->rate * 1e9);
 	s.state = piece->segment ? SEGMENT_RECORDING : SEGMENT_CLOSED;
 	snprintf(path, sizeof(path), "%s/%s.json", w->keeper->config->keep.folder, piece->name);
 	ret = sidecar_write(&s, w->keeper->disk, path);
@@ -337,7 +332,8 @@ static void write_frames(struct work *w, size_t count, const struct ring_news *n
 		if (ret == 0)
 			ret = keep_space(w, news->first);
 		if (ret == 0)
-			ret = segment_write(open_piece(w)->segment, w->buffer, count, news->first, 0);
+			ret = segment_write(open_piece(w)->segment, w->buffer, count, news->first,
+			                    gap_sigma_frames(w->keeper->intake->rate, news->lost));
 		if (ret == 0) {
 			if (w->refused)
 				log_notice("%s: recording again", w->keeper->config->keep.folder);
@@ -357,13 +353,63 @@ static void finish_plan(struct work *w, unsigned version)
 	end_piece(w);
 	write_sidecars(w, version);
 	deliver(w);
-	for (size_t k = 0; k < w->pieces; k++)
-		sidecar_clear(&w->piece[k].described);
-	plans_drop(w->keeper->plans);
+	if (w->plan->sidecar.start.quality == TIME_FREE && w->keeper->intake->real_time && w->pieces) {
+		plans_put_aside(w->keeper->plans, w->piece, w->pieces);
+	} else {
+		for (size_t k = 0; k < w->pieces; k++)
+			sidecar_clear(&w->piece[k].described);
+		plans_drop(w->keeper->plans);
+	}
 	w->plan = NULL;
 	w->pieces = 0;
 	w->delivered = 0;
 	w->version = 0;
+}
+
+static void say_dated(const struct keeper *keeper, const char *name, const struct sidecar *s)
+{
+	char text[TAI_TEXT];
+
+	log_notice("%s/%s, recorded before the time was known, began at %s \xc2\xb1 %.3g s (time: %s)",
+	           keeper->config->keep.folder, name, tai_format_utc(text, s->start.when, 3), s->start.sigma_s,
+	           time_quality_name(s->start.quality));
+	for (size_t k = 0; k < s->contacts; k++)
+		log_notice("  its %s: %s \xc2\xb1 %.3g s", contact_kind_name(s->contact[k].kind),
+		           tai_format_utc(text, s->contact[k].when, 6), s->contact[k].sigma_s);
+}
+
+/* A plan that was put aside has its date: its sidecars and file headers are written again. */
+static void amend(struct work *w)
+{
+	struct plan *plan = w->plan;
+
+	w->pieces = plan->pieces;
+	memcpy(w->piece, plan->piece, plan->pieces * sizeof(*plan->piece));
+	write_sidecars(w, plan->version);
+	for (size_t k = 0; k < w->pieces; k++) {
+		struct sidecar s = plan->sidecar;       /* arrays stay the plan's */
+
+		s.first = w->piece[k].first;
+		s.start.when = tai_add(s.start.when, ((double)s.first - (double)plan->from) / s.true_rate);
+		s.parts = w->piece[k].described.parts;
+		s.part = w->piece[k].described.part;
+		undated_mark_files(&s, w->keeper->disk, w->keeper->config->keep.folder);
+		say_dated(w->keeper, w->piece[k].name, &s);
+	}
+	memcpy(plan->piece, w->piece, plan->pieces * sizeof(*plan->piece));
+	plans_drop(w->keeper->plans);
+	w->plan = NULL;
+	w->pieces = 0;
+	w->version = 0;
+}
+
+static void date_earlier_runs(const struct keeper *keeper)
+{
+	char boot[HOST_CLOCK_BOOT];
+
+	if (plans_ask_host_known(keeper->plans) && host_clock_boot(boot) == 0)
+		undated_date(keeper->disk, keeper->config->keep.folder, boot, keeper->plans->begun_ns,
+		             keeper->config->clock.host_sigma_s);
 }
 
 static void idle(const struct keeper *keeper)
@@ -418,6 +464,7 @@ void *keeper_run(void *argument)
 	for (;;) {
 		struct plan_view view;
 
+		date_earlier_runs(keeper);
 		plans_view(keeper->plans, &view);
 		if (!view.plan) {
 			ring_skip_to(keeper->reader, view.decided);
@@ -427,7 +474,9 @@ void *keeper_run(void *argument)
 			continue;
 		}
 		w.plan = view.plan;
-		if (!carry_out(&w, &view))
+		if (view.amended)
+			amend(&w);
+		else if (!carry_out(&w, &view))
 			idle(keeper);
 	}
 	free(w.buffer);

@@ -12,8 +12,6 @@ static const double settle_s = 4;       /* pulses come up to two seconds late, a
 static const double patience_s = 2;     /* stamps of a live device come with the first blocks */
 static const double show_every_s = 0.2;
 static const double fill_s = 600;       /* longer gaps end a segment instead of filling it with zeros */
-static const double gap_sigma_s = 0.001;/* how well an intake knows the length of a gap, at worst: see alsa.c */
-static const double gap_sigma_relative = 30e-6;        /* and the rate by which it is counted: see stamp_line.c */
 
 /* Latency is the same number of series samples for every detector: what counts is the slowest series. */
 static void measure_hold(struct listener *l, const struct lane_settings *settings, double *latency_samples)
@@ -85,6 +83,18 @@ static int create_lanes(struct listener *l)
 	return 0;
 }
 
+static int create_loss_watch(struct listener *l, const struct frame_clock_settings *clock)
+{
+	struct loss_watch_settings loss = {
+		.phase = {
+			.rate = l->rate, .rate_tolerance = clock->rate_tolerance, .pulse_sigma_s = clock->pulse_sigma_s,
+		},
+		.clock = l->clock,
+	};
+
+	return loss_watch_create(&l->loss, &loss);
+}
+
 static int create_clock(struct listener *l)
 {
 	struct frame_clock_settings clock = {
@@ -109,7 +119,10 @@ static int create_clock(struct listener *l)
 		if (ret < 0)
 			return ret;
 	}
-	return frame_clock_create(&l->clock, &clock);
+	ret = frame_clock_create(&l->clock, &clock);
+	if (ret == 0 && l->pulses)
+		ret = create_loss_watch(l, &clock);
+	return ret;
 }
 
 int listener_create(struct listener **out, const struct listener_settings *settings)
@@ -149,6 +162,7 @@ void listener_destroy(struct listener *l)
 	for (size_t k = 0; k < l->lanes; k++)
 		lane_destroy(l->lane[k]);
 	pulse_detector_destroy(l->pulses);
+	loss_watch_destroy(l->loss);
 	frame_clock_destroy(l->clock);
 	free(l->samples);
 	free(l->frames);
@@ -213,6 +227,25 @@ static void label_origin(struct listener *l)
 	l->dated = true;
 }
 
+/* Labels from before the host's clock was set are no witnesses any more. */
+static void heed_host_clock(struct listener *l)
+{
+	double step = host_clock_step(&l->host);
+
+	if (step == 0)
+		return;
+	log_notice("this computer's clock was set %s by %.3f s%s", step > 0 ? "forward" : "back", fabs(step),
+	           l->dated ? "; times are taken from it as it stands now" : "");
+	frame_clock_clock_was_set(l->clock);
+}
+
+/* From now on it is known what time it is, and for what was recorded before as well. */
+static void first_label(struct listener *l)
+{
+	frame_clock_solve(l->clock);    /* the first segment is named by it */
+	plans_host_known(l->settings.plans);
+}
+
 static void label_stamps(struct listener *l)
 {
 	struct stamp stamp;
@@ -220,15 +253,24 @@ static void label_stamps(struct listener *l)
 	double sigma;
 
 	while (acquire_stamp(l->settings.acquire, &stamp)) {
+		if (l->loss)
+			loss_watch_add_stamp(l->loss, (double)stamp.frame, stamp.host_ns, stamp.late);
 		if (l->settings.intake->origin.quality != TIME_FREE)
 			continue;       /* a replay: the data's own time counts */
+		heed_host_clock(l);
 		if (!host_clock_at(stamp.host_ns, l->config->clock.host_sigma_s, &when, &sigma))
 			continue;
 		frame_clock_add_label(l->clock, (double)stamp.frame, when, sigma, stamp.late, TIME_HOST);
 		if (!l->dated)
-			frame_clock_solve(l->clock);    /* the first segment is named by it */
+			first_label(l);
 		l->dated = true;
 	}
+}
+
+static void add_edge(struct listener *l, const struct pulse_edge *edge)
+{
+	if (loss_watch_add_edge(l->loss, edge->frame, edge->sigma_frames))
+		l->solved = 0;          /* a loss was found: solve now */
 }
 
 static void find_pulses(struct listener *l, size_t count, uint64_t first)
@@ -243,7 +285,7 @@ static void find_pulses(struct listener *l, size_t count, uint64_t first)
 	do {
 		n = pulse_detector_execute(l->pulses, l->samples, count, first, edge, 16);
 		for (size_t k = 0; k < n; k++)
-			frame_clock_add_pulse(l->clock, edge[k].frame, edge[k].sigma_frames);
+			add_edge(l, &edge[k]);
 		first += count;
 		count = 0;
 	} while (n == 16);
@@ -267,9 +309,13 @@ static void handle_gap(struct listener *l, const struct ring_news *news)
 		atomic_fetch_add(&l->lost, news->overrun);
 		log_error("the signal thread was too slow: %llu frames not looked at", (unsigned long long)news->overrun);
 	}
-	if (news->lost > news->overrun)
-		frame_clock_add_gap(l->clock, (double)news->first,
-		                    hypot(gap_sigma_s * l->rate, gap_sigma_relative * (double)(news->lost - news->overrun)));
+	if (news->lost > news->overrun) {
+		double sigma = gap_sigma_frames(l->rate, news->lost - news->overrun);
+
+		frame_clock_add_gap(l->clock, (double)news->first, sigma);
+		if (l->loss)
+			loss_watch_add_gap(l->loss, (double)news->first, sigma);
+	}
 	if ((double)news->lost > fill_s * l->rate)
 		plans_break(l, l->next_frame, news->first);
 }
@@ -394,7 +440,9 @@ static void finish(struct listener *l)
 	say_undated(l, true);
 	while (l->pulses && (n = pulse_detector_finish(l->pulses, edge, 16)) > 0)
 		for (size_t k = 0; k < n; k++)
-			frame_clock_add_pulse(l->clock, edge[k].frame, edge[k].sigma_frames);
+			add_edge(l, &edge[k]);
+	if (l->loss)
+		loss_watch_finish(l->loss);
 	solve_clock(l, true);
 	for (size_t k = 0; k < l->lanes; k++)
 		sightings_add(l, contact, lane_finish(l->lane[k], contact, SIGHTINGS));

@@ -3,8 +3,10 @@
 #define LISTEN_INNER_H
 
 #include "lane.h"
+#include "limbwatch/host_clock.h"
 #include "limbwatch/pulse.h"
 #include "listen.h"
+#include "loss.h"
 
 /* What listen.c (the thread), vigil.c (expected contacts) and sighting.c (seen contacts, plans) share: all of it is
  * the signal thread's. */
@@ -37,6 +39,8 @@ struct listener {
 	int pulse_channel;              /* index in the configuration, or -1 */
 	struct pulse_detector *pulses;
 	struct frame_clock *clock;
+	struct loss_watch *loss;        /* between the two; NULL without a pulse channel */
+	struct host_clock_watch host;   /* whether the host's clock is set meanwhile */
 	uint64_t next_frame;            /* after the newest heard */
 	uint64_t solved;                /* frame at the last solution */
 	bool dated;                     /* some label says what time it is */

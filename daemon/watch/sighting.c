@@ -1,10 +1,8 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <ctype.h>
-#include <fcntl.h>
 #include <math.h>
 #include <stdlib.h>
 #include <string.h>
-#include <unistd.h>
 #include "limbwatch/log.h"
 #include "listen_inner.h"
 
@@ -194,25 +192,13 @@ static void append_slug(char *name, size_t size, const char *text)
 		name[n - 1] = 0;
 }
 
-/* First eight digits of the boot id: what dates an undated recording later. */
-static void boot_name(char text[9])
-{
-	int fd = open("/proc/sys/kernel/random/boot_id", O_RDONLY | O_CLOEXEC);
-
-	if (fd < 0 || read(fd, text, 8) != 8)
-		memcpy(text, "00000000", 8);
-	text[8] = 0;
-	if (fd >= 0)
-		close(fd);
-}
-
 static void name_plan(const struct listener *l, struct plan *plan, const char *what)
 {
-	char text[TAI_TEXT], *to = plan->name, boot[9];
+	char text[TAI_TEXT], *to = plan->name, boot[HOST_CLOCK_BOOT];
 
 	if (plan->quality == TIME_FREE) {
-		boot_name(boot);
-		snprintf(plan->name, sizeof(plan->name), "undated-%s-%012llu", boot, (unsigned long long)plan->from);
+		host_clock_boot(boot);          /* the first eight digits tell boots apart */
+		snprintf(plan->name, sizeof(plan->name), "undated-%.8s-%012llu", boot, (unsigned long long)plan->from);
 	} else {
 		tai_format_utc(text, plan->start, 0);
 		for (const char *p = text; *p; p++)
@@ -242,6 +228,8 @@ static struct plan *append_plan(struct listener *l, uint64_t from, uint64_t to, 
 	plan->start = reading.when;
 	plan->quality = reading.quality;
 	plan->refreshed = from;
+	if (!l->settings.intake->real_time || !acquire_frame_time(l->settings.acquire, from, &plan->host_ns))
+		plan->host_ns = INT64_MIN;
 	name_plan(l, plan, what);
 	snprintf(plan->description, sizeof(plan->description), "limbwatch %s: %s", LIMBWATCH_VERSION,
 	         reason == REASON_VIGIL ? "vigil" : reason == REASON_TRIGGER ? "trigger" : "everything");
@@ -285,6 +273,7 @@ static void describe_channels(const struct listener *l, struct sidecar *s)
 		out->integration_s = c->curve.integration_s;
 		out->low_pass_s = c->curve.low_pass_s;
 		out->high_pass_hz = c->curve.high_pass_hz;
+		out->response_delay_s = c->response_delay_s;
 		out->rate = l->rate;
 	}
 	for (size_t k = 0; k < l->lanes; k++)
@@ -312,6 +301,15 @@ static void describe_expected(const struct listener *l, const struct plan *plan,
 	}
 }
 
+static void describe_losses(const struct listener *l, uint64_t from, uint64_t end, struct sidecar *s)
+{
+	enum { MOST = 8192 };
+
+	s->loss = malloc(MOST * sizeof(*s->loss));
+	if (s->loss)
+		s->losses = loss_watch_losses(l->loss, from, end, s->loss, MOST);
+}
+
 static void describe_clock(const struct listener *l, const struct plan *plan, uint64_t end, struct sidecar *s)
 {
 	size_t most = (size_t)((double)(end - plan->from) / l->rate * 1.2) + 16;
@@ -321,6 +319,7 @@ static void describe_clock(const struct listener *l, const struct plan *plan, ui
 	s->true_rate = frame_clock_rate(l->clock, 0.5 * ((double)plan->from + (double)end));
 	if (l->pulse_channel < 0)
 		return;
+	describe_losses(l, plan->from, end, s);
 	s->pulse = calloc(most, sizeof(*s->pulse));
 	if (s->pulse)
 		s->pulses = frame_clock_pulses(l->clock, (double)plan->from, (double)end, s->pulse, most);
@@ -364,6 +363,9 @@ static void describe(struct listener *l, struct plan *plan, bool final)
 	describe_expected(l, plan, &s);
 	describe_clock(l, plan, end, &s);
 	describe_contacts(l, plan, &s);
+	if (plan->host_ns != INT64_MIN)
+		host_clock_boot(s.boot_id);
+	s.monotonic_ns = plan->host_ns;
 	plan->refreshed = l->next_frame;
 	plans_describe(l->settings.plans, plan, &s, final);
 }
@@ -386,8 +388,26 @@ static void keep_everything(struct listener *l)
 		append_plan(l, from, from + length, REASON_ALL, "");
 }
 
+/* The date is known: what was recorded before gets it too. */
+static void amend(struct listener *l)
+{
+	struct clock_reading reading;
+	struct plan *plan;
+
+	frame_clock_at(l->clock, (double)l->next_frame, &reading);
+	while (reading.quality != TIME_FREE && (plan = plans_take_aside(l->settings.plans))) {
+		plan->amended = true;
+		plan->final = false;
+		plan->next = NULL;
+		describe(l, plan, true);
+		plans_append(l->settings.plans, plan);
+	}
+}
+
 void plans_update(struct listener *l, bool ending)
 {
+	if (l->dated)
+		amend(l);
 	if (l->config->keep.everything && !ending)
 		keep_everything(l);
 	for (size_t k = 0; ending && k < l->plans; k++)

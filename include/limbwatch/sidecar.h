@@ -26,6 +26,7 @@ struct sidecar_channel {
 	enum measure measure;
 	int polarity;
 	double wavelength_m, passband_m, aperture_m, integration_s, low_pass_s, high_pass_hz;
+	double response_delay_s;        /* further constant delay, taken off the contact times */
 	double rate;                    /* of the series, Hz */
 };
 
@@ -54,6 +55,9 @@ struct sidecar {
 	uint64_t first;                 /* number of the segment's first frame since the intake's start */
 	struct clock_reading start, end;/* of its first frame and past its last */
 	double true_rate;               /* frames per second by the clock solution */
+	/* What can date it later: of this computer, see host_clock_boot(). */
+	char boot_id[33];               /* "": not recorded live */
+	int64_t monotonic_ns;           /* CLOCK_MONOTONIC of frame `first`; INT64_MIN: unknown */
 	/* Arrays are the sidecar's own (malloc), freed by sidecar_clear. */
 	size_t channels;  struct sidecar_channel *channel;
 	size_t expecteds; struct sidecar_expected *expected;
