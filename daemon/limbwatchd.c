@@ -119,11 +119,13 @@ static int record(struct config *config, struct options *o)
 	};
 	int ret;
 
+	log_detach();
 	while ((ret = recorder_run(config, &hooks)) == RECORDER_RENEW) {
 		config_free(config);
 		*config = o->next;
 		o->renewed = false;
 	}
+	log_attach();
 	if (o->renewed)
 		config_free(&o->next);
 	return ret;

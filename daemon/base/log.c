@@ -6,10 +6,11 @@
 #include <string.h>
 #include <unistd.h>
 
+#include "log_writer.h"
 #include "utf8.h"
 
 /* A pipe keeps writes of up to PIPE_BUF (4096 on Linux) whole, so sentences of several threads do not mix. */
-enum { LINE_MAX_BYTES = 4096 };
+enum { LINE_MAX_BYTES = 4096 };       /* its newline included */
 
 static const char *log_program = "limbwatch";
 static enum log_level log_least = LEVEL_NOTICE;
@@ -73,9 +74,24 @@ static void write_whole(const char *line, size_t n)
 	}
 }
 
+static void write_text(const char *text)
+{
+	write_whole(text, strlen(text));
+}
+
+int log_detach(void)
+{
+	return log_writer_start(write_text);
+}
+
+void log_attach(void)
+{
+	log_writer_end();
+}
+
 static void __attribute__((format(printf, 2, 0))) say(enum log_level level, const char *format, va_list arguments)
 {
-	char line[LINE_MAX_BYTES];
+	char line[LINE_MAX_BYTES + 1];
 	int saved_errno = errno;
 	int head, n;
 
@@ -83,14 +99,14 @@ static void __attribute__((format(printf, 2, 0))) say(enum log_level level, cons
 		level = LEVEL_DETAIL;
 	if (!log_sink && !hushed && level > log_least)
 		return;
-	head = snprintf(line, sizeof(line) / 2, "%s: %s", log_program, level_word[level]);
-	if (head < 0 || head >= (int)sizeof(line) / 2)
+	head = snprintf(line, LINE_MAX_BYTES / 2, "%s: %s", log_program, level_word[level]);
+	if (head < 0 || head >= (int)LINE_MAX_BYTES / 2)
 		head = 0;
-	n = vsnprintf(line + head, sizeof(line) - (size_t)head - 1, format, arguments);
+	n = vsnprintf(line + head, LINE_MAX_BYTES - (size_t)head - 1, format, arguments);
 	if (n < 0)
-		n = snprintf(line + head, sizeof(line) - (size_t)head - 1, "%s", format);
-	if ((size_t)n >= sizeof(line) - (size_t)head - 1) {     /* cut, and seen to be cut */
-		n = (int)sizeof(line) - head - 2;
+		n = snprintf(line + head, LINE_MAX_BYTES - (size_t)head - 1, "%s", format);
+	if ((size_t)n >= LINE_MAX_BYTES - (size_t)head - 1) {     /* cut, and seen to be cut */
+		n = (int)LINE_MAX_BYTES - head - 2;
 		memcpy(line + head + n - 3, "...", 3);
 	}
 	clean(line);
@@ -100,7 +116,9 @@ static void __attribute__((format(printf, 2, 0))) say(enum log_level level, cons
 		log_sink(log_sink_context, level, line + head);
 	} else if (level <= log_least) {
 		line[head + n] = '\n';
-		write_whole(line, (size_t)(head + n + 1));
+		line[head + n + 1] = 0;
+		if (!log_writer_take(format, line))
+			write_text(line);
 	}
 	errno = saved_errno;
 }

@@ -18,6 +18,14 @@ void log_open(const char *program, enum log_level least);
 /** Sends every sentence to `sink` instead of stderr, all levels; NULL restores.  For tests. */
 void log_set_sink(void (*sink)(void *context, enum log_level level, const char *sentence), void *context);
 
+/**
+ * From now on a thread of its own writes to stderr: nobody who says something waits for a terminal or a journal that does not read.
+ * What is too much is counted and said: more than ten sentences of a kind in a minute, or 512 waiting.  @return 0 or -errno
+ */
+int  log_detach(void);
+/** Ends that; what waits is written, for two seconds at most. */
+void log_attach(void);
+
 /** While on, this thread's sentences become details: for what is tried again and again and has been said. */
 void log_hush(bool on);
 /** The last sentence of this thread since log_hush(true), without what stands before it; "" when there was none. */

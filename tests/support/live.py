@@ -238,6 +238,28 @@ def stuck():
     ok(status == 0, "and the recorder still ends", (status, said))
 
 
+def unread():
+    """Nobody reads the log: a pipe that is full from the start."""
+    path = config("unread", 4)
+    read_end, write_end = os.pipe()
+    os.set_blocking(write_end, False)
+    try:
+        while True:
+            os.write(write_end, b"x" * 4096)
+    except BlockingIOError:
+        os.set_blocking(write_end, True)
+    process = subprocess.Popen([program, "--config", path, "--json", "--verbose"], stdout=subprocess.PIPE, stderr=write_end)
+    os.close(write_end)
+    try:
+        out, _ = process.communicate(timeout=30)
+        ok(process.returncode == 0 and out.count(b'"snr"') == 1, "a log that nobody reads stops nothing",
+           (process.returncode, out))
+    except subprocess.TimeoutExpired:
+        process.kill()
+        ok(False, "a log that nobody reads stops nothing", "it hangs")
+    os.close(read_end)
+
+
 def guarded(part):
     try:
         part()
@@ -245,9 +267,9 @@ def guarded(part):
         print("#", part.__name__, repr(error))
 
 
-print("1..23")
+print("1..24")
 parts = [threading.Thread(target=guarded, args=(part,))
-         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck)]
+         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread)]
 for part in parts:
     part.start()
 for part in parts:
