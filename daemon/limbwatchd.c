@@ -5,6 +5,7 @@
 #include <signal.h>
 #include <stdio.h>
 #include <stdlib.h>
+#include <string.h>
 #include <unistd.h>
 #include "limbwatch/log.h"
 #include "limbwatch/recorder.h"
@@ -94,6 +95,73 @@ static void print_contact(void *context, const struct config *config, const stru
 	(o->json ? report_json : report_text)(stdout, config, contact, segment);
 }
 
+/* Where the service manager lets the recorder keep things, "" without one: systemd.exec(5), StateDirectory=. */
+static void last_good_path(char path[4096])
+{
+	const char *folder = getenv("STATE_DIRECTORY");
+
+	*path = 0;
+	if (folder && *folder == '/')
+		snprintf(path, 4096, "%.*s/limbwatch.conf.last-good", (int)strcspn(folder, ":"), folder);
+}
+
+static int copy_file(const char *from, const char *to)
+{
+	char buffer[65536], part[4200];
+	FILE *in = fopen(from, "re"), *out;
+	size_t n;
+	int ret;
+
+	if (!in)
+		return -errno;
+	snprintf(part, sizeof(part), "%s.part", to);
+	out = fopen(part, "we");
+	if (!out) {
+		ret = -errno;
+		fclose(in);
+		return ret;
+	}
+	while ((n = fread(buffer, 1, sizeof(buffer), in)) > 0)
+		fwrite(buffer, 1, n, out);
+	ret = ferror(in) || ferror(out) || fflush(out) || fdatasync(fileno(out)) ? -EIO : 0;
+	fclose(in);
+	if (fclose(out) || (ret == 0 && rename(part, to) < 0))
+		ret = -errno;
+	return ret;
+}
+
+/* For a restart that finds a bad one, with nobody there: see load(). */
+static void remember_good(const char *config)
+{
+	char path[4096];
+	int ret;
+
+	last_good_path(path);
+	if (!*path)
+		return;
+	ret = copy_file(config, path);
+	if (ret < 0)
+		log_warning("%s cannot be kept as the last good configuration in %s: %s", config, path, strerror(-ret));
+}
+
+/* Under a service manager a bad configuration does not end the nights: the last good one is taken, loudly. */
+static int load(struct config *config, const struct options *o)
+{
+	char path[4096];
+	int ret = config_load(config, o->config);
+
+	if (o->check || ret == 0) {
+		if (!o->check)
+			remember_good(o->config);
+		return ret;
+	}
+	last_good_path(path);
+	if (!*path || access(path, R_OK) < 0)
+		return ret;
+	log_error("%s is refused; THE LAST GOOD CONFIGURATION IS USED INSTEAD: %s", o->config, path);
+	return config_load(config, path);
+}
+
 /* A bad configuration changes nothing: the last good one runs on. */
 static bool reload(void *context)
 {
@@ -105,6 +173,7 @@ static bool reload(void *context)
 		return false;
 	}
 	log_notice("%s is read anew", o->config);
+	remember_good(o->config);
 	if (o->renewed)
 		config_free(&o->next);
 	o->next = config;
@@ -142,7 +211,7 @@ int main(int argc, char **argv)
 	if (ret >= 0)
 		return ret;
 	log_open("limbwatchd", options.quiet ? LEVEL_WARNING : options.verbose ? LEVEL_DETAIL : LEVEL_NOTICE);
-	ret = config_load(&config, options.config);
+	ret = load(&config, &options);
 	if (ret < 0)
 		return EXIT_USAGE;
 	catch_signals();

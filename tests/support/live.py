@@ -238,6 +238,20 @@ def stuck():
     ok(status == 0, "and the recorder still ends", (status, said))
 
 
+def last_good():
+    path, kept = config("good", 3), f"{work}/state"
+    os.mkdir(kept)
+    status, out, said = Recorder(path, STATE_DIRECTORY=kept).end()
+    ok(status == 0 and os.listdir(kept) == ["limbwatch.conf.last-good"], "a good configuration is remembered",
+       (status, os.listdir(kept), said))
+    open(path, "w").write("station = { name = ;\n")
+    status, out, said = Recorder(path, STATE_DIRECTORY=kept).end()
+    ok(status == 0 and "LAST GOOD" in said and "line 1" in said and out.count('"snr"') == 1,
+       "and taken, loudly, when a restart finds a bad one", (status, out, said))
+    status, _, said = Recorder(path).end()
+    ok(status == 2, "without a service manager a bad one is refused", (status, said))
+
+
 def unread():
     """Nobody reads the log: a pipe that is full from the start."""
     path = config("unread", 4)
@@ -267,9 +281,9 @@ def guarded(part):
         print("#", part.__name__, repr(error))
 
 
-print("1..24")
+print("1..27")
 parts = [threading.Thread(target=guarded, args=(part,))
-         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread)]
+         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread, last_good)]
 for part in parts:
     part.start()
 for part in parts:
