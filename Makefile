@@ -42,6 +42,8 @@ programs   := $(BUILD)/limbwatchd $(BUILD)/limbwatch
 support    := $(patsubst %.c,$(BUILD)/%.o,$(wildcard tests/support/*.c))
 tests      := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/test_*.c))
 benches    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/bench/bench_*.c))
+# Preloaded into the plain build only: a sanitizer brings its own malloc.
+witnesses  := $(if $(SAN),,$(patsubst tests/%.c,$(BUILD)/tests/%.so,$(wildcard tests/preload/*.c)))
 fuzzers    := $(patsubst tests/%.c,$(BUILD)/tests/%,$(wildcard tests/fuzz/fuzz_*.c))
 
 # V=1 shows the commands.
@@ -65,7 +67,11 @@ $(tests): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
 $(benches) $(fuzzers): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(support) $(library)
 	$(call say,LD,$@)$(CC) $(LDFLAGS) -o $@ $^ $(pkg_libs) -lm
 
-tests: all $(tests) $(fuzzers) $(BUILD)/tests/bench/bench_detector
+$(witnesses): $(BUILD)/tests/%.so: tests/%.c
+	@mkdir -p $(@D)
+	$(call say,CC,$<)$(CC) $(CPPFLAGS) -std=c17 -O2 -g -Wall -Wextra -shared -fPIC -o $@ $< -ldl
+
+tests: all $(tests) $(fuzzers) $(witnesses) $(BUILD)/tests/bench/bench_detector
 
 # Set up everything, build, pass the tests.
 check: deps-check
