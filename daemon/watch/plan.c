@@ -127,6 +127,7 @@ static int sidecar_copy(struct sidecar *out, const struct sidecar *from)
 	s.expected = copy_array(from->expected, from->expecteds, sizeof(*from->expected), &ok);
 	s.part = copy_array(from->part, from->parts, sizeof(*from->part), &ok);
 	s.gap = copy_array(from->gap, from->gaps, sizeof(*from->gap), &ok);
+	s.loss = copy_array(from->loss, from->losses, sizeof(*from->loss), &ok);
 	s.pulse = copy_array(from->pulse, from->pulses, sizeof(*from->pulse), &ok);
 	s.contact = copy_array(from->contact, from->contacts, sizeof(*from->contact), &ok);
 	if (!ok) {
