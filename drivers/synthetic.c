@@ -15,6 +15,7 @@
 #include "limbwatch/log.h"
 #include "limbwatch/synthetic.h"
 #include "synthetic_card.h"
+#include "synthetic_fault.h"
 #include "synthetic_pulse.h"
 
 #define MAS (M_PI / 180 / 3600e3)
@@ -25,7 +26,10 @@ enum {
 	COMPANION, INTEGRATION, LOW_PASS, HIGH_PASS, LEVEL, BACKGROUND, SNR, NOISE, RED_NOISE, RED_CORNER, SCINTILLATION,
 	GAIN_DRIFT, HUM, HUM_FREQUENCY, PULSE, PULSE_HEIGHT, PULSE_WIDTH, PULSE_POLARITY, PULSE_AC, PULSE_JITTER,
 	PULSE_MISSING, PULSE_SPURIOUS, PULSE_NOISE, CLOCK_ERROR, CLOCK_DRIFT, CLOCK_WANDER,
+	SILENT_LOSS, SILENT_LOSS_FRAMES, GAP, GAP_FRAMES,
 };
+
+enum { BLOCK = 4096 };
 
 #define NUMBER(n, f, lo, hi, m) { .name = n, .type = SETTING_NUMBER, .fallback = f, .min = lo, .max = hi, .meaning = m }
 
@@ -88,16 +92,21 @@ static const struct setting settings[] = {
 	[CLOCK_ERROR] = NUMBER("clock_error_ppm", 0, -1000, 1000, "how fast the card's clock is"),
 	[CLOCK_DRIFT] = NUMBER("clock_drift_ppm_per_hour", 0, -100, 100, "and how that changes"),
 	[CLOCK_WANDER] = NUMBER("clock_wander", 0, 0, 100, "random walk of the card's clock, ppm after an hour, rms"),
+	[SILENT_LOSS] = NUMBER("silent_loss_s", 0, 0, 864000, "when frames are lost and nobody says so, true seconds after the start"),
+	[SILENT_LOSS_FRAMES] = { .name = "silent_loss_frames", .type = SETTING_INTEGER, .fallback = 0, .min = -BLOCK, .max = 1e7,
+		.meaning = "how many; negative: given twice" },
+	[GAP] = NUMBER("gap_s", 0, 0, 864000, "when frames are lost and that is said, true seconds after the start"),
+	[GAP_FRAMES] = { .name = "gap_frames", .type = SETTING_INTEGER, .fallback = 0, .min = 0, .max = 1e7,
+		.meaning = "how many" },
 	{ .name = NULL },
 };
-
-enum { BLOCK = 4096 };
 
 struct synthetic {
 	struct intake intake;
 	double rate;
 	struct tai start;
 	struct synthetic_card card;
+	struct synthetic_fault fault;
 	struct synthetic_pulse *pulse;  /* NULL: no second column */
 	/* The detector. */
 	struct curve *curve;            /* NULL: no contact, the source stays */
@@ -106,7 +115,10 @@ struct synthetic {
 	double red_state, twinkle_state, slow;  /* slow: low-passed signal of the AC coupling */
 	/* Output. */
 	gsl_rng *rng;
-	uint64_t next, total;
+	uint64_t next, total;           /* frames taken, lost ones too */
+	uint64_t told;                  /* number of the next frame as given */
+	size_t again;                   /* frames of the last block to be given once more */
+	unsigned flags;                 /* of the next block */
 	bool pace;
 	int64_t started_ns;
 	double when[BLOCK], detector[BLOCK], ticks[BLOCK];      /* when: true time, seconds after the start */
@@ -203,14 +215,26 @@ static int make_card(struct synthetic_card *out, const struct setting_value *v)
 	return synthetic_card_init(out, &card);
 }
 
+static void make_fault(struct synthetic_fault *out, const struct synthetic_card *card, const struct setting_value *v)
+{
+	const struct synthetic_fault_settings fault = {
+		.loss_s = v[SILENT_LOSS].number, .loss_frames = v[SILENT_LOSS_FRAMES].integer,
+		.gap_s = v[GAP].number, .gap_frames = v[GAP_FRAMES].integer,
+	};
+
+	synthetic_fault_init(out, card, &fault);
+}
+
 double synthetic_frame(const struct setting_value *v, double t)
 {
 	struct synthetic_card card;
+	struct synthetic_fault fault;
 	double frame;
 
 	if (make_card(&card, v) < 0)
 		return NAN;
-	frame = synthetic_card_frame(&card, t);
+	make_fault(&fault, &card, v);
+	frame = synthetic_fault_told(&fault, synthetic_card_frame(&card, t));
 	synthetic_card_release(&card);
 	return frame;
 }
@@ -326,7 +350,7 @@ static void set_intake(struct synthetic *s, const struct setting_value *v)
 	in->format.channels = s->pulse ? 2 : 1;
 	in->rate = s->rate;
 	in->real_time = s->pace;
-	in->total_frames = s->total;
+	in->total_frames = (uint64_t)llround(synthetic_fault_told(&s->fault, (double)s->total));
 	in->origin.quality = v[START_SIGMA].number > 0 ? TIME_HOST : TIME_FREE;
 	in->origin.when = tai_add(s->start, v[START_ERROR].number);
 	in->origin.sigma_s = v[START_SIGMA].number;
@@ -348,6 +372,7 @@ static int synthetic_open(struct intake **out, const struct setting_value *v)
 	s->rng = gsl_rng_alloc(gsl_rng_taus2);
 	if (!s->rng || make_card(&s->card, v) < 0)
 		goto close;
+	make_fault(&s->fault, &s->card, v);
 	gsl_rng_set(s->rng, (unsigned long)v[SEED].integer + 1);
 	tai_parse_utc(&s->start, v[START].text);
 	ret = set_detector(s, v);
@@ -463,28 +488,73 @@ static bool wait_for(const struct synthetic *s, uint64_t frame, int timeout_ms)
 	return monotonic_ns() >= due;
 }
 
+static void make_frames(struct synthetic *s, size_t count)
+{
+	make_detector(s, count);
+	frames_from_double(s->frames, s->intake.format, 0, s->detector, count);
+	if (s->pulse) {
+		synthetic_pulse_execute(s->pulse, s->next, s->ticks, count);
+		frames_from_double(s->frames, s->intake.format, 1, s->ticks, count);
+	}
+	s->next += count;
+}
+
+/* The sky goes on while nobody listens. */
+static void lose(struct synthetic *s, uint64_t frames)
+{
+	uint64_t end = s->total - s->next < frames ? s->total : s->next + frames;
+
+	while (s->next < end)
+		make_frames(s, end - s->next < BLOCK ? (size_t)(end - s->next) : BLOCK);
+}
+
+/* What goes wrong at this very frame. */
+static void misbehave(struct synthetic *s)
+{
+	if (s->next == s->fault.loss_at)
+		lose(s, s->fault.lost);
+	if (s->next == s->fault.gap_at) {
+		lose(s, s->fault.gap);
+		s->told += s->fault.gap;
+		s->flags |= BLOCK_GAP;
+	}
+}
+
+static int give(struct synthetic *s, struct block *block, size_t count, uint64_t taken)
+{
+	*block = (struct block){
+		.frames = s->frames, .count = count, .first = s->told, .flags = s->flags,
+		.host_ns = s->pace ? s->started_ns + due_ns(s, taken) : INT64_MIN,
+	};
+	s->told += count;
+	s->flags = 0;
+	return 1;
+}
+
 static int synthetic_read(struct intake *intake, struct block *block, int timeout_ms)
 {
 	struct synthetic *s = (struct synthetic *)intake;
-	size_t most = s->pace ? (size_t)fmax(1, fmin(BLOCK, s->rate / 100)) : BLOCK;
-	size_t count = s->total - s->next < most ? (size_t)(s->total - s->next) : most;
+	size_t count = s->pace ? (size_t)fmax(1, fmin(BLOCK, s->rate / 100)) : BLOCK;
 
+	if (s->again) {
+		count = s->again;
+		s->again = 0;
+		return give(s, block, count, s->next);
+	}
+	misbehave(s);
+	if (s->fault.twice && s->next == s->fault.loss_at - s->fault.twice)
+		count = (size_t)s->fault.twice;
+	if (s->total - s->next < count)
+		count = (size_t)(s->total - s->next);
+	count = synthetic_fault_quiet(&s->fault, s->next, count);
 	if (count == 0)
 		return -ENODATA;
 	if (s->pace && !wait_for(s, s->next + count, timeout_ms))
 		return 0;
-	make_detector(s, count);
-	frames_from_double(s->frames, intake->format, 0, s->detector, count);
-	if (s->pulse) {
-		synthetic_pulse_execute(s->pulse, s->next, s->ticks, count);
-		frames_from_double(s->frames, intake->format, 1, s->ticks, count);
-	}
-	*block = (struct block){
-		.frames = s->frames, .count = count, .first = s->next,
-		.host_ns = s->pace ? s->started_ns + due_ns(s, s->next) : INT64_MIN,
-	};
-	s->next += count;
-	return 1;
+	make_frames(s, count);
+	if (s->fault.twice && s->next == s->fault.loss_at)
+		s->again = count;
+	return give(s, block, count, s->next - count);
 }
 
 const struct intake_driver intake_synthetic = {

@@ -306,6 +306,73 @@ static void frames_lost_in_silence_show_in_the_phase(void **state)
 	frame_clock_destroy(c);
 }
 
+/* Half a millisecond and less lies within what following the comb allows: it bent the smooth on both sides, by up to 80 us. */
+static void a_few_frames_lost_in_silence_bend_nothing(void **state)
+{
+	static const double lost[] = { 1, 2, 5, 20, 100, -1, -5, -100 };
+
+	(void)state;
+	for (size_t k = 0; k < sizeof(lost) / sizeof(*lost); k++)
+		for (int told = 0; told < 3; told++) {
+			struct frame_clock *c = make();
+			struct clock_reading r;
+
+			pulses(c, 1, 100, 0);
+			for (int n = 101; n <= 200; n++) {
+				/* Told before it is found, told when it is found already, or not at all: it counts once. */
+				if ((told == 1 && n == 102) || (told == 2 && n == 150))
+					assert_int_equal(frame_clock_add_loss(c, 99.75 * 48000, 100.75 * 48000 - lost[k], lost[k], 0), 0);
+				frame_clock_add_pulse(c, (n - 0.25) * 48000 - lost[k], 0.001);
+			}
+			frame_clock_add_label(c, 0, tai_s(0.25), 0.01, false, TIME_HOST);
+			assert_int_equal(frame_clock_solve(c), 200);
+			for (double t = 5.25; t < 195; t += 1.5) {
+				r = read_at(c, (t - 0.25) * 48000 - (t > 100.5 ? lost[k] : 0));
+				if (t < 99.9 || t > 101.1)
+					assert_true(fabs(tai_difference(r.when, tai_s(t))) < 1e-8 && r.sigma_s < 1e-6);
+			}
+			/* Where it happened, nobody knows: a frame half way may be off by the loss, or not. */
+			r = read_at(c, 100.25 * 48000 - lost[k] / 2);
+			assert_true(fabs(r.sigma_s - 0.5 * fabs(lost[k]) / 48000) < 0.01 * r.sigma_s);
+			frame_clock_destroy(c);
+		}
+}
+
+static void a_loss_that_makes_no_sense_is_refused(void **state)
+{
+	struct frame_clock *c = make();
+
+	(void)state;
+	assert_true(frame_clock_add_loss(c, NAN, 1, 1, 0) < 0 && frame_clock_add_loss(c, 0, 1, INFINITY, 0) < 0);
+	assert_true(frame_clock_add_loss(c, 2, 1, 1, 0) < 0 && frame_clock_add_loss(c, 0, 1, 1, -1) < 0);
+	assert_true(frame_clock_add_loss(c, 0, 1, 1, NAN) < 0);
+	/* More given twice than there is room for: still a time for every frame, and a frame for every time. */
+	assert_int_equal(frame_clock_add_loss(c, 48000, 48010, -4096, 0), 0);
+	frame_clock_add_label(c, 0, tai_s(0), 0.01, false, TIME_HOST);
+	frame_clock_solve(c);
+	for (double f = 47990; f < 53000; f += 0.7)
+		assert_true(isfinite(read_at(c, f).sigma_s) && isfinite(frame_clock_frame(c, read_at(c, f).when)));
+	frame_clock_destroy(c);
+}
+
+/* A long night with a loss every second: the memory is bounded, and the newest hours are right. */
+static void losses_without_end_are_borne(void **state)
+{
+	struct frame_clock *c = make();
+	double lost = 0;
+
+	(void)state;
+	for (int k = 1; k <= 40000; k++) {
+		frame_clock_add_pulse(c, k * 48000 - lost, 0.001);
+		assert_int_equal(frame_clock_add_loss(c, k * 48000 - lost, (k + 1) * 48000 - lost - 64, 64, 0), 0);
+		lost += 64;
+	}
+	frame_clock_add_label(c, 39000 * 48000.0 - 64 * 38999, tai_s(39000), 0.01, false, TIME_HOST);
+	assert_true(frame_clock_solve(c) > 20000);
+	assert_true(fabs(tai_difference(read_at(c, 39500 * 48000.0 - 64 * 39499).when, tai_s(39500))) < 1e-7);
+	frame_clock_destroy(c);
+}
+
 /* Clicks at random, from one in half a minute to eight a second: 30 days of them in all. */
 static void clicks_at_random_never_make_a_comb(void **state)
 {
@@ -513,6 +580,9 @@ int main(void)
 		cmocka_unit_test(a_click_after_a_gap_is_not_taken_for_its_end),
 		cmocka_unit_test(a_poor_first_pulse_after_a_loss_does_not_spoil_the_rest),
 		cmocka_unit_test(frames_lost_in_silence_show_in_the_phase),
+		cmocka_unit_test(a_few_frames_lost_in_silence_bend_nothing),
+		cmocka_unit_test(a_loss_that_makes_no_sense_is_refused),
+		cmocka_unit_test(losses_without_end_are_borne),
 		cmocka_unit_test(clicks_at_random_never_make_a_comb),
 		cmocka_unit_test(spikes_of_the_mains_never_make_a_comb),
 		cmocka_unit_test(pulses_that_are_forgotten_leave_the_label),

@@ -11,6 +11,8 @@
 #include <cmocka.h>
 #include <gsl/gsl_rng.h>
 #include "limbwatch/log.h"
+#include "limbwatch/pulse.h"
+#include "limbwatch/synthetic.h"
 #include "../daemon/watch/loss.h"
 #include "support/edge_probe.h"
 
@@ -351,6 +353,156 @@ static void clicks_without_end_do_not_wait_for_ever(void **state)
 	unmake(&f);
 }
 
+/* ------------------------------------------------------------------ from samples */
+
+static struct setting_value values[128];
+
+static void set(const char *name, double x)
+{
+	for (size_t k = 0; intake_synthetic.settings[k].name; k++)
+		if (!strcmp(intake_synthetic.settings[k].name, name)) {
+			values[k].number = x;
+			values[k].integer = llround(x);
+			return;
+		}
+	fail_msg("no setting %s", name);
+}
+
+static void feed_samples(struct feed *f, struct intake *in, struct pulse_detector *detector)
+{
+	static double samples[4096];
+	struct pulse_edge edge[64];
+	struct block block;
+	size_t n;
+
+	while (in->driver->read(in, &block, 100) == 1) {
+		if (block.flags & BLOCK_GAP) {
+			frame_clock_add_gap(f->clock, (double)block.first, 48);
+			loss_watch_add_gap(f->watch, (double)block.first, 48);
+		}
+		frames_to_double(samples, block.frames, in->format, 1, block.count);
+		n = pulse_detector_execute(detector, samples, block.count, block.first, edge, 64);
+		for (size_t k = 0; k < n; k++)
+			loss_watch_add_edge(f->watch, edge[k].frame, edge[k].sigma_frames);
+	}
+	n = pulse_detector_finish(detector, edge, 64);
+	for (size_t k = 0; k < n; k++)
+		loss_watch_add_edge(f->watch, edge[k].frame, edge[k].sigma_frames);
+	loss_watch_finish(f->watch);
+}
+
+/* Plays the synthetic intake through the pulse detector and the watch. @return losses found; worst error of a time outside */
+static size_t play_samples(struct sidecar_loss *loss, double *worst_s)
+{
+	const struct pulse_settings pulse = { .rate = 48000 };
+	struct pulse_detector *detector;
+	struct feed f = make(48000);
+	struct intake *in;
+	size_t losses;
+
+	assert_int_equal(intake_synthetic.open(&in, values), 0);
+	assert_int_equal(pulse_detector_create(&detector, &pulse), 0);
+	frame_clock_add_label(f.clock, 0, in->origin.when, in->origin.sigma_s, false, TIME_HOST);
+	in->driver->start(in);
+	feed_samples(&f, in, detector);
+	frame_clock_solve(f.clock);
+	losses = loss_watch_losses(f.watch, 0, UINT64_MAX, loss, 4);
+	*worst_s = 0;
+	for (double t = 5.1; t < 35; t += 0.7) {
+		struct clock_reading r;
+
+		if (t > 18 && t < 24)
+			continue;
+		frame_clock_at(f.clock, synthetic_frame(values, t), &r);
+		*worst_s = fmax(*worst_s, fabs(tai_difference(r.when, tai_add(in->origin.when, t))));
+	}
+	in->driver->close(in);
+	pulse_detector_destroy(detector);
+	unmake(&f);
+	return losses;
+}
+
+/* Wherever in a second the frames go, on a pulse's edge or its top too; AC-coupled, noisy. */
+static void a_loss_is_found_in_the_samples(void **state)
+{
+	static const double frames[] = { 1, 48, -480, 1024, 4096, 30000 };
+	unsigned runs = 0, found = 0, wrong = 0;
+	double worst = 0;
+
+	(void)state;
+	log_set_sink(hear, NULL);
+	settings_fallbacks(intake_synthetic.settings, values);
+	set("kind", 2);
+	set("pulse", 1);
+	set("noise_rms", 0);
+	set("duration_s", 40);
+	set("clock_error_ppm", -43);
+	set("pulse_missing", 0.05);
+	set("pulse_spurious", 0.05);
+	for (size_t k = 0; k < sizeof(frames) / sizeof(*frames); k++)
+		for (int seed = 1; seed <= 8; seed++) {
+			struct sidecar_loss loss[4];
+			double worst_s;
+			size_t losses;
+
+			set("seed", seed);
+			set("pulse_ac_hz", seed % 2 ? 0 : 10);
+			set("pulse_noise_rms", seed % 4 < 2 ? 1e-4 : 2e-3);
+			set("silent_loss_s", 20 + 0.125 * seed - 0.25);         /* 20.75 is a whole second */
+			set("silent_loss_frames", frames[k]);
+			losses = play_samples(loss, &worst_s);
+			runs++;
+			found += losses == 1 && loss[0].frames == frames[k] && loss[0].sigma_frames == 0;
+			wrong += losses > 1 || (losses == 1 && loss[0].frames != frames[k]);
+			if (losses == 1 && loss[0].frames == frames[k])
+				worst = fmax(worst, worst_s);
+		}
+	log_set_sink(NULL, NULL);
+	print_message("# from samples: %u of %u losses found, %u wrong, worst time outside %.3f us\n", found, runs, wrong, worst * 1e6);
+	assert_true(wrong == 0 && found == runs && worst < 0.5e-6);
+}
+
+/* Coupling, noise, clicks, a drifting card, frames lost and said: nothing of it is a silent loss. */
+static void samples_without_a_loss_show_none(void **state)
+{
+	static const struct { double ac_hz, noise, inverted, drift, gap; } cases[] = {
+		{ 0, 1e-4, 0, 0, 0 }, { 5, 1e-4, 0, 6, 0 }, { 20, 1e-3, 1, 0, 0 }, { 20, 5e-3, 0, 60, 0 }, { 10, 1e-4, 0, 0, 700 },
+	};
+	unsigned losses = 0, runs = 0;
+	double worst = 0;
+
+	(void)state;
+	said.sentences = 0;
+	log_set_sink(hear, NULL);
+	settings_fallbacks(intake_synthetic.settings, values);
+	set("kind", 2);
+	set("pulse", 1);
+	set("noise_rms", 0);
+	set("duration_s", 40);
+	set("clock_error_ppm", 120);
+	set("pulse_missing", 0.1);
+	set("pulse_spurious", 0.1);
+	for (size_t k = 0; k < sizeof(cases) / sizeof(*cases); k++)
+		for (int seed = 1; seed <= 5; seed++, runs++) {
+			struct sidecar_loss loss[4];
+			double worst_s;
+
+			set("seed", seed);
+			set("pulse_ac_hz", cases[k].ac_hz);
+			set("pulse_noise_rms", cases[k].noise);
+			set("pulse_polarity", cases[k].inverted);
+			set("clock_drift_ppm_per_hour", cases[k].drift);
+			set("gap_s", 20.3);
+			set("gap_frames", cases[k].gap);
+			losses += play_samples(loss, &worst_s);
+			worst = fmax(worst, worst_s);
+		}
+	log_set_sink(NULL, NULL);
+	print_message("# %u runs of 40 s: %u losses, %u sentences, worst time outside 20 +- 3 s %.3f us\n", runs, losses, said.sentences,
+	              worst * 1e6);
+	assert_true(losses == 0 && said.sentences == 0 && worst < 1e-6);
+}
+
 int main(void)
 {
 	const struct CMUnitTest tests[] = {
@@ -361,6 +513,8 @@ int main(void)
 		cmocka_unit_test(many_losses_are_summed_up),
 		cmocka_unit_test(clicks_without_end_do_not_wait_for_ever),
 		cmocka_unit_test(two_pulses_prove_a_loss_at_the_end),
+		cmocka_unit_test(a_loss_is_found_in_the_samples),
+		cmocka_unit_test(samples_without_a_loss_show_none),
 	};
 
 	return cmocka_run_group_tests(tests, NULL, NULL);

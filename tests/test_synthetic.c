@@ -470,6 +470,84 @@ static void a_paced_block_comes_when_the_card_has_taken_it(void **state)
 	intake_synthetic.close(in);
 }
 
+/* All blocks, with the frames that are said to be lost left as NaN. @return frames told */
+static size_t play_faulty(double *column[2], size_t room, unsigned *gaps)
+{
+	struct intake *in;
+	struct block block;
+	size_t next = 0;
+
+	assert_int_equal(intake_synthetic.open(&in, values), 0);
+	assert_int_equal(intake_synthetic.start(in), 0);
+	assert_true(in->total_frames <= room);
+	for (unsigned c = 0; c < 2; c++) {
+		column[c] = malloc(room * sizeof(double));
+		assert_non_null(column[c]);
+		for (size_t k = 0; k < room; k++)
+			column[c][k] = NAN;
+	}
+	*gaps = 0;
+	while (intake_synthetic.read(in, &block, 100) == 1) {
+		assert_true(block.flags & BLOCK_GAP ? block.first > next : block.first == next);
+		*gaps += block.flags & BLOCK_GAP ? 1 : 0;
+		for (unsigned c = 0; c < 2; c++)
+			frames_to_double(column[c] + block.first, block.frames, in->format, c, block.count);
+		next = block.first + block.count;
+	}
+	/* A gap at the very end is never told. */
+	assert_true(next == in->total_frames || value("gap_s")->number > 5.5);
+	intake_synthetic.close(in);
+	return next;
+}
+
+/* The same night with and without a fault: what is left of it is the same, frame by frame. */
+static void frames_are_lost_or_given_twice_as_asked(void **state)
+{
+	static const struct { double loss_s, loss, gap_s, gap; } cases[] = {
+		{ 3.1, 48, 0, 0 }, { 3.1, 1, 0, 0 }, { 3.1, -1, 0, 0 }, { 2.5, -4096, 0, 0 }, { 2.5, 100000, 0, 0 }, { 0, 5, 0, 0 },
+		{ 0, -5, 0, 0 }, { 0.01, -4096, 0, 0 }, { 3.1, 48, 1.7, 300 }, { 3.1, -48, 3.1, 300 }, { 3.1, 4800, 3.15, 300 },
+		{ 0, 0, 5.9, 90000 }, { 5.9, 90000, 0, 0 },
+	};
+	double *whole[2], *column[2];
+	size_t n;
+
+	(void)state;
+	set("duration_s", 6);
+	set("contact_s", 4);
+	set("pulse", 1);
+	set("clock_error_ppm", 80);
+	n = play(whole);
+	for (size_t k = 0; k < sizeof(cases) / sizeof(*cases); k++) {
+		size_t at = (size_t)llround(cases[k].loss_s * 48000 * (1 + 80e-6)), told, given = 0;
+		unsigned gaps;
+
+		set("silent_loss_s", cases[k].loss_s);
+		set("silent_loss_frames", cases[k].loss);
+		set("gap_s", cases[k].gap_s);
+		set("gap_frames", cases[k].gap);
+		told = play_faulty(column, n + 4096, &gaps);
+		assert_true(gaps == (cases[k].gap > 0 && cases[k].gap_s < 5.5));        /* at the very end nothing comes after it */
+		for (size_t f = 0; f < told; f++) {
+			double shift = f < at ? 0 : fmax(cases[k].loss, -(double)at);
+
+			if (isnan(column[0][f]))
+				continue;
+			given++;
+			assert_true(column[0][f] == whole[0][f + (size_t)(long)shift] && column[1][f] == whole[1][f + (size_t)(long)shift]);
+		}
+		if (gaps)
+			assert_int_equal(given, told - (size_t)cases[k].gap);
+		/* The truth knows. */
+		if (cases[k].loss > 0 && cases[k].loss < 10000)
+			assert_true(fabs(synthetic_frame(values, 5) - (5 * 48000 * (1 + 80e-6) - cases[k].loss)) < 1e-6);
+		assert_true(cases[k].loss_s == 0 || fabs(synthetic_frame(values, 0.005) - 0.005 * 48000 * (1 + 80e-6)) < 1e-6);
+		free(column[0]);
+		free(column[1]);
+	}
+	free(whole[0]);
+	free(whole[1]);
+}
+
 static void what_does_not_go_together_is_refused_with_a_sentence(void **state)
 {
 	static const struct { const char *name; double x; const char *second; double y; const char *sentence; } cases[] = {
@@ -508,6 +586,7 @@ int main(void)
 		cmocka_unit_test_setup(many_pulses_in_one_block_all_end, reset),
 		cmocka_unit_test_setup(a_seed_gives_the_same_night_again_and_another_another, reset),
 		cmocka_unit_test_setup(a_paced_block_comes_when_the_card_has_taken_it, reset),
+		cmocka_unit_test_setup(frames_are_lost_or_given_twice_as_asked, reset),
 		cmocka_unit_test_setup(what_does_not_go_together_is_refused_with_a_sentence, reset),
 	};
 

@@ -24,6 +24,7 @@ enum { WALKS = sizeof(walks) / sizeof(*walks) };
 
 int frame_clock_create(struct frame_clock **out, const struct frame_clock_settings *s)
 {
+	const struct pulse_phase_settings phase = { s->rate, s->rate_tolerance, s->pulse_sigma_s };
 	struct frame_clock *c;
 
 	if (!(s->rate >= 1e-3 && s->rate <= 1e9) || !(s->rate_tolerance > 0 && s->rate_tolerance < 0.1) ||
@@ -34,6 +35,10 @@ int frame_clock_create(struct frame_clock **out, const struct frame_clock_settin
 	if (!c)
 		return -ENOMEM;
 	c->settings = *s;
+	if (s->rate >= 1 && pulse_phase_create(&c->phase, &phase) < 0) {
+		free(c);
+		return -ENOMEM;
+	}
 	*out = c;
 	return 0;
 }
@@ -44,6 +49,7 @@ void frame_clock_destroy(struct frame_clock *clock)
 		return;
 	free(clock->node);
 	free(clock->loss);
+	pulse_phase_destroy(clock->phase);
 	free(clock);
 }
 
@@ -92,13 +98,7 @@ void frame_clock_add_pulse(struct frame_clock *c, double frame, double sigma_fra
 		.told = frame, .frame = clock_counted(c, frame, NULL),
 		.sigma_s = hypot(c->settings.pulse_sigma_s, sigma_frames / c->settings.rate),
 	};
-}
-
-void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frames)
-{
-	if (c->gaps == FRAME_CLOCK_GAPS)
-		memmove(c->gap_at, c->gap_at + 1, --c->gaps * sizeof(*c->gap_at));
-	c->gap_at[c->gaps++] = (struct gap_at){ frame, clock_counted(c, frame, NULL), sigma_frames / c->settings.rate };
+	clock_watch_phase(c, n->frame, sigma_frames);
 }
 
 /* ------------------------------------------------------------------ filter and smoother */

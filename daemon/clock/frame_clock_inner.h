@@ -3,6 +3,7 @@
 #define FRAME_CLOCK_INNER_H
 
 #include "limbwatch/frame_clock.h"
+#include "limbwatch/pulse_phase.h"
 
 /* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth), frame_loss.c (frames that no number counts),
  * frame_belief.c (which labels are right) and frame_labels.c (seconds, readings) share.
@@ -43,7 +44,7 @@ struct lock { size_t last; double frame, k, rate; };
 struct gap_at { double told, frame, sigma_s; };
 
 /* Frames lost in silence somewhere between two frames as told; `sum` without its own. */
-struct lost { double after, before, frames, sum; };
+struct lost { double after, before, frames, sum; bool found; };         /* found: by the clock itself */
 
 struct frame_clock {
 	struct frame_clock_settings settings;
@@ -52,6 +53,8 @@ struct frame_clock {
 	struct lock lock;
 	size_t gaps;
 	struct gap_at gap_at[FRAME_CLOCK_GAPS];
+	struct pulse_phase *phase;      /* NULL below a frame a second */
+	double found;                   /* frames lost by what `phase` found: it counts those itself */
 	size_t losses, loss_room;
 	struct lost *loss;
 	size_t labels;
@@ -83,6 +86,8 @@ double clock_seconds(const struct frame_clock *clock, double frame, double *sigm
 double clock_counted(const struct frame_clock *clock, double told, double *sigma_frames);
 /** The inverse. */
 double clock_told(const struct frame_clock *clock, double frame);
+/** A new pulse may show a jump of the phase that nobody told. */
+void clock_watch_phase(struct frame_clock *clock, double frame, double sigma_frames);
 /** Counts the frames of all that is known, and says behind which gaps each pulse stands. */
 void clock_count_all(struct frame_clock *clock);
 /** Labels older than a node that will be the oldest are moved onto it by the last solution. */

@@ -11,7 +11,7 @@
 
 enum { LOSSES = 32768 };                /* one a second for nine hours */
 
-/* The oldest half goes: the frames after it are counted as before. */
+/* When the memory is full the oldest half goes; later frames are counted as before. */
 static bool loss_room(struct frame_clock *c)
 {
 	size_t room = c->loss_room ? 2 * c->loss_room : 16;
@@ -32,23 +32,92 @@ static bool loss_room(struct frame_clock *c)
 	return true;
 }
 
-int frame_clock_add_loss(struct frame_clock *c, double after, double before, double frames, double sigma_frames)
+/* In the order of their frames: a jump of the phase is found when later gaps have been told. */
+static void note_gap(struct frame_clock *c, double told, double sigma_s)
+{
+	size_t k;
+
+	if (c->gaps == FRAME_CLOCK_GAPS)
+		memmove(c->gap_at, c->gap_at + 1, --c->gaps * sizeof(*c->gap_at));
+	for (k = c->gaps++; k > 0 && c->gap_at[k - 1].told > told; k--)
+		c->gap_at[k] = c->gap_at[k - 1];
+	c->gap_at[k] = (struct gap_at){ told, clock_counted(c, told, NULL), sigma_s };
+}
+
+void frame_clock_add_gap(struct frame_clock *c, double frame, double sigma_frames)
+{
+	if (!isfinite(frame) || !(sigma_frames >= 0))
+		return;
+	note_gap(c, frame, sigma_frames / c->settings.rate);
+	if (c->phase)
+		pulse_phase_add_gap(c->phase, clock_counted(c, frame, NULL) - c->found, sigma_frames);
+}
+
+static int note_loss(struct frame_clock *c, const struct lost *loss)
 {
 	const struct lost *newest;
+	struct lost *l;
 
-	if (!isfinite(after) || !isfinite(before) || !isfinite(frames) || !(sigma_frames >= 0) || before < after)
-		return -EINVAL;
 	if (!loss_room(c))
 		return -ENOMEM;
 	newest = c->losses ? &c->loss[c->losses - 1] : NULL;
+	l = &c->loss[c->losses++];
+	*l = *loss;
 	if (newest) {
-		after = fmax(after, newest->before);
-		before = fmax(before, after);
+		l->after = fmax(l->after, newest->before);
+		l->before = fmax(l->before, l->after);
+		l->sum = newest->sum + newest->frames;
 	}
-	c->loss[c->losses++] = (struct lost){ after, before, frames, newest ? newest->sum + newest->frames : 0 };
+	return 0;
+}
+
+/* The same loss as the clock found itself: what is told counts. */
+static bool replace_found(struct frame_clock *c, double after, double before, double frames)
+{
+	struct lost *l = c->losses ? &c->loss[c->losses - 1] : NULL;
+
+	if (!l || !l->found || l->before <= after || before <= l->after)
+		return false;
+	c->found += frames - l->frames;
+	l->frames = frames;
+	return true;
+}
+
+int frame_clock_add_loss(struct frame_clock *c, double after, double before, double frames, double sigma_frames)
+{
+	const struct lost loss = { .after = after, .before = before, .frames = frames };
+	int ret;
+
+	if (!isfinite(after) || !isfinite(before) || !isfinite(frames) || !(sigma_frames >= 0) || before < after)
+		return -EINVAL;
+	if (!replace_found(c, after, before, frames)) {
+		ret = note_loss(c, &loss);
+		if (ret < 0)
+			return ret;
+	}
 	if (sigma_frames > 0)
 		frame_clock_add_gap(c, before, sigma_frames);
 	return 0;
+}
+
+void clock_watch_phase(struct frame_clock *c, double frame, double sigma_frames)
+{
+	struct phase_loss loss;
+	struct lost lost = { .found = true };
+
+	if (!c->phase || pulse_phase_add_edge(c->phase, frame - c->found, sigma_frames, &loss) != PHASE_JUMPED)
+		return;
+	lost.after = clock_told(c, (double)loss.after + c->found);
+	lost.before = clock_told(c, (double)loss.before + c->found);
+	lost.frames = loss.frames;
+	/* It goes on counting with the jump in it, whatever is made of it here. */
+	if (loss.pulse_moved || note_loss(c, &lost) < 0) {
+		note_gap(c, lost.before, fabs(loss.frames) / c->settings.rate);
+		return;
+	}
+	c->found += loss.frames;
+	if (loss.sigma_frames > 0)
+		note_gap(c, lost.before, loss.sigma_frames / c->settings.rate);
 }
 
 /* The newest loss that begins at or before a frame, or NULL. */

@@ -12,7 +12,7 @@
 #include <string.h>
 #include "limbwatch/pulse_phase.h"
 
-enum { LINE = 12, SEEN = 16, LOCK = 5, SHIFTS = 8, STAMPS = 64, ENOUGH = 3, ENOUGH_AGAIN = 2, ACQUAINTED = 8 };
+enum { LINE = 12, SEEN = 16, LOCK = 5, SHIFTS = 8, STAMPS = 64, RATIOS = 24, PENDING = 5, ENOUGH = 3, ENOUGH_AGAIN = 2, ACQUAINTED = 12 };
 
 static const double least_frames = 0.5;
 static const double sigmas = 6;
@@ -22,6 +22,7 @@ static const double span_s = 12;                /* the first pulses found lie wi
 static const double give_up_s = 10;             /* no pulse in its place for so long: look for pulses anew */
 static const double outage_s = 900;             /* the line is no guide after that */
 static const double again_s = 60;               /* after one jump the next needs two edges only */
+static const double wild = 3;
 static const double rough_s = 1e-4;             /* no pulse scatters by more */
 static const double whole_frame = 0.02;         /* by so much an edge depends on where in a frame it falls */
 static const double doubled_s = 0.1;            /* more than a buffer is not given twice: it was lost */
@@ -38,7 +39,7 @@ struct shift {
 };
 
 /* |Distance from the line| over sigma of the newest pulses. */
-struct ratios { int count; double of[LINE]; };
+struct ratios { int count; double of[RATIOS]; };
 
 struct stamp { double frame, seconds; bool late; };
 
@@ -51,7 +52,7 @@ struct pulse_phase {
 	double origin, slope, middle;   /* frame `origin` + slope (k - middle) */
 	double variance, slope_variance;
 	double scatter;                 /* how much larger the pulses' scatter is than stated */
-	struct ratios ratio, settled;   /* settled: as they were at the newest pulse in its place */
+	struct ratios ratio, pending;   /* pending: of edges off their place that may be pulses worse than stated */
 	int seen;                       /* edges since there was a line, for finding one */
 	struct edge edge[SEEN];
 	int shifts;
@@ -141,7 +142,7 @@ static int by_size(const void *a, const void *b)
 /* From the median, which a spurious edge does not move; a Gaussian's is 0.6745 sigma. */
 static void measure_scatter(struct pulse_phase *p)
 {
-	double sorted[LINE];
+	double sorted[RATIOS];
 
 	memcpy(sorted, p->ratio.of, sizeof(sorted));
 	qsort(sorted, (size_t)p->ratio.count, sizeof(*sorted), by_size);
@@ -152,10 +153,18 @@ static void note_ratio(struct pulse_phase *p, double ratio)
 {
 	struct ratios *r = &p->ratio;
 
-	if (r->count == LINE)
+	if (r->count == RATIOS)
 		memmove(r->of, r->of + 1, --r->count * sizeof(*r->of));
 	r->of[r->count++] = ratio;
 	measure_scatter(p);
+}
+
+/* Pulses worse than stated are off their place too, until that is learnt. */
+static void note_pending(struct pulse_phase *p)
+{
+	for (int i = 0; i < p->pending.count; i++)
+		note_ratio(p, p->pending.of[i]);
+	p->pending.count = 0;
 }
 
 /* How far off its place; the place's second in `k`. */
@@ -226,7 +235,7 @@ static void find(struct pulse_phase *p)
 		fit(p);
 		for (int i = 0; i < count; i++)
 			note_ratio(p, fabs(found[i].at - place(p, found[i].k)) / found[i].sigma * sqrt(count / (count - 2.0)));
-		p->settled = p->ratio;
+		p->pending.count = 0;
 		return;
 	}
 }
@@ -251,38 +260,50 @@ void pulse_phase_add_stamp(struct pulse_phase *p, double frame, int64_t host_ns,
 	p->stamp[p->stamps++] = (struct stamp){ frame, seconds, late };
 }
 
-/* Time less frames of the stamps in [from, to]: the least (stamps err late), and their spread. @return how many */
-static int stamps_within(const struct pulse_phase *p, double from, double to, double *least, double *spread)
-{
-	double most = -INFINITY;
-	int count = 0;
+/* Time less frames of the stamps in [from, to]: the least (stamps err late), and their spread. */
+struct offsets { int count; double least, most; bool late; };
 
-	*least = INFINITY;
+static struct offsets offsets_within(const struct pulse_phase *p, double from, double to)
+{
+	struct offsets o = { 0, INFINITY, -INFINITY, false };
+
 	for (int i = 0; i < p->stamps; i++) {
 		double offset = p->stamp[i].seconds - (p->stamp[i].frame - p->newest) / p->slope;
 
 		if (p->stamp[i].frame < from || p->stamp[i].frame > to)
 			continue;
-		*least = fmin(*least, offset);
-		most = fmax(most, offset);
-		count++;
+		o.least = fmin(o.least, offset);
+		o.most = fmax(o.most, offset);
+		o.late |= p->stamp[i].late;
+		o.count++;
 	}
-	*spread = most - *least;
-	return count;
+	return o;
 }
 
-/* Frames lost between two frames by the stamps. @return false: they do not tell */
-static bool lost_by_stamps(const struct pulse_phase *p, double after, double before, double *frames, double *sigma)
-{
-	double then, now, spread[2];
+/* What the stamps say was lost, frames; late: perhaps less. */
+struct stamped { double frames, sigma; bool late; };
 
-	if (stamps_within(p, after - 15 * p->slope, after, &then, &spread[0]) < 2 ||
-	    stamps_within(p, before, INFINITY, &now, &spread[1]) < 1)
+/* Frames lost between two frames by the stamps. @return false: they do not tell */
+static bool lost_by_stamps(const struct pulse_phase *p, double after, double before, struct stamped *out)
+{
+	struct offsets then = offsets_within(p, after - 15 * p->slope, after), now = offsets_within(p, before, INFINITY);
+
+	if (then.count < 2 || now.count < 1)
 		return false;
-	*sigma = 0.002 + 0.5 * fmax(spread[0], spread[1]);
-	*frames = (now - then) * p->slope;
-	*sigma *= p->slope;
-	return *sigma < 0.1 * p->slope;
+	out->sigma = (0.002 + 0.5 * (then.most - then.least)) * p->slope;
+	out->frames = (now.least - then.least) * p->slope;
+	out->late = now.late;
+	return out->sigma < 0.1 * p->slope;
+}
+
+/* Whatever makes a computer lose frames makes it late as well: too many lost by late stamps is no contradiction. */
+static bool contradicts(const struct pulse_phase *p, const struct stamped *s, double frames, int whole)
+{
+	double excess = s->frames - frames;
+
+	if (excess > 0 && s->late && whole == 1 && frames > -doubled_s * p->slope)
+		return false;
+	return fabs(excess) > sigmas * s->sigma;
 }
 
 /* ------------------------------------------------------------------ jumps */
@@ -308,9 +329,10 @@ static int is_whole(double frames, double sigma)
  */
 static void weigh(const struct pulse_phase *p, const struct shift *s, struct phase_loss *out)
 {
-	double off = -s->sum / s->count, sigma = sqrt(shift_variance(p, s)), frames, stamp_sigma;
+	double off = -s->sum / s->count, sigma = sqrt(shift_variance(p, s));
 	double usual = off < -doubled_s * p->slope ? off + p->slope : off, other = usual == off ?
 		(off > 0 ? off - p->slope : off + p->slope) : off;
+	struct stamped stamped;
 
 	*out = (struct phase_loss){
 		.after = (uint64_t)fmax(0, ceil(p->newest)), .before = (uint64_t)fmax(0, floor(s->first)), .frames = usual,
@@ -318,9 +340,9 @@ static void weigh(const struct pulse_phase *p, const struct shift *s, struct pha
 	};
 	if (out->before < out->after)
 		out->before = out->after;
-	if (lost_by_stamps(p, p->newest, s->first, &frames, &stamp_sigma)) {
-		out->frames = off + rint((frames - off) / p->slope) * p->slope;
-		out->pulse_moved = fabs(frames - out->frames) > sigmas * stamp_sigma;
+	if (lost_by_stamps(p, p->newest, s->first, &stamped)) {
+		out->frames = off + rint((stamped.frames - off) / p->slope) * p->slope;
+		out->pulse_moved = contradicts(p, &stamped, out->frames, is_whole(out->frames, sigma));
 		if (out->pulse_moved)
 			out->frames = off;
 	} else if (is_whole(usual, sigma) == 0 && is_whole(other, sigma) == 1) {
@@ -395,9 +417,10 @@ static int needed(const struct pulse_phase *p, const struct shift *s)
 
 static bool proven(const struct pulse_phase *p, const struct shift *s, int edges, struct phase_loss *loss)
 {
-	double sigma = sqrt(shift_variance(p, s));
+	/* Pulses much worse than stated are no Gaussian that is known. */
+	double sigma = sqrt(shift_variance(p, s)) * (p->scatter > wild ? 2 : 1);
 
-	if (p->settled.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
+	if (p->ratio.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
 	    fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
 		return false;
 	weigh(p, s, loss);
@@ -414,8 +437,7 @@ static void jump(struct pulse_phase *p, const struct shift *s, const struct phas
 
 	p->lost += frames;
 	p->jumped = s->first;
-	p->ratio = p->settled;          /* those edges were no scatter */
-	measure_scatter(p);
+	p->pending.count = 0;           /* those edges were no scatter */
 	for (int i = 0; i < count; i++) {
 		struct edge e = { joined.frames[i] + p->lost, joined.edge_sigma[i], 0 };
 
@@ -432,13 +454,14 @@ static enum phase_verdict off(struct pulse_phase *p, double distance, double fra
 {
 	const struct shift *s = gather(p, distance, frame, e);
 
-	/* Pulses worse than stated are off their place too, until that is learnt. */
-	if (fabs(distance) < rough_s * p->settings.rate)
-		note_ratio(p, fabs(distance) / e->sigma);
 	if (proven(p, s, needed(p, s), loss)) {
 		jump(p, s, loss);
 		return PHASE_JUMPED;
 	}
+	if (fabs(distance) < rough_s * p->settings.rate)
+		p->pending.of[p->pending.count++] = fabs(distance) / e->sigma;
+	if (p->pending.count == PENDING || p->ratio.count < ACQUAINTED)
+		note_pending(p);
 	note_edge(p, e);
 	if (frame - p->newest > give_up_s * p->settings.rate)
 		find(p);
@@ -491,7 +514,7 @@ enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, dou
 	if (e.k <= p->pulse[p->line - 1].k || fabs(distance) > fmax(least_frames, sigmas * sigma))
 		return off(p, distance, frame, &e, loss);
 	note_ratio(p, fabs(distance) / e.sigma);
-	p->settled = p->ratio;
+	note_pending(p);
 	keep(p, &e);
 	return PHASE_KEPT;
 }

@@ -183,6 +183,11 @@ static void confine(struct sidecar *s, uint64_t first, uint64_t end)
 		if (s->pulse[k].frame >= (double)first && s->pulse[k].frame < (double)end)
 			s->pulse[n++] = s->pulse[k];
 	s->pulses = n;
+	n = 0;
+	for (size_t k = 0; k < s->losses; k++)
+		if (s->loss[k].before >= first && s->loss[k].after < end)
+			s->loss[n++] = s->loss[k];
+	s->losses = n;
 }
 
 static void *move_array(void **from, size_t *n, size_t *out)
