@@ -1,0 +1,131 @@
+/* SPDX-License-Identifier: GPL-3.0-or-later */
+/* What is wrong with the levels, in words.  The limits are common practice where no reason stands beside them. */
+#include <math.h>
+#include <stdarg.h>
+#include "limbwatch/levels.h"
+
+static const double headroom_least_db = 6;      /* a star that scintillates doubles its mean */
+static const double hum_most_db = 6;
+static const double hum_most_radio = 0.1;       /* radio: averages over seconds lose the hum, unless it fills the card */
+static const double leak_sigmas = 4;            /* otherwise it may be chance */
+static const double leak_most = 0.2;            /* of the noise of 1 ms: half a sigma in the matched filter */
+static const double leak_most_radio = 0.01;
+static const double below_zero = 0.02;
+static const double radiometer_most = 3, radiometer_tau_s = 1;
+static const double known_differences = 8;
+static const double pulse_age_most_s = 3.5;     /* the detector gives an edge up to two seconds late */
+static const double irregular_most = 0.02;      /* share of pulses missing or spurious */
+static const double scatter_most_s = 10e-6;     /* a GPS module's are 0.05 us, and noise adds little */
+
+struct advice {
+	char (*out)[LEVELS_ADVICE];
+	size_t n, max;
+};
+
+static void say(struct advice *a, const char *format, ...) __attribute__((format(printf, 2, 3)));
+
+static void say(struct advice *a, const char *format, ...)
+{
+	va_list arguments;
+
+	if (a->n == a->max)
+		return;
+	va_start(arguments, format);
+	vsnprintf(a->out[a->n++], LEVELS_ADVICE, format, arguments);
+	va_end(arguments);
+}
+
+static void advise_level(struct advice *a, const struct meter_report *report, size_t k)
+{
+	const struct meter_channel *c = &report->channel[k];
+	const struct meter_span *s = meter_span(report, k);
+	bool detector = c->measure != MEASURE_PULSE && c->measure != MEASURE_AUX;
+
+	if (c->invalid)
+		say(a, "%s: %llu samples are not numbers", c->name, (unsigned long long)c->invalid);
+	if (s->peak == 0 || s->rms == 0)
+		say(a, "%s: does not move at all: is it connected?", c->name);
+	else if (detector && report->resolution > 0 && c->octave[0].deviation < 0.5 * report->resolution)
+		say(a, "%s: its noise is below one step of the samples: raise the gain", c->name);
+	if (s->clipped)
+		say(a, "%s: clipped: lower the gain", c->name);
+	else if (detector && c->headroom_db < headroom_least_db)
+		say(a, "%s: headroom %.0f dB: strong sources will clip", c->name, c->headroom_db);
+	if (c->measure == MEASURE_VOLTAGE && !c->coupled && s->mean < -below_zero && -s->mean > 5 * s->rms)
+		say(a, "%s: its level is below zero: should polarity be \"%s\"?", c->name,
+		    c->polarity < 0 ? "normal" : "inverted");
+}
+
+static void advise_hum(struct advice *a, const struct meter_channel *c)
+{
+	double f = c->mains.frequency_hz * c->mains.strongest;
+
+	if (c->measure == MEASURE_PULSE || !(f > 0))
+		return;
+	if (c->bandwidth_hz > 0 ? c->mains.amplitude[c->mains.strongest - 1] > hum_most_radio :
+	    c->mains.over_noise_db > hum_most_db)
+		say(a, "%s: hum %.0f Hz %.0f dB above the noise", c->name, f, c->mains.over_noise_db);
+}
+
+static void advise_noise(struct advice *a, const struct meter_report *report, size_t k)
+{
+	const struct meter_channel *c = &report->channel[k];
+	long octave = lrint(log2(radiometer_tau_s * report->rate));
+	double ratio;
+
+	if (octave < 0 || octave >= METER_OCTAVES || !(c->octave[octave].differences >= known_differences))
+		return;
+	ratio = c->octave[octave].deviation / meter_radiometer(report, k, (size_t)octave);
+	if (isfinite(ratio) && ratio > radiometer_most)
+		say(a, "%s: noise of %.2g s is %.3g times the radiometer's: gain drift, interference or an offset",
+		    c->name, meter_tau(report, (size_t)octave), ratio);
+}
+
+static void advise_leak(struct advice *a, const struct meter_channel *c)
+{
+	double step = fabs(c->leak.step);
+
+	if (!(step > leak_sigmas * c->leak.sigma))
+		return;
+	if (c->bandwidth_hz > 0 ? step > leak_most_radio : step > leak_most * c->noise_1ms)
+		say(a, "pulse leaks into %s: %.2g sigma of its noise of 1 ms", c->name, step / c->noise_1ms);
+}
+
+static void advise_pulse(struct advice *a, const struct meter_report *report)
+{
+	const char *name;
+	double share = irregular_most * (report->pulse.seen + report->pulse.missing);
+
+	if (report->pulse.channel < 0)
+		return;
+	name = report->channel[report->pulse.channel].name;
+	if (report->pulse.age_s > pulse_age_most_s && report->pulse.seen)
+		say(a, "%s: no pulse for %.0f s", name, report->pulse.age_s);
+	else if (report->pulse.age_s > pulse_age_most_s)
+		say(a, "%s: no pulse seen", name);
+	if (isnan(report->pulse.card_error) && report->pulse.seen > 5)
+		say(a, "%s: edges are seen, but not whole seconds apart", name);
+	else if (report->pulse.spurious > share)
+		say(a, "%s: %u edges are no pulses: noise, or something else on the wire", name, report->pulse.spurious);
+	if (report->pulse.missing > share)
+		say(a, "%s: %u pulses are missing", name, report->pulse.missing);
+	if (report->pulse.interval_rms_s > scatter_most_s)
+		say(a, "%s: intervals scatter by %.3g us: too noisy, or not from a GPS module", name,
+		    report->pulse.interval_rms_s * 1e6);
+}
+
+size_t levels_advise(const struct meter_report *report, char (*out)[LEVELS_ADVICE], size_t max)
+{
+	struct advice a = { .out = out, .max = max };
+
+	if (report->lost)
+		say(&a, "%llu frames were lost: the computer or the card is too slow", (unsigned long long)report->lost);
+	for (size_t k = 0; k < report->channels; k++) {
+		advise_level(&a, report, k);
+		advise_hum(&a, &report->channel[k]);
+		advise_noise(&a, report, k);
+		advise_leak(&a, &report->channel[k]);
+	}
+	advise_pulse(&a, report);
+	return a.n;
+}
