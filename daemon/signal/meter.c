@@ -123,7 +123,7 @@ int meter_create(struct meter **out, const struct meter_settings *settings)
 	m->piece = PIECE;
 	while (m->piece > 1 && (double)m->piece > m->rate / 8)
 		m->piece /= 2;
-	m->second_pieces = (size_t)fmax(1, rint(m->rate / (double)m->piece));
+	m->second_pieces = (size_t)fmax(1, floor(m->rate / (double)m->piece));
 	m->comb.rate = m->rate;
 	m->comb.tolerance = settings->card_tolerance > 0 ? settings->card_tolerance : default_tolerance;
 	m->pulse_channel = -1;
@@ -354,6 +354,8 @@ static void measure_channel(struct meter *m, struct channel *c, uint64_t base)
 	level_merge(&c->second, &level);
 	level_merge(&c->whole, &level);
 	c->held[0] = fmax(c->held[0], level.peak);
+	if (c->fixed.measure == MEASURE_PULSE)
+		return;                 /* between pulses it is noise, at them it is not: no deviation means anything */
 	take_leak(m, c, base);
 	cascade(m, c);
 }
@@ -429,7 +431,7 @@ static void read_channel(const struct meter *m, const struct channel *c, struct 
 	}
 	out->leak.step = out->leak.sigma = NAN;
 	out->leak.pulses = (unsigned)c->leak.steps.n;
-	if (c->fixed.measure == MEASURE_PULSE || c->leak.steps.n < 3)
+	if (c->leak.steps.n < 3)
 		return;
 	out->leak.step = c->leak.steps.mean;
 	out->leak.sigma = sqrt(c->leak.steps.square / (c->leak.steps.n - 1) / c->leak.steps.n);

@@ -21,7 +21,8 @@ static const double flat_top[] = { 1, -1.90796, 1.07349, -0.18199 };    /* HFT70
 static const double series_rate_least = 1000;   /* Hz: lines to 240 Hz are then hardly averaged out */
 static const double carried = 0.45;             /* of the series' rate: what is above would be an image */
 static const double memory_windows = 8;
-static const double standing_out = 10;          /* times the noise's power: by chance once in e^10 */
+/* A line's power over the noise's, less 1, in one window: by chance once in e^14. In averages it may be less by their error. */
+static const double standing_out = 13;
 
 static double probe_frequency(size_t probe)
 {
@@ -143,7 +144,7 @@ static double read_family(const struct mains *m, const struct mains_plan *plan, 
 			continue;
 		}
 		amplitude[k] = 0;
-		if (power < standing_out * noise || power == 0)
+		if (power <= (1 + standing_out * sqrt(m->spread)) * noise)
 			continue;
 		amplitude[k] = 2 * sqrt(power - noise) / (plan->window_sum * plan->response[probe]);
 		sum += amplitude[k] * amplitude[k];
