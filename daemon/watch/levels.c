@@ -51,7 +51,9 @@ static const char *cell(char text[CELL], const char *format, double x) __attribu
 
 static const char *cell(char text[CELL], const char *format, double x)
 {
-	if (isfinite(x))
+	if (fabs(x) >= 1000 && isfinite(x))
+		snprintf(text, CELL, "%.2e", x);        /* FLOAT samples may be anything: the columns hold */
+	else if (isfinite(x))
 		snprintf(text, CELL, format, x);
 	else
 		strcpy(text, "--");
@@ -116,18 +118,21 @@ static const char *hum_word(char text[CELL], const struct meter_channel *c)
 
 static void print_levels(FILE *out, const struct meter_report *report)
 {
-	fprintf(out, "%-*s %8s %10s %9s %9s %9s %8s %8s  %s\n", NAME_WIDTH, "channel", "polarity", "mean", "rms", "peak",
-	        "headroom", "clipped", report->memory_s > 0 ? "in all" : "", "hum/noise");
+	bool live = report->memory_s > 0;
+
+	fprintf(out, "%-*s %8s %10s %9s %9s %9s %8s", NAME_WIDTH, "channel", "polarity", "mean", "rms", "peak", "headroom",
+	        "clipped");
+	fprintf(out, live ? " %8s  %s\n" : "%s  %s\n", live ? "in all" : "", "hum over noise");
 	for (size_t k = 0; k < report->channels; k++) {
 		const struct meter_channel *c = &report->channel[k];
 		const struct meter_span *s = meter_span(report, k);
 		char a[CELL], b[CELL], d[CELL], e[CELL], f[CELL], g[CELL], h[CELL];
 
 		print_name(out, c->name, NAME_WIDTH);
-		fprintf(out, " %8s %10s %9s %9s %9s %8s %8s  %s\n", polarity_word(c), cell(a, "%+.5f", s->mean),
-		        cell(b, "%.3g", s->rms), cell(d, "%.4f", s->peak), cell(e, "%.1f dB", c->headroom_db),
-		        isfinite(s->peak) ? count_cell(f, s->clipped) : "--",
-		        report->memory_s > 0 ? count_cell(g, c->whole.clipped) : "", hum_word(h, c));
+		fprintf(out, " %8s %10s %9s %9s %9s %8s", polarity_word(c), cell(a, "%+.5f", s->mean), cell(b, "%.3g", s->rms),
+		        cell(d, "%.4f", s->peak), cell(e, "%.1f dB", c->headroom_db),
+		        isfinite(s->peak) ? count_cell(f, s->clipped) : "--");
+		fprintf(out, live ? " %8s  %s\n" : "%s  %s\n", live ? count_cell(g, c->whole.clipped) : "", hum_word(h, c));
 	}
 }
 
@@ -136,10 +141,10 @@ static int decibels_of(double x)
 	return x > 0 ? (int)fmax(0, BAR + 20 * log10(x)) : 0;
 }
 
-/* A decibel a character: = the rms about zero, - up to the peak, | the largest peak of the last ten seconds. */
+/* A decibel a character: = the rms about zero, - up to the peak, > the largest peak of the last ten seconds, | full scale. */
 static void print_bars(FILE *out, const struct meter_report *report)
 {
-	fprintf(out, "\n%-*s -60 dB             -40 dB              -20 dB             0 dB full scale\n", NAME_WIDTH, "");
+	fprintf(out, "\n%-*s %-20s%-20s%-20s%s\n", NAME_WIDTH, "", "-60 dB", "-40 dB", "-20 dB", "0 dB: full scale");
 	for (size_t k = 0; k < report->channels; k++) {
 		const struct meter_span *s = meter_span(report, k);
 		int rms = decibels_of(hypot(s->mean, s->rms)), peak = decibels_of(s->peak);
@@ -148,9 +153,9 @@ static void print_bars(FILE *out, const struct meter_report *report)
 		print_name(out, report->channel[k].name, NAME_WIDTH);
 		putc(' ', out);
 		for (int at = 0; at <= BAR; at++)
-			putc(at == held && held > 0 ? '|' : at < rms ? '=' : at < peak ? '-' : at == BAR ? '.' :
+			putc(at == BAR ? '|' : at == held && held > 0 ? '>' : at < rms ? '=' : at < peak ? '-' :
 			     at % 20 == 0 ? '.' : ' ', out);
-		putc('\n', out);
+		fputs(s->clipped ? " CLIPPED\n" : "\n", out);
 	}
 }
 
@@ -168,7 +173,7 @@ static bool print_mains(FILE *out, const struct meter_report *report)
 		any = true;
 		print_name(out, c->name, NAME_WIDTH);
 		for (int h = 0; h < METER_HARMONICS; h++)
-			fprintf(out, "  %3.0f Hz %-9s", c->mains.frequency_hz * (h + 1), c->mains.amplitude[h] == 0 ? "none" :
+			fprintf(out, "  %3.0f Hz %-8s", c->mains.frequency_hz * (h + 1), c->mains.amplitude[h] == 0 ? "none" :
 			        cell(text, "%.2e", c->mains.amplitude[h]));
 		fprintf(out, "  noise %s\n", cell(text, "%.2e", c->noise_1ms));
 	}
@@ -237,11 +242,10 @@ static void print_leaks(FILE *out, const struct meter_report *report)
 	for (size_t k = 0; k < report->channels; k++) {
 		const struct meter_channel *c = &report->channel[k];
 
-		if ((int)k == report->pulse.channel)
+		if ((int)k == report->pulse.channel || c->leak.pulses < 3)
 			continue;
-		fputs("  in ", out);
-		print_name(out, c->name, NAME_WIDTH - 5);
-		fprintf(out, " step %s +- %s, %s of the noise of 1 ms, from %u pulses\n",
+		print_name(out, c->name, NAME_WIDTH);
+		fprintf(out, " steps at it by %s +- %s, %s of the noise of 1 ms, %u pulses\n",
 		        cell(step, "%+.2e", c->leak.step), cell(sigma, "%.1e", c->leak.sigma),
 		        cell(over, "%.2f", fabs(c->leak.step) / c->noise_1ms), c->leak.pulses);
 	}
@@ -253,9 +257,10 @@ static void print_pulse(FILE *out, const struct meter_report *report)
 
 	if (report->pulse.channel < 0)
 		return;
-	fputs("\npulse on ", out);
-	fprintf(out, "%s: %u seen, %u missing, %u spurious", report->channel[report->pulse.channel].name,
-	        report->pulse.seen, report->pulse.missing, report->pulse.spurious);
+	putc('\n', out);
+	print_name(out, report->channel[report->pulse.channel].name, NAME_WIDTH);
+	fprintf(out, " %u pulses seen, %u missing, %u spurious", report->pulse.seen, report->pulse.missing,
+	        report->pulse.spurious);
 	fprintf(out, "; intervals +- %s us, card %s ppm\n", cell(scatter, "%.3g", report->pulse.interval_rms_s * 1e6),
 	        cell(card, "%+.3f", report->pulse.card_error * 1e6));
 	print_leaks(out, report);
