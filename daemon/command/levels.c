@@ -29,7 +29,7 @@ static void help(FILE *out)
 	      "  -c, --config FILE     channels and intake (default /etc/limbwatch/limbwatch.conf)\n"
 	      "  -a, --attach          show what the running recorder measures, never open the device\n"
 	      "  -f, --file SOUNDFILE  measure a sound file with these channels\n"
-	      "      --socket PATH     the recorder's state socket (default " LEVELS_SOCKET ")\n"
+	      "      --socket PATH     the recorder's state socket (default: state.socket of the configuration)\n"
 	      "  -s, --seconds N       end after that long\n"
 	      "      --json            one line of JSON instead of each table\n"
 	      "  -h, --help            this text\n"
@@ -150,6 +150,8 @@ static int attach(const struct options *o, const char *path)
 		return levels_run_attached(&o->run, fd, path);
 	if (fd == -EACCES)
 		log_error("the recorder's socket %s does not let you in: join its group", path);
+	else if (!*path)
+		log_error("state.socket is empty: the recorder of this configuration shows its state nowhere");
 	else
 		log_error("no recorder answers at %s: %s", path, strerror(-fd));
 	return STATUS_FAILURE;
@@ -166,21 +168,22 @@ static int run_configured(const struct options *o, const struct config *config, 
 		log_warning("the recorder's socket %s does not let you in: join its group to see a running recorder", path);
 	if (fd < 0)
 		return levels_run_intake(&o->run, config);
-	log_notice("the recorder is running and holds %s: attached to it at %s", config->driver->name, path);
+	log_notice("the recorder is running and holds the %s intake: attached to it at %s", config->driver->name, path);
 	return levels_run_attached(&o->run, fd, path);
 }
 
 static int run(const struct options *o)
 {
-	const char *path = o->socket ? o->socket : LEVELS_SOCKET;
 	struct setting_value values[16];
 	struct config config = { .settings = NULL };
+	const char *path;
 	int status;
 
 	if (o->attach && !o->config_path)
-		return attach(o, path);
+		return attach(o, o->socket ? o->socket : LEVELS_SOCKET);
 	if (config_load(&config, o->config_path ? o->config_path : "/etc/limbwatch/limbwatch.conf") < 0)
 		return STATUS_USAGE;
+	path = o->socket ? o->socket : config.state.socket;
 	if (o->file)
 		use_file(&config, values, o->file);
 	status = o->attach ? attach(o, path) : run_configured(o, &config, path);

@@ -1,12 +1,14 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /* The recorder's state socket: JSON lines, of which those about levels are shown. */
 #include <errno.h>
+#include <jansson.h>
 #include <poll.h>
 #include <stdlib.h>
 #include <string.h>
 #include <sys/socket.h>
 #include <sys/un.h>
 #include <unistd.h>
+#include "../base/utf8.h"
 #include "levels_inner.h"
 #include "limbwatch/command.h"
 #include "limbwatch/log.h"
@@ -23,6 +25,8 @@ struct listener {
 	struct meter_report report;
 	unsigned reports;
 	double heard, said;             /* when the last report came; when its absence was last said */
+	char station[64], device[128];
+	char trouble[160];              /* why its device is missing; "" when it is not */
 	size_t filled;
 	char line[LINE];
 };
@@ -49,13 +53,51 @@ static void show(struct listener *l, double silent_s)
 {
 	char title[512];
 
-	if (silent_s > 0)
-		snprintf(title, sizeof(title), "limbwatch levels: the recorder has been silent for %.0f s (%s)", silent_s,
-		         l->path);
+	if (*l->trouble)
+		snprintf(title, sizeof(title), "limbwatch levels: the recorder waits for its device: %s", l->trouble);
+	else if (silent_s > 0)
+		snprintf(title, sizeof(title), "limbwatch levels: the recorder has been silent for %.0f s", silent_s);
 	else
-		snprintf(title, sizeof(title), "limbwatch levels: attached to the recorder, which holds the device (%s)",
-		         l->path);
+		snprintf(title, sizeof(title), "limbwatch levels: attached to the recorder%s%s, which holds %s",
+		         *l->station ? " of " : "", l->station, *l->device ? l->device : "the device");
 	levels_show(l->run, title, &l->report);
+}
+
+/* A text for the title; what could act on the terminal is left out. */
+static void take_text(char *to, size_t size, const json_t *o, const char *name)
+{
+	const char *text = json_string_value(json_object_get(o, name));
+
+	snprintf(to, size, "%s", text && strlen(text) < size && utf8_text_is_plain(text) ? text : "");
+}
+
+/* What else the recorder says and concerns us: who and where it is, and its device. @return 0, or the exit status */
+static int take_other(struct listener *l, const char *line, size_t size)
+{
+	json_t *o = json_loadb(line, size, 0, NULL);
+	const char *what = json_string_value(json_object_get(o, "what")), *state;
+	int status = 0;
+
+	if (!what) {
+		json_decref(o);
+		return 0;
+	}
+	if (!strcmp(what, "full")) {
+		log_error("the recorder at %s has as many readers as it takes", l->path);
+		status = STATUS_FAILURE;
+	} else if (!strcmp(what, "hello")) {
+		take_text(l->station, sizeof(l->station), o, "station");
+	} else if (!strcmp(what, "device")) {
+		state = json_string_value(json_object_get(o, "state"));
+		take_text(l->device, sizeof(l->device), o, "name");
+		take_text(l->trouble, sizeof(l->trouble), o, "why");
+		if (!state || strcmp(state, "missing"))
+			*l->trouble = 0;
+		else if (!*l->trouble)
+			snprintf(l->trouble, sizeof(l->trouble), "it is missing");
+	}
+	json_decref(o);
+	return status;
 }
 
 /* @return 0, or the exit status */
@@ -68,14 +110,19 @@ static int take_line(struct listener *l, const char *line, size_t size)
 		return 0;
 	ret = levels_parse(&l->report, line, size, why, sizeof(why));
 	if (ret == -ENOMSG)
-		return 0;
+		return take_other(l, line, size);
 	if (ret < 0) {
 		log_error("what comes from %s is not understood: %s", l->path, why);
 		return STATUS_FAILURE;
 	}
 	l->reports++;
 	l->heard = l->said = levels_now();
-	show(l, 0);
+	if (l->run->json) {
+		printf("%.*s\n", (int)size, line);
+		fflush(stdout);
+	} else {
+		show(l, 0);
+	}
 	return 0;
 }
 
@@ -123,6 +170,8 @@ static void say_silence(struct listener *l)
 		return;
 	if (screen_in_place() && !l->run->json && l->reports)
 		show(l, now - l->heard);
+	else if (*l->trouble)
+		log_warning("the recorder at %s waits for its device: %s", l->path, l->trouble);
 	else
 		log_warning("the recorder at %s has said nothing of levels for %.0f s", l->path, now - l->heard);
 	l->said = now;
