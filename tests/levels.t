@@ -151,7 +151,7 @@ config pipe 'driver = "pipe"; path = "-"; rate_hz = 8000; channels = 1; format =
 	'channels = ( { name = "photodiode"; column = 1; wavelength_nm = 620; } );'
 status=0
 tail -c +45 "$work/noise.wav" | $levels --config "$work/pipe.conf" > "$work/out" 2> "$work/err" || status=$?
-[ "$status" -eq 0 ] && says '16.0 s measured at 8000 Hz'
+[ "$status" -eq 0 ] && says '16.0 s at 8000 Hz'
 ok $? "without a recorder the intake is opened, and its end shown"
 cat > "$work/terminal.py" <<'END'
 # Runs a command on a terminal of some size; does what is said as blocks come; prints what is wrong.

@@ -306,9 +306,9 @@ static void hum_leakage_and_excess_noise_are_said(void **state)
 	r->channel[0].leak.sigma = 2e-3;                /* may be chance */
 	assert_int_equal(levels_advise(r, advice, LEVELS_ADVICES), 0);
 	r = make(5);
-	/* Octave 16 is 1.365 s: 0.301 / sqrt(4 MHz * 1.365 s) = 1.288e-4. */
-	r->channel[4].octave[16].deviation = 5 * 1.288e-4;
-	advised(r, "photodiode 4: noise of 1.4 s is 5 times the radiometer's");
+	/* Octave 18 is 5.461 s: 0.301 / sqrt(4 MHz * 5.461 s) = 6.440e-5. */
+	r->channel[4].octave[18].deviation = 5 * 6.44e-5;
+	advised(r, "photodiode 4: noise of 5.5 s is 5 times the radiometer's");
 }
 
 static void what_is_wrong_with_the_pulse_is_said(void **state)

@@ -164,10 +164,12 @@ static void clipped_samples_are_counted_in_every_format(void **state)
 static void the_peak_is_held_for_ten_to_twenty_seconds(void **state)
 {
 	struct meter_settings s = settings(1000, 1);
-	struct meter *m = create(&s);
+	struct meter *m;
 	static float loud[1000], quiet[1000];
 
 	(void)state;
+	s.memory_s = 60;
+	m = create(&s);
 	for (int k = 0; k < 1000; k++) {
 		loud[k] = 0.5f;
 		quiet[k] = 0.05f;

@@ -418,7 +418,10 @@ static void read_channel(const struct meter *m, const struct channel *c, struct 
 	*out = c->fixed;
 	out->second = c->last;
 	out->whole = span_of(c, &c->whole);
-	out->headroom_db = c->whole.moments.n > 0 ? -20 * log10(fmax(c->held[0], c->held[1])) : NAN;
+	if (c->whole.moments.n > 0)
+		out->headroom_db = -20 * log10(m->memory_s > 0 ? fmax(c->held[0], c->held[1]) : c->whole.peak);
+	else
+		out->headroom_db = NAN;
 	out->invalid = c->invalid;
 	if (c->learn_polarity && m->comb.kept)
 		out->polarity = m->comb.edge[m->comb.kept - 1].sign;

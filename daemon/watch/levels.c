@@ -159,7 +159,7 @@ static void print_bars(FILE *out, const struct meter_report *report)
 	}
 }
 
-static bool print_mains(FILE *out, const struct meter_report *report)
+static void print_mains(FILE *out, const struct meter_report *report)
 {
 	bool any = false;
 
@@ -169,7 +169,7 @@ static bool print_mains(FILE *out, const struct meter_report *report)
 
 		if (!(c->mains.frequency_hz > 0) || c->measure == MEASURE_PULSE)
 			continue;
-		fprintf(out, "%s", any ? "" : "\nmains (amplitude)\n");
+		fprintf(out, "%s", any ? "" : "\nmains: amplitudes, and the rms noise of 1 ms between them\n");
 		any = true;
 		print_name(out, c->name, NAME_WIDTH);
 		for (int h = 0; h < METER_HARMONICS; h++)
@@ -177,7 +177,6 @@ static bool print_mains(FILE *out, const struct meter_report *report)
 			        cell(text, "%.2e", c->mains.amplitude[h]));
 		fprintf(out, "  noise %s\n", cell(text, "%.2e", c->noise_1ms));
 	}
-	return any;
 }
 
 /* The octaves nearest to the integration times of the table, each once. @return their number */
@@ -245,7 +244,7 @@ static void print_leaks(FILE *out, const struct meter_report *report)
 		if ((int)k == report->pulse.channel || c->leak.pulses < 3)
 			continue;
 		print_name(out, c->name, NAME_WIDTH);
-		fprintf(out, " steps at it by %s +- %s, %s of the noise of 1 ms, %u pulses\n",
+		fprintf(out, " steps at the pulse by %s +- %s, %s of its noise of 1 ms; %u pulses\n",
 		        cell(step, "%+.2e", c->leak.step), cell(sigma, "%.1e", c->leak.sigma),
 		        cell(over, "%.2f", fabs(c->leak.step) / c->noise_1ms), c->leak.pulses);
 	}
@@ -272,7 +271,7 @@ void levels_print(FILE *out, const char *title, const struct meter_report *repor
 	size_t n = levels_advise(report, advice, LEVELS_ADVICES);
 
 	fprintf(out, "%s\n", title);
-	fprintf(out, "%.1f s measured at %g Hz, %llu frames lost; amplitudes over full scale\n\n",
+	fprintf(out, "%.1f s at %g Hz, %llu frames lost; over full scale; = rms, - peak, > largest of the last 10 s\n\n",
 	        (double)report->frames / report->rate, report->rate, (unsigned long long)report->lost);
 	print_levels(out, report);
 	print_bars(out, report);

@@ -11,7 +11,8 @@ static const double leak_sigmas = 4;            /* otherwise it may be chance */
 static const double leak_most = 0.2;            /* of the noise of 1 ms: half a sigma in the matched filter */
 static const double leak_most_radio = 0.01;
 static const double below_zero = 0.02;
-static const double radiometer_most = 3, radiometer_tau_s = 1;
+static const double radiometer_most = 3;
+static const double tau_longest_s = 10, tau_shortest_s = 0.1;   /* the longest known between: a radio contact takes some 10 s */
 static const double known_differences = 8;
 static const double pulse_age_most_s = 3.5;     /* the detector gives an edge up to two seconds late */
 static const double irregular_most = 0.02;      /* share of pulses missing or spurious */
@@ -70,15 +71,18 @@ static void advise_hum(struct advice *a, const struct meter_channel *c)
 static void advise_noise(struct advice *a, const struct meter_report *report, size_t k)
 {
 	const struct meter_channel *c = &report->channel[k];
-	long octave = lrint(log2(radiometer_tau_s * report->rate));
+	size_t octave = METER_OCTAVES;
 	double ratio;
 
-	if (octave < 0 || octave >= METER_OCTAVES || !(c->octave[octave].differences >= known_differences))
+	while (octave-- > 0) {
+		if (meter_tau(report, octave) > tau_longest_s || !(c->octave[octave].differences >= known_differences))
+			continue;
+		ratio = c->octave[octave].deviation / meter_radiometer(report, k, octave);
+		if (meter_tau(report, octave) >= tau_shortest_s && isfinite(ratio) && ratio > radiometer_most)
+			say(a, "%s: noise of %.2g s is %.3g times the radiometer's: gain drift, interference or an offset",
+			    c->name, meter_tau(report, octave), ratio);
 		return;
-	ratio = c->octave[octave].deviation / meter_radiometer(report, k, (size_t)octave);
-	if (isfinite(ratio) && ratio > radiometer_most)
-		say(a, "%s: noise of %.2g s is %.3g times the radiometer's: gain drift, interference or an offset",
-		    c->name, meter_tau(report, (size_t)octave), ratio);
+	}
 }
 
 static void advise_leak(struct advice *a, const struct meter_channel *c)

@@ -74,7 +74,7 @@ struct meter_channel {
 	double bandwidth_hz;
 	struct meter_span second;       /* the last whole second */
 	struct meter_span whole;        /* since the start */
-	double headroom_db;             /* full scale over the largest magnitude of the last ten seconds or more */
+	double headroom_db;             /* full scale over the largest magnitude of the last 10 to 20 s; memory_s = 0: of all */
 	uint64_t invalid;               /* samples that were not a number, since the start */
 	struct {
 		double frequency_hz;    /* 50 or 60; 0: looked for, none found; NAN: not known */
