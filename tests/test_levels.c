@@ -194,6 +194,10 @@ static const struct { const char *line, *why; } hostile[] = {
 	  "[\"x\"]}}]}", "amplitudes_fs" },
 	{ "{\"what\":\"levels\",\"rate_hz\":48000,\"channels\":[{\"name\":\"a\",\"measure\":\"aux\",\"mains\":{\"strongest\":5}}]}",
 	  "strongest" },
+	{ "{\"what\":\"levels\",\"rate_hz\":48000,\"channels\":[{\"name\":\"a\",\"measure\":\"aux\",\"mains\":{"
+	  "\"fundamental_hz\":50}}]}", "strongest" },
+	{ "{\"what\":\"levels\",\"rate_hz\":48000,\"channels\":[{\"name\":\"a\",\"measure\":\"aux\",\"mains\":{"
+	  "\"fundamental_hz\":1e308,\"strongest\":1}}]}", "fundamental_hz" },
 	{ "{\"what\":\"levels\",\"rate_hz\":48000,\"channels\":[{\"name\":\"a\",\"measure\":\"aux\"}],\"pulse\":{\"channel\":1}}",
 	  "channel" },
 	{ "{\"what\":\"levels\",\"rate_hz\":48000,\"channels\":[{\"name\":\"a\",\"measure\":\"aux\"}],\"pulse\":{\"seen\":"

@@ -7,7 +7,7 @@
 #include "limbwatch/levels.h"
 #include "limbwatch/log.h"
 
-enum { NAME_WIDTH = 14, CELL = 24, BAR = 60, TAUS = 7 };
+enum { COLUMNS = 100, NAME_WIDTH = 14, CELL = 24, BAR = 60, TAUS = 7 };
 
 static const double speed_of_light = 299792458.0;       /* m/s, exact (SI) */
 static const double longest_optical_m = 2e-5;    /* of channels.wavelength_nm */
@@ -72,6 +72,12 @@ static const char *tau_cell(char text[CELL], double tau)
 	return text;
 }
 
+static const char *seconds_cell(char text[CELL], double seconds)
+{
+	snprintf(text, CELL, seconds < 1e9 ? "%.1f" : "%.3g", seconds);
+	return text;
+}
+
 static const char *count_cell(char text[CELL], uint64_t n)
 {
 	if (n < 100000)
@@ -81,16 +87,22 @@ static const char *count_cell(char text[CELL], uint64_t n)
 	return text;
 }
 
-/* A name in a field of that many characters: cut with a dot, or filled up. */
-static void print_name(FILE *out, const char *name, size_t width)
+/* A text of at most that many characters, cut with a dot. @return characters */
+static size_t print_cut(FILE *out, const char *text, size_t width)
 {
-	size_t characters = utf8_count(name, strlen(name)), bytes = 0;
+	size_t characters = utf8_count(text, strlen(text)), bytes = 0;
 	size_t shown = characters > width ? width - 1 : characters;
 
-	while (name[bytes] && utf8_count(name, bytes + 1) <= shown)
+	while (text[bytes] && utf8_count(text, bytes + 1) <= shown)
 		bytes++;
-	fprintf(out, "%.*s%s", (int)bytes, name, characters > width ? "." : "");
-	for (size_t k = characters; k < width; k++)
+	fprintf(out, "%.*s%s", (int)bytes, text, characters > width ? "." : "");
+	return characters > width ? width : characters;
+}
+
+/* A name in its field. */
+static void print_name(FILE *out, const char *name)
+{
+	for (size_t k = print_cut(out, name, NAME_WIDTH); k < NAME_WIDTH; k++)
 		putc(' ', out);
 }
 
@@ -128,7 +140,7 @@ static void print_levels(FILE *out, const struct meter_report *report)
 		const struct meter_span *s = meter_span(report, k);
 		char a[CELL], b[CELL], d[CELL], e[CELL], f[CELL], g[CELL], h[CELL];
 
-		print_name(out, c->name, NAME_WIDTH);
+		print_name(out, c->name);
 		fprintf(out, " %8s %10s %9s %9s %9s %8s", polarity_word(c), cell(a, "%+.5f", s->mean), cell(b, "%.3g", s->rms),
 		        cell(d, "%.4f", s->peak), cell(e, "%.1f dB", c->headroom_db),
 		        isfinite(s->peak) ? count_cell(f, s->clipped) : "--");
@@ -150,7 +162,7 @@ static void print_bars(FILE *out, const struct meter_report *report)
 		int rms = decibels_of(hypot(s->mean, s->rms)), peak = decibels_of(s->peak);
 		int held = decibels_of(pow(10, -report->channel[k].headroom_db / 20));
 
-		print_name(out, report->channel[k].name, NAME_WIDTH);
+		print_name(out, report->channel[k].name);
 		putc(' ', out);
 		for (int at = 0; at <= BAR; at++)
 			putc(at == BAR ? '|' : at == held && held > 0 ? '>' : at < rms ? '=' : at < peak ? '-' :
@@ -171,7 +183,7 @@ static void print_mains(FILE *out, const struct meter_report *report)
 			continue;
 		fprintf(out, "%s", any ? "" : "\nmains: amplitudes, and the rms noise of 1 ms between them\n");
 		any = true;
-		print_name(out, c->name, NAME_WIDTH);
+		print_name(out, c->name);
 		for (int h = 0; h < METER_HARMONICS; h++)
 			fprintf(out, "  %3.0f Hz %-8s", c->mains.frequency_hz * (h + 1), c->mains.amplitude[h] == 0 ? "none" :
 			        cell(text, "%.2e", c->mains.amplitude[h]));
@@ -202,7 +214,7 @@ static void print_noise_row(FILE *out, const struct meter_report *report, size_t
 	size_t octave[TAUS], n = choose_octaves(report, octave);
 	char text[CELL];
 
-	print_name(out, row == ROW_MEASURED ? c->name : "", NAME_WIDTH);
+	print_name(out, row == ROW_MEASURED ? c->name : "");
 	fprintf(out, " %-10s", words[row]);
 	for (size_t k = 0; k < n; k++) {
 		bool known = c->octave[octave[k]].differences >= known_differences;
@@ -236,30 +248,30 @@ static void print_noise(FILE *out, const struct meter_report *report)
 
 static void print_leaks(FILE *out, const struct meter_report *report)
 {
-	char step[CELL], sigma[CELL], over[CELL];
+	char step[CELL], sigma[CELL], over[CELL], pulses[CELL];
 
 	for (size_t k = 0; k < report->channels; k++) {
 		const struct meter_channel *c = &report->channel[k];
 
 		if ((int)k == report->pulse.channel || c->leak.pulses < 3)
 			continue;
-		print_name(out, c->name, NAME_WIDTH);
-		fprintf(out, " steps at the pulse by %s +- %s, %s of its noise of 1 ms; %u pulses\n",
+		print_name(out, c->name);
+		fprintf(out, " steps at the pulse by %s +- %s, %s of its noise of 1 ms; %s pulses\n",
 		        cell(step, "%+.2e", c->leak.step), cell(sigma, "%.1e", c->leak.sigma),
-		        cell(over, "%.2f", fabs(c->leak.step) / c->noise_1ms), c->leak.pulses);
+		        cell(over, "%.2f", fabs(c->leak.step) / c->noise_1ms), count_cell(pulses, c->leak.pulses));
 	}
 }
 
 static void print_pulse(FILE *out, const struct meter_report *report)
 {
-	char scatter[CELL], card[CELL];
+	char scatter[CELL], card[CELL], seen[CELL], missing[CELL], spurious[CELL];
 
 	if (report->pulse.channel < 0)
 		return;
 	putc('\n', out);
-	print_name(out, report->channel[report->pulse.channel].name, NAME_WIDTH);
-	fprintf(out, " %u pulses seen, %u missing, %u spurious", report->pulse.seen, report->pulse.missing,
-	        report->pulse.spurious);
+	print_name(out, report->channel[report->pulse.channel].name);
+	fprintf(out, " %s pulses seen, %s missing, %s spurious", count_cell(seen, report->pulse.seen),
+	        count_cell(missing, report->pulse.missing), count_cell(spurious, report->pulse.spurious));
 	fprintf(out, "; intervals +- %s us, card %s ppm\n", cell(scatter, "%.3g", report->pulse.interval_rms_s * 1e6),
 	        cell(card, "%+.3f", report->pulse.card_error * 1e6));
 	print_leaks(out, report);
@@ -269,16 +281,22 @@ void levels_print(FILE *out, const char *title, const struct meter_report *repor
 {
 	char advice[LEVELS_ADVICES][LEVELS_ADVICE];
 	size_t n = levels_advise(report, advice, LEVELS_ADVICES);
+	char seconds[CELL], lost[CELL];
 
-	fprintf(out, "%s\n", title);
-	fprintf(out, "%.1f s at %g Hz, %llu frames lost; over full scale; = rms, - peak, > largest of the last 10 s\n\n",
-	        (double)report->frames / report->rate, report->rate, (unsigned long long)report->lost);
+	print_cut(out, title, COLUMNS);
+	putc('\n', out);
+	fprintf(out, "%s s at %g Hz, %s frames lost; over full scale; = rms, - peak, > largest of the last 10 s\n\n",
+	        seconds_cell(seconds, (double)report->frames / report->rate), report->rate,
+	        count_cell(lost, report->lost));
 	print_levels(out, report);
 	print_bars(out, report);
 	print_mains(out, report);
 	print_noise(out, report);
 	print_pulse(out, report);
 	fputs(n ? "\n" : "\nNothing is wrong.\n", out);
-	for (size_t k = 0; k < n; k++)
-		fprintf(out, "! %s\n", advice[k]);
+	for (size_t k = 0; k < n; k++) {
+		fputs("! ", out);
+		print_cut(out, advice[k], COLUMNS - 2);
+		putc('\n', out);
+	}
 }

@@ -157,6 +157,16 @@ static double get_number(struct reading *r, const json_t *o, const char *name)
 	return json_number_value(x);
 }
 
+/* What a meter would never say would break the table. */
+static double get_within(struct reading *r, const json_t *o, const char *name, double most)
+{
+	double x = get_number(r, o, name);
+
+	if (fabs(x) > most)
+		refuse(r, "\"%s\" is beyond %g", name, most);
+	return x;
+}
+
 static uint64_t get_count(struct reading *r, const json_t *o, const char *name, uint64_t max)
 {
 	const json_t *x = json_object_get(o, name);
@@ -200,8 +210,11 @@ static void get_mains(struct reading *r, const json_t *parent, struct meter_chan
 	const json_t *lines = get_part(r, o, "amplitudes_fs", JSON_ARRAY);
 
 	c->mains.frequency_hz = get_number(r, o, "fundamental_hz");
-	c->mains.over_noise_db = get_number(r, o, "over_noise_db");
+	c->mains.over_noise_db = get_within(r, o, "over_noise_db", 1e4);
 	c->mains.strongest = (unsigned)get_count(r, o, "strongest", METER_HARMONICS);
+	if (c->mains.frequency_hz != 0 && !isnan(c->mains.frequency_hz) &&
+	    (!(c->mains.frequency_hz > 0 && c->mains.frequency_hz < 1000) || c->mains.strongest == 0))
+		refuse(r, "\"mains\" have no \"fundamental_hz\" below 1000 or no \"strongest\"");
 	for (size_t k = 0; k < METER_HARMONICS; k++) {
 		const json_t *x = json_array_get(lines, k);
 
@@ -271,7 +284,7 @@ static void get_channel(struct reading *r, const json_t *o, struct meter_channel
 	c->bandwidth_hz = fmax(0, get_number(r, o, "bandwidth_hz"));
 	c->second = get_span(r, o, "second");
 	c->whole = get_span(r, o, "whole");
-	c->headroom_db = get_number(r, o, "headroom_db");
+	c->headroom_db = get_within(r, o, "headroom_db", 1e4);
 	c->invalid = get_count(r, o, "invalid_samples", INT64_MAX);
 	get_mains(r, o, c);
 	c->noise_1ms = get_number(r, o, "noise_1ms_fs");
@@ -292,7 +305,7 @@ static void get_pulse(struct reading *r, const json_t *parent, struct meter_repo
 	out->pulse.seen = (unsigned)get_count(r, o, "seen", UINT32_MAX);
 	out->pulse.missing = (unsigned)get_count(r, o, "missing", UINT32_MAX);
 	out->pulse.spurious = (unsigned)get_count(r, o, "spurious", UINT32_MAX);
-	out->pulse.age_s = get_number(r, o, "age_s");
+	out->pulse.age_s = get_within(r, o, "age_s", 1e10);
 	out->pulse.interval_rms_s = get_number(r, o, "interval_rms_us") * 1e-6;
 	out->pulse.card_error = get_number(r, o, "card_error_ppm") * 1e-6;
 }
@@ -301,7 +314,7 @@ static void get_report(struct reading *r, const json_t *o, struct meter_report *
 {
 	const json_t *channels = get_part(r, o, "channels", JSON_ARRAY);
 
-	out->rate = get_number(r, o, "rate_hz");
+	out->rate = get_within(r, o, "rate_hz", 1e9);
 	if (!(out->rate > 0))
 		refuse(r, "\"rate_hz\" is not above 0");
 	out->resolution = fmax(0, get_number(r, o, "resolution_fs"));
