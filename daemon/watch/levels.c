@@ -277,26 +277,32 @@ static void print_pulse(FILE *out, const struct meter_report *report)
 	print_leaks(out, report);
 }
 
-void levels_print(FILE *out, const char *title, const struct meter_report *report)
+/* Above what does not fit on a small terminal. */
+static void print_advice(FILE *out, const struct meter_report *report)
 {
 	char advice[LEVELS_ADVICES][LEVELS_ADVICE];
 	size_t n = levels_advise(report, advice, LEVELS_ADVICES);
-	char seconds[CELL], lost[CELL];
 
-	print_cut(out, title, COLUMNS);
-	putc('\n', out);
-	fprintf(out, "%s s at %g Hz, %s frames lost; over full scale; = rms, - peak, > largest of the last 10 s\n\n",
-	        seconds_cell(seconds, (double)report->frames / report->rate), report->rate,
-	        count_cell(lost, report->lost));
-	print_levels(out, report);
-	print_bars(out, report);
-	print_mains(out, report);
-	print_noise(out, report);
-	print_pulse(out, report);
 	fputs(n ? "\n" : "\nNothing is wrong.\n", out);
 	for (size_t k = 0; k < n; k++) {
 		fputs("! ", out);
 		print_cut(out, advice[k], COLUMNS - 2);
 		putc('\n', out);
 	}
+}
+
+void levels_print(FILE *out, const char *title, const struct meter_report *report)
+{
+	char seconds[CELL], lost[CELL];
+
+	print_cut(out, title, COLUMNS);
+	fprintf(out, "\n%s s at %g Hz, %s frames lost; over full scale; = rms, - peak, > largest of the last 10 s\n\n",
+	        seconds_cell(seconds, (double)report->frames / report->rate), report->rate,
+	        count_cell(lost, report->lost));
+	print_levels(out, report);
+	print_bars(out, report);
+	print_advice(out, report);
+	print_mains(out, report);
+	print_noise(out, report);
+	print_pulse(out, report);
 }
