@@ -5,7 +5,7 @@
 #include <signal.h>
 #include "limbwatch/levels.h"
 
-/* What levels.c (options, display), levels_intake.c (an intake of our own) and levels_attach.c (the recorder's socket) share. */
+/* What levels.c (options, display), levels_intake.c (an intake) and levels_attach.c (the recorder's socket) share. */
 
 extern volatile sig_atomic_t levels_stop;      /* Ctrl-C, SIGTERM, SIGHUP */
 

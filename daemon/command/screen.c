@@ -1,5 +1,5 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
-/* The sequences are those of ECMA-48 (CUU, EL, ED) and the DEC private mode 25 for the cursor, which every terminal knows. */
+/* Sequences of ECMA-48 (CUU, EL, ED) and the private mode 25 for the cursor, which every terminal knows. */
 #include <signal.h>
 #include <stdio.h>
 #include <stdlib.h>

@@ -5,8 +5,8 @@
 #include <stdbool.h>
 
 /*
- * Standard output as a block of text that is shown again and again: in place on a terminal, one after another elsewhere.  One
- * for the whole program, because the terminal is.
+ * Standard output as a block of text that is shown again and again: in place on a terminal, one after another elsewhere.
+ * One for the whole program, because the terminal is.
  */
 
 /** The cursor is hidden from now on, also after a stop by Ctrl-Z and back. */

@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 /*
- * Frames are measured in pieces of 256: sums for the levels, then the piece is averaged in pairs again and again, and each octave
- * adds up the squared differences of its neighbours.  So all octaves together cost twice the first one.
+ * Frames are measured in pieces of 256: sums for the levels, then the piece is averaged in pairs again and again, and each
+ * octave adds up the squared differences of its neighbours.  So all octaves together cost twice the first one.
  */
 #include <errno.h>
 #include <math.h>
@@ -11,13 +11,11 @@
 
 static const double full_scale = 0.99996;       /* the highest code of 16 bits is 1 - 2^-15 */
 static const double resolutions[SAMPLE_TYPES] = {
-	[SAMPLE_S16] = 0x1p-15, [SAMPLE_S24_3] = 0x1p-23, [SAMPLE_S24] = 0x1p-23, [SAMPLE_S32] = 0x1p-31, [SAMPLE_F32] = 0,
+	[SAMPLE_S16] = 0x1p-15, [SAMPLE_S24_3] = 0x1p-23, [SAMPLE_S24] = 0x1p-23, [SAMPLE_S32] = 0x1p-31,
+	[SAMPLE_F32] = 0,
 };
 static const double default_tolerance = 200e-6;
 static const double hold_s = 10;
-static const double leak_s = 1e-3, control_s = 0.3;
-static const double forget_least = 16;          /* differences or pulses */
-static const double leak_age_s = 5;             /* without pulses, where they would be is soon unknown */
 
 struct octave {
 	double previous, half;          /* the average before; one that waits for its partner */
@@ -36,7 +34,7 @@ struct channel {
 	bool learn_polarity;
 	struct level second, whole;
 	struct meter_span last;         /* the last whole second */
-	double held[2];                 /* largest magnitude of the stretch of ten seconds in the making and the one before */
+	double held[2];                 /* largest magnitude of these ten seconds and of those before */
 	uint64_t invalid;
 	struct octave octave[METER_OCTAVES];
 	struct mains mains;
@@ -54,8 +52,7 @@ struct meter {
 	struct mains_plan mains;
 	struct comb comb;
 	int pulse_channel;
-	uint64_t leak_reach;            /* frames either side */
-	struct leak_place place[LEAK_PLACES];
+	struct leak_plan leak;
 	size_t channels;
 	struct channel channel[MAX_CHANNELS];
 };
@@ -97,14 +94,13 @@ static void create_channel(struct meter *m, size_t k, const struct meter_setting
 	c->last = (struct meter_span){ NAN, NAN, NAN, 0 };
 	for (size_t o = 0; o < METER_OCTAVES; o++)
 		c->octave[o].forget = s->memory_s == 0 ? INFINITY :
-			fmax(forget_least, s->memory_s * s->rate / pow(2, (double)o));
+			fmax(FORGET_LEAST, s->memory_s * s->rate / pow(2, (double)o));
 	if (c->fixed.measure != MEASURE_PULSE)
 		return;
 	m->pulse_channel = (int)k;
 	c->learn_polarity = c->fixed.polarity == 0;
 	m->comb.slack = s->rate * (1e-4 + 5 * fmax(0, s->channel[k].pulse_jitter_s));
-	if (s->channel[k].pulse_width_s > 0)
-		m->leak_reach = (uint64_t)fmin((double)m->leak_reach, s->channel[k].pulse_width_s * s->rate);
+	leak_plan_create(&m->leak, s->rate, s->channel[k].pulse_width_s, s->memory_s);
 }
 
 int meter_create(struct meter **out, const struct meter_settings *settings)
@@ -127,7 +123,6 @@ int meter_create(struct meter **out, const struct meter_settings *settings)
 	m->comb.rate = m->rate;
 	m->comb.tolerance = settings->card_tolerance > 0 ? settings->card_tolerance : default_tolerance;
 	m->pulse_channel = -1;
-	m->leak_reach = (uint64_t)fmax(4, leak_s * m->rate);
 	m->channels = settings->channels;
 	for (size_t k = 0; k < m->channels; k++)
 		create_channel(m, k, settings);
@@ -280,63 +275,7 @@ static void break_channel(struct channel *c)
 	for (size_t k = 0; k < METER_OCTAVES; k++)
 		c->octave[k].has_previous = c->octave[k].has_half = false;
 	mains_break(&c->mains);
-	memset(c->leak.taken, 0, sizeof(c->leak.taken));
-	memset(c->leak.sum, 0, sizeof(c->leak.sum));
-}
-
-/* ------------------------------------------------------------------ leakage of the pulse */
-
-/* The next pulse whose control is still to come. */
-static void place_leak(struct meter *m, uint64_t base)
-{
-	const struct comb *comb = &m->comb;
-	double interval = comb_interval(comb), last, ahead, at;
-
-	if (m->place[LEAK_PULSE].set || isnan(interval))
-		return;
-	last = comb->edge[comb->kept - 1].frame;
-	ahead = (double)base + control_s * m->rate + (double)m->leak_reach - last;
-	if (ahead > leak_age_s * m->rate)
-		return;
-	at = last + interval * fmax(1, ceil(ahead / interval));
-	m->place[LEAK_PULSE] = (struct leak_place){ (uint64_t)ceil(at), true };
-	m->place[LEAK_CONTROL] = (struct leak_place){ (uint64_t)ceil(at - control_s * interval), true };
-}
-
-static void take_leak(const struct meter *m, struct channel *c, uint64_t base)
-{
-	for (int p = 0; p < LEAK_PLACES; p++) {
-		uint64_t centre = m->place[p].centre, from = centre - m->leak_reach, to = centre + m->leak_reach;
-
-		if (!m->place[p].set || from >= base + m->piece || to <= base)
-			continue;
-		from = from > base ? from : base;
-		to = to < base + m->piece ? to : base + m->piece;
-		for (uint64_t k = from; k < to; k++)
-			c->leak.sum[p] += k < centre ? -c->x[k - base] : c->x[k - base];
-		c->leak.taken[p] += to - from;
-	}
-}
-
-static void finish_leak(struct meter *m, uint64_t end)
-{
-	if (!m->place[LEAK_PULSE].set || m->place[LEAK_PULSE].centre + m->leak_reach > end)
-		return;
-	for (size_t k = 0; k < m->channels; k++) {
-		struct leak *l = &m->channel[k].leak;
-		double reach = (double)m->leak_reach;
-		struct moments one = { 1, (l->sum[LEAK_PULSE] - l->sum[LEAK_CONTROL]) / reach, 0 };
-
-		if (l->taken[LEAK_PULSE] == 2 * m->leak_reach && l->taken[LEAK_CONTROL] == 2 * m->leak_reach)
-			moments_merge(&l->steps, &one);
-		if (m->memory_s > 0 && l->steps.n > fmax(forget_least, m->memory_s)) {
-			l->steps.n *= 0.5;
-			l->steps.square *= 0.5;
-		}
-		memset(l->sum, 0, sizeof(l->sum));
-		memset(l->taken, 0, sizeof(l->taken));
-	}
-	m->place[LEAK_PULSE].set = m->place[LEAK_CONTROL].set = false;
+	leak_break(&c->leak);
 }
 
 /* ------------------------------------------------------------------ execute */
@@ -356,7 +295,7 @@ static void measure_channel(struct meter *m, struct channel *c, uint64_t base)
 	c->held[0] = fmax(c->held[0], level.peak);
 	if (c->fixed.measure == MEASURE_PULSE)
 		return;                 /* between pulses it is noise, at them it is not: no deviation means anything */
-	take_leak(m, c, base);
+	leak_take(&c->leak, &m->leak, c->x, m->piece, base);
 	cascade(m, c);
 }
 
@@ -364,10 +303,12 @@ static void measure_piece(struct meter *m)
 {
 	uint64_t base = m->next - m->piece;
 
-	place_leak(m, base);
+	leak_plan_next(&m->leak, &m->comb, base);
 	for (size_t k = 0; k < m->channels; k++)
 		measure_channel(m, &m->channel[k], base);
-	finish_leak(m, m->next);
+	if (leak_plan_over(&m->leak, m->next))
+		for (size_t k = 0; k < m->channels; k++)
+			leak_finish(&m->channel[k].leak, &m->leak);
 	m->frames += m->piece;
 	m->filled = 0;
 	if (++m->pieces == m->second_pieces)
@@ -383,7 +324,7 @@ static void begin(struct meter *m, uint64_t first)
 	m->next = first;
 	m->filled = 0;
 	m->comb.broken = true;
-	m->place[LEAK_PULSE].set = m->place[LEAK_CONTROL].set = false;
+	m->leak.set = false;
 	for (size_t k = 0; k < m->channels; k++)
 		break_channel(&m->channel[k]);
 }

@@ -13,6 +13,7 @@ enum {
 	MAINS_BETWEEN = 11,             /* frequencies between the lines, for the noise */
 	MAINS_PROBES = MAINS_LINES + MAINS_BETWEEN,
 	COMB_KEPT = 64,                 /* intervals between pulses that count */
+	FORGET_LEAST = 16,              /* differences or pulses are always remembered */
 };
 
 /* Number, mean and sum of squares about it, merged from pieces: Chan, Golub & LeVeque (1983), Am. Stat. 37, 242. */
@@ -69,11 +70,29 @@ double comb_scatter(const struct comb *comb);
  */
 enum { LEAK_CONTROL, LEAK_PULSE, LEAK_PLACES };
 
-struct leak_place { uint64_t centre; bool set; };       /* frame after the edge */
+struct leak_plan {                      /* the same for every channel */
+	double rate, memory;            /* frames per second; pulses remembered */
+	uint64_t reach;                 /* frames either side of a place; 0: no pulse */
+	uint64_t centre[LEAK_PLACES];   /* first frame after the edge */
+	bool set;
+};
+
 struct leak {
 	double sum[LEAK_PLACES];        /* after less before, so far */
-	size_t taken[LEAK_PLACES];      /* frames of it */
+	uint64_t taken[LEAK_PLACES];    /* frames of it */
 	struct moments steps;
 };
+
+/** A pulse of width_s, 0: unknown. */
+void leak_plan_create(struct leak_plan *plan, double rate, double width_s, double memory_s);
+/** Finds the next pulse whose control is not before frame `base`, unless one is under way. */
+void leak_plan_next(struct leak_plan *plan, const struct comb *comb, uint64_t base);
+/** Whether the pulse has passed when the frames before `end` have: leak_finish() every channel then. */
+bool leak_plan_over(struct leak_plan *plan, uint64_t end);
+/** Frames base, base + 1 ... of one channel. */
+void leak_take(struct leak *leak, const struct leak_plan *plan, const double *x, size_t n, uint64_t base);
+void leak_finish(struct leak *leak, const struct leak_plan *plan);
+/** After lost frames: the pulse under way is given up. */
+void leak_break(struct leak *leak);
 
 #endif

@@ -3,8 +3,8 @@
  * Mains lines by Goertzel's recursion over windows of one second.  The flat-top window makes the amplitude right to a
  * thousandth while the mains are within half a hertz of nominal, and keeps other lines 70 dB down four hertz away.
  *
- * Sources: Goertzel (1958), Am. Math. Mon. 65, 34; window HFT70 and its noise bandwidth: Heinzel, Ruediger & Schilling (2002),
- * Spectrum and spectral density estimation by the DFT, appendix D.
+ * Sources: Goertzel (1958), Am. Math. Mon. 65, 34; window HFT70 and its noise bandwidth: Heinzel, Ruediger & Schilling
+ * (2002), Spectrum and spectral density estimation by the DFT, appendix D.
  */
 #include <errno.h>
 #include <gsl/gsl_sort.h>
@@ -21,7 +21,7 @@ static const double flat_top[] = { 1, -1.90796, 1.07349, -0.18199 };    /* HFT70
 static const double series_rate_least = 1000;   /* Hz: lines to 240 Hz are then hardly averaged out */
 static const double carried = 0.45;             /* of the series' rate: what is above would be an image */
 static const double memory_windows = 8;
-/* A line's power over the noise's, less 1, in one window: by chance once in e^14. In averages it may be less by their error. */
+/* A line's power over the noise's, less 1, in one window: by chance once in e^14.  In averages less, by their error. */
 static const double standing_out = 13;
 
 static double probe_frequency(size_t probe)

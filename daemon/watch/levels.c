@@ -153,7 +153,7 @@ static int decibels_of(double x)
 	return x > 0 ? (int)fmax(0, BAR + 20 * log10(x)) : 0;
 }
 
-/* A decibel a character: = the rms about zero, - up to the peak, > the largest peak of the last ten seconds, | full scale. */
+/* A decibel a character: = rms about zero, - up to the peak, > largest peak of the last ten seconds, | full scale. */
 static void print_bars(FILE *out, const struct meter_report *report)
 {
 	fprintf(out, "\n%-*s %-20s%-20s%-20s%s\n", NAME_WIDTH, "", "-60 dB", "-40 dB", "-20 dB", "0 dB: full scale");

@@ -15,7 +15,8 @@ static const double leak_most = 0.2;            /* of the noise of 1 ms: half a 
 static const double leak_most_radio = 0.01;
 static const double below_zero = 0.02;
 static const double radiometer_most = 3;
-static const double tau_longest_s = 10, tau_shortest_s = 0.1;   /* the longest known between: a radio contact takes some 10 s */
+/* The longest that is known between these: a radio contact takes some 10 s. */
+static const double tau_longest_s = 10, tau_shortest_s = 0.1;
 static const double known_differences = 8;
 static const double pulse_age_most_s = 3.5;     /* the detector gives an edge up to two seconds late */
 static const double irregular_most = 0.02;      /* share of pulses missing or spurious */

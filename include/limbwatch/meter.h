@@ -17,7 +17,7 @@ struct meter;
 
 enum {
 	METER_NAME = 64,
-	METER_OCTAVES = 26,             /* integration times of 1, 2, 4 ... 2^25 samples: 175 s at 192 kHz, 700 s at 48 kHz */
+	METER_OCTAVES = 26,             /* integration times of 1, 2, 4 ... 2^25 samples: 700 s at 48 kHz */
 	METER_HARMONICS = 4,            /* of the mains, the fundamental among them */
 };
 
@@ -25,7 +25,7 @@ struct meter_settings {
 	struct frame_format format;
 	double rate;                    /* frames per second, nominal, > 0 */
 	double card_tolerance;          /* relative: how far the card may be from it; 0: 200e-6 */
-	/* How long noise and leakage remember: seconds, and never less than 16 differences or pulses.  0: for ever (a file). */
+	/* How long noise and leakage remember, seconds; 16 differences or pulses at the least.  0: for ever (a file). */
 	double memory_s;
 	size_t channels;                /* 1 to MAX_CHANNELS */
 	struct {
@@ -33,7 +33,7 @@ struct meter_settings {
 		unsigned column;        /* from 0 */
 		enum measure measure;
 		int    polarity;        /* as in the configuration: +1, -1; of a pulse also 0 */
-		/* Radio passband before detection, for the radiometer's noise; 0: none, or an AC-coupled input that has no level. */
+		/* Radio passband before detection, for the radiometer's noise; 0: none, or an AC-coupled input. */
 		double bandwidth_hz;
 		bool   coupled;         /* AC-coupled: its mean says nothing */
 		double pulse_width_s, pulse_jitter_s;   /* of the pulse; 0: unknown */
@@ -74,7 +74,7 @@ struct meter_channel {
 	double bandwidth_hz;
 	struct meter_span second;       /* the last whole second */
 	struct meter_span whole;        /* since the start */
-	double headroom_db;             /* full scale over the largest magnitude of the last 10 to 20 s; memory_s = 0: of all */
+	double headroom_db;             /* full scale over the largest magnitude of 10 to 20 s; memory_s = 0: of all */
 	uint64_t invalid;               /* samples that were not a number, since the start */
 	struct {
 		double frequency_hz;    /* 50 or 60; 0: looked for, none found; NAN: not known */
@@ -85,7 +85,7 @@ struct meter_channel {
 	} mains;
 	double noise_1ms;               /* rms of averages over 1 ms as the noise between the mains lines would have it */
 	struct meter_octave octave[METER_OCTAVES];
-	struct {                        /* of the pulse into this channel: mean over a millisecond after less before the edge */
+	struct {                        /* of the pulse into this channel: mean of 1 ms after the edge less 1 ms before */
 		double step, sigma;     /* sigma: standard uncertainty of the average step */
 		unsigned pulses;        /* averaged */
 	} leak;
@@ -116,14 +116,14 @@ double meter_tau(const struct meter_report *report, size_t octave);
 /**
  * What white noise would have of the deviation of octave 0: sigma_1 / sqrt(n).
  *
- * Source: Riley, Handbook of Frequency Stability Analysis, NIST SP 1065 (2008), 5.2 (Allan deviation), 3.3 and table 5 (slope -1/2 of
- * white frequency noise).
+ * Source: Riley, Handbook of Frequency Stability Analysis, NIST SP 1065 (2008): Allan deviation, and its slope of -1/2
+ * for white noise of the averaged quantity.
  */
 double meter_white(const struct meter_channel *channel, size_t octave);
 /** The span to look at: the last second, or everything when the meter forgets nothing. */
 const struct meter_span *meter_span(const struct meter_report *report, size_t channel);
 /**
- * Noise of an ideal total-power receiver of this level: |mean| / sqrt(B tau), mean of meter_span().  NAN without a bandwidth.
+ * Noise of an ideal total-power receiver of this level: |mean| / sqrt(B tau), mean of meter_span().  NAN without B.
  *
  * Source: Dicke (1946), Rev. Sci. Instrum. 17, 268.
  */
