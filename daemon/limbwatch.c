@@ -7,6 +7,7 @@
 #include "limbwatch/log.h"
 
 static const struct command commands[] = {
+	{ "levels", "show level, headroom, hum, noise and pulse of every channel, for setting gains", command_levels },
 	{ "rehearse", "play a synthetic contact through the real recorder and compare", command_rehearse },
 	{ "settings", "print the manual of all settings, or the commented sample configuration", command_settings },
 };

@@ -10,6 +10,7 @@ struct command {
 	int (*run)(int argc, char **argv);
 };
 
+int command_levels(int argc, char **argv);
 int command_rehearse(int argc, char **argv);
 int command_settings(int argc, char **argv);
 
