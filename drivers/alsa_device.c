@@ -1,5 +1,6 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <errno.h>
+#include <math.h>
 #include <stdlib.h>
 #include <string.h>
 #include "alsa_device.h"
@@ -131,7 +132,7 @@ static int choose_channels(struct alsa_device *device, snd_pcm_hw_params_t *para
 /* The rate asked for or none: converted samples would blur the edge and bend the card's clock. */
 static int choose_rate(struct alsa_device *device, snd_pcm_hw_params_t *params, unsigned rate)
 {
-	unsigned granted = rate, numerator = 0, denominator = 0;
+	unsigned granted = rate;
 
 	snd_pcm_hw_params_set_rate_resample(device->pcm, params, 0);
 	const int ret = snd_pcm_hw_params_set_rate_near(device->pcm, params, &granted, NULL);
@@ -141,11 +142,22 @@ static int choose_rate(struct alsa_device *device, snd_pcm_hw_params_t *params, 
 		log_error("rate_hz: \"%s\" grants %u where %u was asked for", device->name, granted, rate);
 		return -EINVAL;
 	}
-	/* A card's nominal rate need not be whole. */
 	device->rate = rate;
+	return 0;
+}
+
+/* What the device has set itself to in the end.  A card's nominal rate need not be whole, but the one asked for. */
+static int check_rate(struct alsa_device *device, const snd_pcm_hw_params_t *params)
+{
+	const double asked = device->rate;
+	unsigned numerator = 0, denominator = 0;
+
 	if (snd_pcm_hw_params_get_rate_numden(params, &numerator, &denominator) >= 0 && denominator)
 		device->rate = (double)numerator / denominator;
-	return 0;
+	if (fabs(device->rate - asked) < 1)
+		return 0;
+	log_error("rate_hz: \"%s\" runs at %.9g where %.9g was asked for and granted", device->name, device->rate, asked);
+	return -EINVAL;
 }
 
 /* The buffer first: what it can hold matters more than how often it is emptied. */
@@ -189,6 +201,8 @@ static int configure_hardware(struct alsa_device *device, const struct setting_v
 			snd_strerror(ret));
 		return ret;
 	}
+	if ((ret = check_rate(device, params)) < 0)
+		return ret;
 	snd_pcm_hw_params_get_period_size(params, &period, NULL);
 	snd_pcm_hw_params_get_buffer_size(params, &buffer);
 	/* Never wait for more than half of what the device holds: a full one is an overrun. */

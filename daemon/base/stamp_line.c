@@ -22,14 +22,18 @@ static double ahead_ns(const struct stamp_line *line, struct stamp_point stamp, 
 	return ((double)frame - (double)stamp.frame) / line->rate * 1e9;
 }
 
-static void measure_rate(struct stamp_line *line, uint64_t frame, int64_t ns)
+double stamp_line_rate(const struct stamp_line *line, uint64_t frame, int64_t ns, double least_s)
 {
 	const double seconds = (double)(ns - line->first.ns) * 1e-9;
 
-	if (seconds < min_baseline_s)
-		return;
-	const double rate = (double)(frame - line->first.frame) / seconds;
-	if (fabs(rate / line->nominal - 1) <= max_rate_error)
+	return line->started && seconds >= least_s ? (double)(frame - line->first.frame) / seconds : 0;
+}
+
+static void measure_rate(struct stamp_line *line, uint64_t frame, int64_t ns)
+{
+	const double rate = stamp_line_rate(line, frame, ns, min_baseline_s);
+
+	if (rate > 0 && fabs(rate / line->nominal - 1) <= max_rate_error)
 		line->rate = rate;
 }
 

@@ -41,4 +41,7 @@ void stamp_line_add(struct stamp_line *line, uint64_t frame, int64_t ns);
  */
 uint64_t stamp_line_gap(struct stamp_line *line, uint64_t next, int64_t ns);
 
+/** @return frames per second of this run, when it is at least `least_s` long; else 0 */
+double stamp_line_rate(const struct stamp_line *line, uint64_t frame, int64_t ns, double least_s);
+
 #endif
