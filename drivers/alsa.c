@@ -8,8 +8,9 @@
 #include "alsa_device.h"
 #include "limbwatch/intake.h"
 #include "limbwatch/log.h"
-#include "origin.h"
 #include "limbwatch/stamp_line.h"
+#include "origin.h"
+#include "sound_mixer.h"
 
 /*
  * A sound card or any other PCM that ALSA knows.  Nothing on the way may touch the samples: no rate is converted, and
@@ -20,6 +21,12 @@ static const struct setting alsa_settings[] = {
 	[ALSA_DEVICE] = { "device", SETTING_TEXT, .text = "default",
 		.meaning = "PCM as ALSA names it; only hw: devices are free of plug-ins and have stamps of their own",
 		.example = "hw:1,0" },
+	[ALSA_CARD] = { "card", SETTING_TEXT,
+		.meaning = "instead of device: sound card by id or, found again in the same socket whatever its number, by path; one "
+			"that is not there is answered with a list",
+		.example = "usb-0000:01:00.0-1.2" },
+	[ALSA_PCM] = { "pcm", SETTING_INTEGER, 0, 0, 31,
+		.meaning = "which of that card's PCMs, as the card counts them" },
 	[ALSA_RATE] = { "rate_hz", SETTING_INTEGER, 48000, 8000, 192000,
 		.meaning = "frames per second, which the device must have itself" },
 	[ALSA_CHANNELS] = { "channels", SETTING_INTEGER, 2, 1, MAX_CHANNELS,
@@ -32,6 +39,12 @@ static const struct setting alsa_settings[] = {
 		.meaning = "what the device may hold back before frames are lost" },
 	[ALSA_PACED] = { "paced", SETTING_BOOLEAN, 1, 0, 1,
 		.meaning = "the device delivers at its rate; false: a plug-in that gives a file's samples at once" },
+	[ALSA_CONTROLS] = { "controls", SETTING_TEXT,
+		.meaning = "mixer controls set each time the card is opened, by their names, to a number, a percentage of the range, on, "
+			"off or an item; / parts channels",
+		.example = "Mic Capture Volume = 60%, Mic Capture Switch = on" },
+	[ALSA_AUTOMATIC_GAIN] = { "automatic_gain", SETTING_CHOICE, .text = "switch_off", .choices = "switch_off|refuse|allow",
+		.meaning = "what is done when the card's gain follows the signal, which spoils amplitudes" },
 	{ .name = NULL },
 };
 
@@ -75,26 +88,41 @@ static void alsa_close(struct intake *intake)
 	free(alsa);
 }
 
+static int fill(struct alsa_intake *alsa, const struct setting_value *values)
+{
+	const struct alsa_device *device = &alsa->device;
+
+	alsa->intake.driver = &intake_alsa;
+	alsa->intake.format = device->format;
+	alsa->intake.rate = device->rate;
+	alsa->intake.real_time = values[ALSA_PACED].integer;
+	intake_rename(&alsa->intake, device->name);
+	alsa->buffer = calloc(device->block_frames, frame_bytes(device->format));
+	return alsa->buffer && snd_pcm_status_malloc(&alsa->status) >= 0 ? 0 : -ENOMEM;
+}
+
 static int alsa_open(struct intake **out, const struct setting_value *values)
 {
-	struct alsa_intake *alsa = calloc(1, sizeof(*alsa));
+	struct sound_wish wishes[SOUND_WISHES];
+	const int count = sound_wishes_parse(wishes, values[ALSA_CONTROLS].text);
+	struct alsa_intake *alsa;
 	int ret;
 
+	if (count < 0)
+		return count;
+	alsa = calloc(1, sizeof(*alsa));
 	if (!alsa)
 		return -ENOMEM;
 	ret = alsa_device_open(&alsa->device, values);
-	if (ret < 0)
-		goto free_alsa;
-	alsa->intake.driver = &intake_alsa;
-	alsa->intake.format = alsa->device.format;
-	alsa->intake.rate = alsa->device.rate;
-	alsa->intake.real_time = values[ALSA_PACED].integer;
-	intake_rename(&alsa->intake, alsa->device.name);
-	alsa->device.name = alsa->intake.name;  /* the settings need not live as long */
-	alsa->buffer = calloc(alsa->device.block_frames, frame_bytes(alsa->intake.format));
-	if (!alsa->buffer || snd_pcm_status_malloc(&alsa->status) < 0) {
+	if (ret < 0) {
+		free(alsa);
+		return ret;
+	}
+	/* The mixer last: now no other program has the card's PCM. */
+	if ((ret = fill(alsa, values)) < 0 || (ret = sound_mixer_apply(&alsa->intake, alsa->device.card, wishes, count,
+	     (enum automatic_gain)values[ALSA_AUTOMATIC_GAIN].integer)) < 0) {
 		alsa_close(&alsa->intake);
-		return -ENOMEM;
+		return ret;
 	}
 	log_detail("\"%s\", %s, gives %u channels of %s at %.9g Hz every %.1f ms and holds %.0f ms", alsa->intake.name,
 		alsa->device.own_stamps ? "a device with stamps of its own" : "a plug-in dated by the arrival of its frames",
@@ -102,10 +130,6 @@ static int alsa_open(struct intake **out, const struct setting_value *values)
 		alsa->device.period_us * 1e-3, alsa->device.buffer_us * 1e-3);
 	*out = &alsa->intake;
 	return 0;
-
-free_alsa:
-	free(alsa);
-	return ret;
 }
 
 /* Empties the device, whatever it is doing, and lets it run. */

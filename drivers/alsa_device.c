@@ -5,6 +5,7 @@
 #include <string.h>
 #include "alsa_device.h"
 #include "limbwatch/log.h"
+#include "sound_cards.h"
 
 /* Frames per read at most: some devices have only very long periods. */
 enum { MAX_BLOCK_FRAMES = 65536 };
@@ -66,22 +67,52 @@ static void list_devices(char *text, size_t size)
 		snprintf(text + used, size - used, " and %d more", count - MOST);
 }
 
-static int open_pcm(struct alsa_device *device)
+/* Whether ALSA's configuration has a PCM of that name, be it there or not. */
+static bool is_defined(const char *pcm)
+{
+	snd_config_t *top = NULL, *found;
+	char base[128];
+
+	snprintf(base, sizeof(base), "%.*s", (int)strcspn(pcm, ":"), pcm);
+	if (snd_config_update_ref(&top) < 0)
+		return true;
+	const bool defined = snd_config_searchv(top, &found, "pcm", base, NULL) >= 0;
+	snd_config_unref(top);
+	return defined;
+}
+
+static int say_why_not_open(const struct alsa_device *device, const char *pcm, int error)
 {
 	char known[512];
-	/* Non-blocking: a device held by another program is said, not waited for. */
-	const int ret = snd_pcm_open(&device->pcm, device->name, SND_PCM_STREAM_CAPTURE, SND_PCM_NONBLOCK);
 
-	if (ret >= 0)
-		return 0;
-	if (ret == -EBUSY) {
+	if (error == -EBUSY) {
 		log_error("device: \"%s\" is in use by another program", device->name);
-		return ret;
+		return error;
 	}
 	list_devices(known, sizeof(known));
-	log_error("device: \"%s\" cannot be opened: %s; ALSA knows %s", device->name, snd_strerror(ret),
-		*known ? known : "no device to record from");
-	return ret == -EINVAL ? -ENODEV : ret;  /* a card that is not there is no fault of the configuration */
+	const char *others = *known ? known : "no device to record from";
+	if (error == -ENOENT && !is_defined(pcm)) {
+		log_error("device: ALSA knows nothing called \"%s\"; it knows %s", device->name, others);
+		return -EINVAL;
+	}
+	log_error("device: \"%s\" cannot be opened: %s; ALSA knows %s", device->name, snd_strerror(error), others);
+	/* A card that is not there, or a sound server, is no fault of the configuration: it may come. */
+	if (error == -ENOENT || error == -ENXIO || error == -EINVAL || error == -ECONNREFUSED)
+		return -ENODEV;
+	return error;
+}
+
+static int open_pcm(struct alsa_device *device, const char *pcm)
+{
+	/* Non-blocking: a device held by another program is said, not waited for. */
+	const int ret = snd_pcm_open(&device->pcm, pcm, SND_PCM_STREAM_CAPTURE, SND_PCM_NONBLOCK);
+
+	if (ret < 0)
+		return say_why_not_open(device, pcm, ret);
+	snd_pcm_info_t *info;
+	snd_pcm_info_alloca(&info);
+	device->card = snd_pcm_info(device->pcm, info) < 0 ? -1 : snd_pcm_info_get_card(info);
+	return 0;
 }
 
 static int refused(const struct alsa_device *device, const char *what, int error)
@@ -228,13 +259,38 @@ static int configure_software(struct alsa_device *device)
 	return ret < 0 ? refused(device, "its set-up", ret) : 0;
 }
 
+/* What alsa-lib calls the PCM, and what sentences and the sidecar do. */
+static int name_pcm(struct alsa_device *device, const struct setting_value *values, char *pcm, size_t size)
+{
+	const char *wanted = values[ALSA_CARD].text;
+	struct sound_card card;
+
+	if (!wanted || !*wanted) {
+		snprintf(pcm, size, "%s", values[ALSA_DEVICE].text);
+		snprintf(device->name, sizeof(device->name), "%.127s", pcm);
+		return 0;
+	}
+	if (values[ALSA_DEVICE].given) {
+		log_error("card: \"%s\" and device = \"%s\" are both given; one of them says where samples come from", wanted,
+			values[ALSA_DEVICE].text);
+		return -EINVAL;
+	}
+	const int ret = sound_cards_find(&card, wanted);
+	if (ret < 0)
+		return ret;
+	snprintf(pcm, size, "hw:%d,%lld", card.number, values[ALSA_PCM].integer);
+	snprintf(device->name, sizeof(device->name), "%s at %s, %.16s", card.id, card.path[0] ? card.path : "no path", pcm);
+	return 0;
+}
+
 int alsa_device_open(struct alsa_device *device, const struct setting_value *values)
 {
+	char pcm[1024];
 	int ret;
 
 	snd_lib_error_set_handler(chatter);
-	*device = (struct alsa_device){ .name = values[ALSA_DEVICE].text };
-	if ((ret = open_pcm(device)) < 0)
+	*device = (struct alsa_device){ .card = -1 };
+	if ((ret = name_pcm(device, values, pcm, sizeof(pcm))) < 0 || (ret = open_pcm(device, pcm)) < 0)
 		return ret;
 	if ((ret = configure_hardware(device, values)) < 0 || (ret = configure_software(device)) < 0) {
 		snd_pcm_close(device->pcm);
