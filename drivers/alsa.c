@@ -375,14 +375,14 @@ static int alsa_read(struct intake *intake, struct block *block, int timeout_ms)
 
 	if (alsa->error)
 		return -alsa->error;
-	alsa_acquiring = true;
+	alsa_quiet = true;
 	ret = fetch(alsa, block, timeout_ms);
 	/* A driver that sleeps and says nothing has frames of before and after in one buffer. */
 	if (intake->real_time && woke_up(alsa) && ret >= 0)
 		ret = -ESTRPIPE;
 	if (ret < 0)
 		ret = recover(alsa, ret, timeout_ms);
-	alsa_acquiring = false;
+	alsa_quiet = false;
 	if (ret <= 0)
 		return ret;
 	place(alsa, block);

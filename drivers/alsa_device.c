@@ -10,7 +10,7 @@
 /* Frames per read at most: some devices have only very long periods. */
 enum { MAX_BLOCK_FRAMES = 65536 };
 
-_Thread_local bool alsa_acquiring;
+_Thread_local bool alsa_quiet;
 
 /* In the order of enum sample_type, which is that of the choices after auto. */
 static const snd_pcm_format_t pcm_formats[SAMPLE_TYPES] = {
@@ -35,7 +35,7 @@ static void chatter(const char *file, int line, const char *function, int error,
 
 	(void)file;
 	(void)line;
-	if (alsa_acquiring)
+	if (alsa_quiet)
 		return;
 	va_start(arguments, format);
 	vsnprintf(sentence, sizeof(sentence), format, arguments);
@@ -52,7 +52,10 @@ static void list_devices(char *text, size_t size)
 	int count = 0;
 
 	text[0] = 0;
-	if (snd_device_name_hint(-1, "pcm", &hints) < 0)
+	alsa_quiet = true;      /* it tries every name there could be and tells of each that is not */
+	const int ret = snd_device_name_hint(-1, "pcm", &hints);
+	alsa_quiet = false;
+	if (ret < 0)
 		return;
 	for (void **hint = hints; *hint && used < size; hint++) {
 		char *name = snd_device_name_get_hint(*hint, "NAME");
@@ -65,6 +68,32 @@ static void list_devices(char *text, size_t size)
 	snd_device_name_free_hint(hints);
 	if (count > MOST && used < size)
 		snprintf(text + used, size - used, " and %d more", count - MOST);
+}
+
+/* "0, 2": which PCMs of a card record.  @return whether `wanted` is one of them; true when the card does not tell */
+static bool list_recording(int card, long long wanted, char *text, size_t size)
+{
+	snd_pcm_info_t *info;
+	snd_ctl_t *ctl;
+	char name[32];
+	bool found = false;
+	size_t used = 0;
+
+	snprintf(text, size, "none");
+	snprintf(name, sizeof(name), "hw:%d", card);
+	if (snd_ctl_open(&ctl, name, SND_CTL_NONBLOCK) < 0)
+		return true;
+	snd_pcm_info_alloca(&info);
+	for (int pcm = -1; snd_ctl_pcm_next_device(ctl, &pcm) >= 0 && pcm >= 0 && used < size;) {
+		snd_pcm_info_set_device(info, (unsigned)pcm);
+		snd_pcm_info_set_stream(info, SND_PCM_STREAM_CAPTURE);
+		if (snd_ctl_pcm_info(ctl, info) < 0)
+			continue;
+		used += (size_t)snprintf(text + used, size - used, "%s%d", used ? ", " : "", pcm);
+		found |= pcm == wanted;
+	}
+	snd_ctl_close(ctl);
+	return found;
 }
 
 /* Whether ALSA's configuration has a PCM of that name, be it there or not. */
@@ -88,6 +117,10 @@ static int say_why_not_open(const struct alsa_device *device, const char *pcm, i
 	if (error == -EBUSY) {
 		log_error("device: \"%s\" is in use by another program", device->name);
 		return error;
+	}
+	if (device->card >= 0 && !list_recording(device->card, device->card_pcm, known, sizeof(known))) {
+		log_error("pcm: \"%s\" does not record; of its PCMs these do: %s", device->name, known);
+		return -EINVAL;
 	}
 	list_devices(known, sizeof(known));
 	const char *others = *known ? known : "no device to record from";
@@ -279,6 +312,8 @@ static int name_pcm(struct alsa_device *device, const struct setting_value *valu
 	if (ret < 0)
 		return ret;
 	snprintf(pcm, size, "hw:%d,%lld", card.number, values[ALSA_PCM].integer);
+	device->card = card.number;
+	device->card_pcm = values[ALSA_PCM].integer;
 	snprintf(device->name, sizeof(device->name), "%s at %s, %.16s", card.id, card.path[0] ? card.path : "no path", pcm);
 	return 0;
 }

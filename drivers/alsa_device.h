@@ -19,6 +19,7 @@ struct alsa_device {
 	snd_pcm_t *pcm;
 	char name[128];                 /* for sentences: as configured, or card and socket with the number of the day */
 	int card;                       /* its number; -1: a plug-in without a card */
+	long long card_pcm;             /* which of the card's PCMs, when it was looked up */
 	struct frame_format format;
 	double rate;                    /* frames per second, as the device states it */
 	bool own_stamps;                /* the driver's, not a plug-in's */
@@ -27,7 +28,7 @@ struct alsa_device {
 };
 
 /** While true, what alsa-lib has to say in this thread is dropped: the acquisition thread logs nothing. */
-extern _Thread_local bool alsa_acquiring;
+extern _Thread_local bool alsa_quiet;
 
 /**
  * Opens and configures values[ALSA_DEVICE], or the PCM of values[ALSA_CARD], which is looked up now.  Main thread.

@@ -19,6 +19,38 @@
 static struct probe probe;
 static char root[64], class[128];
 
+/* The PCMs of every card here: 0 plays, 1 and 4 record.  Whether the card tells. */
+static bool card_tells;
+static snd_ctl_t *const any_card = (snd_ctl_t *)&card_tells;
+
+int snd_ctl_open(snd_ctl_t **out, const char *name, int mode)
+{
+	(void)mode;
+	assert_string_equal(name, "hw:6");
+	*out = any_card;
+	return card_tells ? 0 : -EACCES;
+}
+
+int snd_ctl_close(snd_ctl_t *ctl)
+{
+	assert_ptr_equal(ctl, any_card);
+	return 0;
+}
+
+int snd_ctl_pcm_next_device(snd_ctl_t *ctl, int *device)
+{
+	assert_ptr_equal(ctl, any_card);
+	*device = *device < 0 ? 0 : *device == 0 ? 1 : *device == 1 ? 4 : -1;
+	return 0;
+}
+
+int snd_ctl_pcm_info(snd_ctl_t *ctl, snd_pcm_info_t *info)
+{
+	assert_ptr_equal(ctl, any_card);
+	assert_int_equal(snd_pcm_info_get_stream(info), SND_PCM_STREAM_CAPTURE);
+	return snd_pcm_info_get_device(info) == 0 ? -ENOENT : 0;
+}
+
 static void run(const char *command)
 {
 	if (system(command) != 0)
@@ -189,6 +221,25 @@ static void the_intake_finds_it_again_under_another_number(void **state)
 	assert_true(probe.driver->comes_back);
 }
 
+static void a_pcm_that_does_not_record_is_answered_with_those_that_do(void **state)
+{
+	(void)state;
+	setenv("LIMBWATCH_CARDS", probe.folder, 1);
+	unplug_all();
+	plug(6, "PCH", "pci0000:00/0000:00:1f.3", "pci");
+	card_tells = true;
+	want("PCH", 7);
+	assert_int_equal(probe_open(&probe), -EINVAL);
+	assert_string_equal(probe.said, "pcm: \"PCH at pci-0000:00:1f.3, hw:6,7\" does not record; of its PCMs these do: 1, 4\n");
+	/* One that should be there may come yet, and so may one that is not told of. */
+	want("PCH", 4);
+	assert_int_equal(probe_open(&probe), -ENODEV);
+	assert_non_null(strstr(probe.said, "device: \"PCH at pci-0000:00:1f.3, hw:6,4\" cannot be opened: No such file"));
+	card_tells = false;
+	want("PCH", 7);
+	assert_int_equal(probe_open(&probe), -ENODEV);
+}
+
 static void card_and_device_exclude_each_other(void **state)
 {
 	(void)state;
@@ -207,6 +258,7 @@ int main(void)
 		cmocka_unit_test(a_card_that_is_not_there_is_answered_with_a_list),
 		cmocka_unit_test(a_name_that_fits_two_is_refused),
 		cmocka_unit_test(the_intake_finds_it_again_under_another_number),
+		cmocka_unit_test(a_pcm_that_does_not_record_is_answered_with_those_that_do),
 		cmocka_unit_test(card_and_device_exclude_each_other),
 	};
 
