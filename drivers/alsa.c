@@ -55,8 +55,8 @@ enum { MAX_DESCRIPTORS = 32 };
 enum { MAX_IN_VAIN = 5 };
 /* A device that runs and delivers nothing for so long, or for some of its buffers, is started again. */
 static const double silence_s = 2, silence_buffers = 4;
-/* A rate so far off is another rate: no crystal errs by a thousandth.  Plug-ins' stamps come in bursts. */
-static const double wrong_rate = 0.01, rate_baseline_s = 10, plugin_rate_baseline_s = 60;
+/* A rate so far off for so long is another rate: no crystal errs by a thousandth, and a loss passes. */
+static const double wrong_rate = 0.01, wrong_rate_s = 10;
 
 struct alsa_intake {
 	struct intake intake;           /* first */
@@ -71,6 +71,7 @@ struct alsa_intake {
 	int64_t heard_ns;               /* when the last block came, or the device was started */
 	int64_t slept_ns;               /* CLOCK_BOOTTIME - CLOCK_MONOTONIC: what the computer has slept */
 	struct stamp_line line;         /* in CLOCK_BOOTTIME: a gap is as long as the sleep was */
+	int64_t right_ns;               /* when the rate was last seen to be right, in that time */
 	double measured;                /* frames per second, when that is not the rate granted */
 	int error;                      /* errno of a failed read */
 };
@@ -311,11 +312,12 @@ static int await_block(struct alsa_intake *alsa, int timeout_ms)
 	}
 }
 
+/* A plug-in is let alone: what it would be stopped through may be the very server that hangs. */
 static bool is_silent(const struct alsa_intake *alsa)
 {
 	const double limit_ns = fmax(silence_s * 1e9, silence_buffers * alsa->device.buffer_us * 1e3);
 
-	return alsa->intake.real_time && (double)(host_now() - alsa->heard_ns) > limit_ns;
+	return alsa->device.own_stamps && (double)(host_now() - alsa->heard_ns) > limit_ns;
 }
 
 /* The device's next frames into the buffer: 1, 0 or -errno. */
@@ -345,6 +347,8 @@ static void place(struct alsa_intake *alsa, struct block *block)
 {
 	const int64_t true_ns = block->host_ns + alsa->slept_ns;
 
+	if (alsa->gap || !alsa->line.started)
+		alsa->right_ns = true_ns;
 	if (alsa->gap) {
 		block->first += stamp_line_gap(&alsa->line, alsa->next, true_ns);
 		block->flags |= alsa->gap;
@@ -358,10 +362,14 @@ static void place(struct alsa_intake *alsa, struct block *block)
 /* Whether the device delivers at another rate than the one granted: nothing that is dated by its frames would be right. */
 static bool rate_is_wrong(struct alsa_intake *alsa, const struct block *block)
 {
-	const double least_s = alsa->device.own_stamps ? rate_baseline_s : plugin_rate_baseline_s;
-	const double rate = stamp_line_rate(&alsa->line, block->first, block->host_ns + alsa->slept_ns, least_s);
+	const int64_t true_ns = block->host_ns + alsa->slept_ns;
+	const double rate = stamp_line_recent_rate(&alsa->line, block->first, true_ns);
 
-	if (!alsa->intake.real_time || rate <= 0 || fabs(rate / alsa->intake.rate - 1) <= wrong_rate)
+	if (!alsa->device.own_stamps || rate <= 0)
+		return false;
+	if (fabs(rate / alsa->intake.rate - 1) <= wrong_rate)
+		alsa->right_ns = true_ns;
+	if ((double)(true_ns - alsa->right_ns) < wrong_rate_s * 1e9)
 		return false;
 	alsa->measured = rate;
 	alsa->error = ERANGE;
@@ -379,7 +387,7 @@ static int alsa_read(struct intake *intake, struct block *block, int timeout_ms)
 	ret = fetch(alsa, block, timeout_ms);
 	/* A driver that sleeps and says nothing has frames of before and after in one buffer. */
 	if (intake->real_time && woke_up(alsa) && ret >= 0)
-		ret = -ESTRPIPE;
+		ret = -ESTRPIPE;        /* whatever was read is dropped, and counted as lost */
 	if (ret < 0)
 		ret = recover(alsa, ret, timeout_ms);
 	alsa_quiet = false;

@@ -472,9 +472,14 @@ static void a_card_at_another_rate_than_granted_is_said(void **state)
 		snprintf(said, sizeof(said), "\"nothing\" gives %.0f frames a second where 48000 were granted", rates[k]);
 		assert_string_equal(probe.explanation, said);
 	}
-	/* A crystal that is merely bad is none of that. */
+	/* A crystal that is merely bad is none of that, and neither are frames that got lost. */
 	start_card(48000 * 1.0009);
 	read_for(100);
+	for (int k = 0; k < 10; k++) {
+		card.position += 4800;
+		card.now += 100000000;
+		read_for(5);
+	}
 }
 
 /* What the hardware was set to in the end, in the kernel's own fraction. */

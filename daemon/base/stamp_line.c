@@ -22,16 +22,22 @@ static double ahead_ns(const struct stamp_line *line, struct stamp_point stamp, 
 	return ((double)frame - (double)stamp.frame) / line->rate * 1e9;
 }
 
-double stamp_line_rate(const struct stamp_line *line, uint64_t frame, int64_t ns, double least_s)
+/* From a stamp to now; 0 when that is too short. */
+static double rate_since(struct stamp_point stamp, uint64_t frame, int64_t ns, double least_s)
 {
-	const double seconds = (double)(ns - line->first.ns) * 1e-9;
+	const double seconds = (double)(ns - stamp.ns) * 1e-9;
 
-	return line->started && seconds >= least_s ? (double)(frame - line->first.frame) / seconds : 0;
+	return seconds >= least_s ? (double)(frame - stamp.frame) / seconds : 0;
+}
+
+double stamp_line_recent_rate(const struct stamp_line *line, uint64_t frame, int64_t ns)
+{
+	return line->started ? rate_since(line->before, frame, ns, 1) : 0;
 }
 
 static void measure_rate(struct stamp_line *line, uint64_t frame, int64_t ns)
 {
-	const double rate = stamp_line_rate(line, frame, ns, min_baseline_s);
+	const double rate = rate_since(line->first, frame, ns, min_baseline_s);
 
 	if (rate > 0 && fabs(rate / line->nominal - 1) <= max_rate_error)
 		line->rate = rate;
