@@ -1,14 +1,16 @@
 /* SPDX-License-Identifier: GPL-3.0-or-later */
 #include <errno.h>
+#include <math.h>
 #include <stdlib.h>
 #include <string.h>
 #include "alsa_device.h"
 #include "limbwatch/log.h"
+#include "sound_cards.h"
 
 /* Frames per read at most: some devices have only very long periods. */
 enum { MAX_BLOCK_FRAMES = 65536 };
 
-_Thread_local bool alsa_acquiring;
+_Thread_local bool alsa_quiet;
 
 /* In the order of enum sample_type, which is that of the choices after auto. */
 static const snd_pcm_format_t pcm_formats[SAMPLE_TYPES] = {
@@ -33,7 +35,7 @@ static void chatter(const char *file, int line, const char *function, int error,
 
 	(void)file;
 	(void)line;
-	if (alsa_acquiring)
+	if (alsa_quiet)
 		return;
 	va_start(arguments, format);
 	vsnprintf(sentence, sizeof(sentence), format, arguments);
@@ -50,7 +52,10 @@ static void list_devices(char *text, size_t size)
 	int count = 0;
 
 	text[0] = 0;
-	if (snd_device_name_hint(-1, "pcm", &hints) < 0)
+	alsa_quiet = true;      /* it tries every name there could be and tells of each that is not */
+	const int ret = snd_device_name_hint(-1, "pcm", &hints);
+	alsa_quiet = false;
+	if (ret < 0)
 		return;
 	for (void **hint = hints; *hint && used < size; hint++) {
 		char *name = snd_device_name_get_hint(*hint, "NAME");
@@ -65,22 +70,82 @@ static void list_devices(char *text, size_t size)
 		snprintf(text + used, size - used, " and %d more", count - MOST);
 }
 
-static int open_pcm(struct alsa_device *device)
+/* "0, 2": which PCMs of a card record.  @return whether `wanted` is one of them; true when the card does not tell */
+static bool list_recording(int card, long long wanted, char *text, size_t size)
+{
+	snd_pcm_info_t *info;
+	snd_ctl_t *ctl;
+	char name[32];
+	bool found = false;
+	size_t used = 0;
+
+	snprintf(text, size, "none");
+	snprintf(name, sizeof(name), "hw:%d", card);
+	if (snd_ctl_open(&ctl, name, SND_CTL_NONBLOCK) < 0)
+		return true;
+	snd_pcm_info_alloca(&info);
+	for (int pcm = -1; snd_ctl_pcm_next_device(ctl, &pcm) >= 0 && pcm >= 0 && used < size;) {
+		snd_pcm_info_set_device(info, (unsigned)pcm);
+		snd_pcm_info_set_stream(info, SND_PCM_STREAM_CAPTURE);
+		if (snd_ctl_pcm_info(ctl, info) < 0)
+			continue;
+		used += (size_t)snprintf(text + used, size - used, "%s%d", used ? ", " : "", pcm);
+		found |= pcm == wanted;
+	}
+	snd_ctl_close(ctl);
+	return found;
+}
+
+/* Whether ALSA's configuration has a PCM of that name, be it there or not. */
+static bool is_defined(const char *pcm)
+{
+	snd_config_t *top = NULL, *found;
+	char base[128];
+
+	snprintf(base, sizeof(base), "%.*s", (int)strcspn(pcm, ":"), pcm);
+	if (snd_config_update_ref(&top) < 0)
+		return true;
+	const bool defined = snd_config_searchv(top, &found, "pcm", base, NULL) >= 0;
+	snd_config_unref(top);
+	return defined;
+}
+
+static int say_why_not_open(const struct alsa_device *device, const char *pcm, int error)
 {
 	char known[512];
-	/* Non-blocking: a device held by another program is said, not waited for. */
-	const int ret = snd_pcm_open(&device->pcm, device->name, SND_PCM_STREAM_CAPTURE, SND_PCM_NONBLOCK);
 
-	if (ret >= 0)
-		return 0;
-	if (ret == -EBUSY) {
+	if (error == -EBUSY) {
 		log_error("device: \"%s\" is in use by another program", device->name);
-		return ret;
+		return error;
+	}
+	if (device->card >= 0 && !list_recording(device->card, device->card_pcm, known, sizeof(known))) {
+		log_error("pcm: \"%s\" does not record; of its PCMs these do: %s", device->name, known);
+		return -EINVAL;
 	}
 	list_devices(known, sizeof(known));
-	log_error("device: \"%s\" cannot be opened: %s; ALSA knows %s", device->name, snd_strerror(ret),
-		*known ? known : "no device to record from");
-	return ret == -EINVAL ? -ENODEV : ret;  /* a card that is not there is no fault of the configuration */
+	const char *others = *known ? known : "no device to record from";
+	if (error == -ENOENT && !is_defined(pcm)) {
+		log_error("device: ALSA knows nothing called \"%s\"; it knows %s", device->name, others);
+		return -EINVAL;
+	}
+	log_error("device: \"%s\" cannot be opened: %s; ALSA knows %s", device->name, snd_strerror(error), others);
+	/* A card that is not there, or a sound server, is no fault of the configuration: it may come. */
+	if (error == -ENOENT || error == -ENXIO || error == -EINVAL || error == -ECONNREFUSED)
+		return -ENODEV;
+	return error;
+}
+
+static int open_pcm(struct alsa_device *device, const char *pcm)
+{
+	/* Non-blocking: a device held by another program is said, not waited for. */
+	const int ret = snd_pcm_open(&device->pcm, pcm, SND_PCM_STREAM_CAPTURE, SND_PCM_NONBLOCK);
+
+	if (ret < 0)
+		return say_why_not_open(device, pcm, ret);
+	snd_pcm_info_t *info;
+	snd_pcm_info_alloca(&info);
+	device->card = snd_pcm_info(device->pcm, info) < 0 ? -1 : snd_pcm_info_get_card(info);
+	return 0;
 }
 
 static int refused(const struct alsa_device *device, const char *what, int error)
@@ -131,7 +196,7 @@ static int choose_channels(struct alsa_device *device, snd_pcm_hw_params_t *para
 /* The rate asked for or none: converted samples would blur the edge and bend the card's clock. */
 static int choose_rate(struct alsa_device *device, snd_pcm_hw_params_t *params, unsigned rate)
 {
-	unsigned granted = rate, numerator = 0, denominator = 0;
+	unsigned granted = rate;
 
 	snd_pcm_hw_params_set_rate_resample(device->pcm, params, 0);
 	const int ret = snd_pcm_hw_params_set_rate_near(device->pcm, params, &granted, NULL);
@@ -141,11 +206,22 @@ static int choose_rate(struct alsa_device *device, snd_pcm_hw_params_t *params, 
 		log_error("rate_hz: \"%s\" grants %u where %u was asked for", device->name, granted, rate);
 		return -EINVAL;
 	}
-	/* A card's nominal rate need not be whole. */
 	device->rate = rate;
+	return 0;
+}
+
+/* What the device has set itself to in the end.  A card's nominal rate need not be whole, but the one asked for. */
+static int check_rate(struct alsa_device *device, const snd_pcm_hw_params_t *params)
+{
+	const double asked = device->rate;
+	unsigned numerator = 0, denominator = 0;
+
 	if (snd_pcm_hw_params_get_rate_numden(params, &numerator, &denominator) >= 0 && denominator)
 		device->rate = (double)numerator / denominator;
-	return 0;
+	if (fabs(device->rate - asked) < 1)
+		return 0;
+	log_error("rate_hz: \"%s\" runs at %.9g where %.9g was asked for and granted", device->name, device->rate, asked);
+	return -EINVAL;
 }
 
 /* The buffer first: what it can hold matters more than how often it is emptied. */
@@ -189,6 +265,8 @@ static int configure_hardware(struct alsa_device *device, const struct setting_v
 			snd_strerror(ret));
 		return ret;
 	}
+	if ((ret = check_rate(device, params)) < 0)
+		return ret;
 	snd_pcm_hw_params_get_period_size(params, &period, NULL);
 	snd_pcm_hw_params_get_buffer_size(params, &buffer);
 	/* Never wait for more than half of what the device holds: a full one is an overrun. */
@@ -214,13 +292,40 @@ static int configure_software(struct alsa_device *device)
 	return ret < 0 ? refused(device, "its set-up", ret) : 0;
 }
 
+/* What alsa-lib calls the PCM, and what sentences and the sidecar do. */
+static int name_pcm(struct alsa_device *device, const struct setting_value *values, char *pcm, size_t size)
+{
+	const char *wanted = values[ALSA_CARD].text;
+	struct sound_card card;
+
+	if (!wanted || !*wanted) {
+		snprintf(pcm, size, "%s", values[ALSA_DEVICE].text);
+		snprintf(device->name, sizeof(device->name), "%.127s", pcm);
+		return 0;
+	}
+	if (values[ALSA_DEVICE].given) {
+		log_error("card: \"%s\" and device = \"%s\" are both given; one of them says where samples come from", wanted,
+			values[ALSA_DEVICE].text);
+		return -EINVAL;
+	}
+	const int ret = sound_cards_find(&card, wanted);
+	if (ret < 0)
+		return ret;
+	snprintf(pcm, size, "hw:%d,%lld", card.number, values[ALSA_PCM].integer);
+	device->card = card.number;
+	device->card_pcm = values[ALSA_PCM].integer;
+	snprintf(device->name, sizeof(device->name), "%s at %s, %.16s", card.id, card.path[0] ? card.path : "no path", pcm);
+	return 0;
+}
+
 int alsa_device_open(struct alsa_device *device, const struct setting_value *values)
 {
+	char pcm[1024];
 	int ret;
 
 	snd_lib_error_set_handler(chatter);
-	*device = (struct alsa_device){ .name = values[ALSA_DEVICE].text };
-	if ((ret = open_pcm(device)) < 0)
+	*device = (struct alsa_device){ .card = -1 };
+	if ((ret = name_pcm(device, values, pcm, sizeof(pcm))) < 0 || (ret = open_pcm(device, pcm)) < 0)
 		return ret;
 	if ((ret = configure_hardware(device, values)) < 0 || (ret = configure_software(device)) < 0) {
 		snd_pcm_close(device->pcm);

@@ -8,6 +8,7 @@
 #include <math.h>
 #include <poll.h>
 #include <stdint.h>
+#include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
 #include <sys/syscall.h>
@@ -22,15 +23,18 @@
  */
 static struct card {
 	int64_t now;                    /* CLOCK_MONOTONIC, ns */
+	int64_t slept;                  /* CLOCK_BOOTTIME is so much ahead; the crystal goes on in sleep */
 	double rate;
 	int64_t position;               /* number of the next sample to be read */
 	int64_t capacity;
 	int64_t on_the_way;             /* sampled, not yet in the buffer */
-	enum { RUNS, OVERRUN, ASLEEP, GONE } state;
+	enum { RUNS, OVERRUN, ASLEEP, GONE, STOPPED } state;
+	bool dropped, stays_dead;
 	enum { OWN, NONE, OTHER_CLOCK } stamps;
 	int resume_again, resume_result, prepare_result, wait_result;
 	int restarts, polls;
-	bool wakes_in_vain;
+	bool wakes_in_vain, mute;
+	unsigned numerator, denominator;        /* of the rate it has set itself to; 0: as asked */
 	unsigned formats;               /* bit k: enum sample_type k */
 } card;
 
@@ -38,19 +42,23 @@ static struct probe probe;
 
 int clock_gettime(clockid_t clock, struct timespec *out)
 {
-	if (clock != CLOCK_MONOTONIC)
+	const int64_t ns = card.now + (clock == CLOCK_BOOTTIME ? card.slept : 0);
+
+	if (clock != CLOCK_MONOTONIC && clock != CLOCK_BOOTTIME)
 		return (int)syscall(SYS_clock_gettime, clock, out);
-	*out = (struct timespec){ card.now / 1000000000, card.now % 1000000000 };
+	*out = (struct timespec){ ns / 1000000000, ns % 1000000000 };
 	return 0;
 }
 
 static int64_t sampled(void)
 {
-	return (int64_t)floor((double)card.now * 1e-9 * card.rate) - card.on_the_way;
+	return (int64_t)floor((double)(card.now + card.slept) * 1e-9 * card.rate) - card.on_the_way;
 }
 
 static int64_t waiting(void)
 {
+	if (card.mute)
+		return 0;
 	if (card.state == RUNS && sampled() - card.position >= card.capacity)
 		card.state = OVERRUN;
 	return sampled() > card.position ? sampled() - card.position : 0;
@@ -59,7 +67,18 @@ static int64_t waiting(void)
 static int trouble(void)
 {
 	waiting();
-	return card.state == RUNS ? 0 : card.state == OVERRUN ? -EPIPE : card.state == ASLEEP ? -ESTRPIPE : -ENODEV;
+	switch (card.state) {
+	case RUNS:
+		return 0;
+	case OVERRUN:
+		return -EPIPE;
+	case ASLEEP:
+		return -ESTRPIPE;
+	case STOPPED:
+		return -EBADFD;
+	default:
+		return -ENODEV;
+	}
 }
 
 /* Only the intake waits here: time passes until a block is there, or with no descriptor for the whole of it. */
@@ -96,11 +115,14 @@ int snd_pcm_poll_descriptors_revents(snd_pcm_t *pcm, struct pollfd *descriptors,
 	return 0;
 }
 
+/* The kernel's answer in a state without frames: none, and no error. */
 snd_pcm_sframes_t snd_pcm_avail_update(snd_pcm_t *pcm)
 {
 	(void)pcm;
 	if (card.wait_result)
 		return card.wait_result;
+	if (trouble() == -EBADFD)
+		return 0;
 	return trouble() ? trouble() : waiting();
 }
 
@@ -126,7 +148,7 @@ snd_pcm_sframes_t snd_pcm_status_get_delay(const snd_pcm_status_t *status)
 void snd_pcm_status_get_htstamp(const snd_pcm_status_t *status, snd_htimestamp_t *out)
 {
 	const double other = card.stamps == OTHER_CLOCK ? 1.9e9 : 0;   /* as CLOCK_REALTIME is */
-	const double seconds = (double)(sampled() + card.on_the_way) / card.rate + other;
+	const double seconds = (double)(sampled() + card.on_the_way) / card.rate - (double)card.slept * 1e-9 + other;
 	const int64_t ns = card.stamps == NONE ? 0 : llround(seconds * 1e9);
 
 	(void)status;
@@ -159,17 +181,27 @@ int snd_pcm_hw_params_test_format(snd_pcm_t *pcm, snd_pcm_hw_params_t *params, s
 	return -EINVAL;
 }
 
+int snd_pcm_hw_params_get_rate_numden(const snd_pcm_hw_params_t *params, unsigned *numerator, unsigned *denominator)
+{
+	(void)params;
+	*numerator = card.denominator ? card.numerator : 48000;
+	*denominator = card.denominator ? card.denominator : 1;
+	return 0;
+}
+
 int snd_pcm_prepare(snd_pcm_t *pcm)
 {
 	(void)pcm;
-	return card.prepare_result;
+	return card.state == GONE ? -ENODEV : card.prepare_result;
 }
 
 int snd_pcm_start(snd_pcm_t *pcm)
 {
 	(void)pcm;
+	assert_true(card.dropped);      /* one that runs must be stopped first */
+	card.dropped = false;
 	card.position = sampled() + card.on_the_way + 1;
-	card.state = RUNS;
+	card.state = card.stays_dead ? STOPPED : RUNS;
 	card.restarts++;
 	return 0;
 }
@@ -177,16 +209,18 @@ int snd_pcm_start(snd_pcm_t *pcm)
 int snd_pcm_drop(snd_pcm_t *pcm)
 {
 	(void)pcm;
+	card.dropped = true;
 	return 0;
 }
 
+/* Resumed, it goes on with what its buffer held before the sleep. */
 int snd_pcm_resume(snd_pcm_t *pcm)
 {
 	(void)pcm;
 	if (card.resume_again-- > 0)
 		return -EAGAIN;
 	if (card.resume_result == 0)
-		snd_pcm_start(pcm);
+		card.state = RUNS;
 	return card.resume_result;
 }
 
@@ -200,6 +234,8 @@ snd_pcm_state_t snd_pcm_state(snd_pcm_t *pcm)
 		return SND_PCM_STATE_SUSPENDED;
 	case -ENODEV:
 		return SND_PCM_STATE_DISCONNECTED;
+	case -EBADFD:
+		return SND_PCM_STATE_SETUP;
 	default:
 		return SND_PCM_STATE_RUNNING;
 	}
@@ -234,6 +270,11 @@ static int read_block(struct block *block)
 static int64_t offset(const struct block *block)
 {
 	return *(const int32_t *)block->frames - (int64_t)block->first;
+}
+
+static double taken_ns(const struct block *block)
+{
+	return (double)*(const int32_t *)block->frames / card.rate * 1e9 - (double)card.slept;
 }
 
 /* Reads for some time, all of it in one piece; the offset. */
@@ -280,6 +321,7 @@ static void an_overrun_becomes_a_gap_of_its_length(void **state)
 	for (size_t k = 0; k < sizeof(stalls) / sizeof(stalls[0]); k++) {
 		card.now += llround(stalls[k] * 1e9);
 		read_gap(&block);
+		assert_int_equal(block.flags, BLOCK_GAP | BLOCK_OVERRUN);
 		assert_int_equal(offset(&block), straight);
 		assert_int_equal(read_for(3), straight);
 		assert_int_equal(card.restarts, k + 2);
@@ -327,9 +369,133 @@ static void a_suspended_card_resumes_or_is_restarted(void **state)
 			card.now += 900000000;
 		}
 		read_gap(&block);
+		assert_int_equal(block.flags, BLOCK_GAP | BLOCK_SLEPT);
 		assert_int_equal(offset(&block), straight);
 		assert_int_equal(card.restarts, 2);
 	}
+}
+
+/* CLOCK_MONOTONIC stands still meanwhile; the gap is as long as the sleep, whether the card's driver says so or not. */
+static void a_computer_that_slept_leaves_a_gap_of_true_length(void **state)
+{
+	static const double sleeps[] = { 0.02, 0.3, 40, 30000 };
+	struct block block;
+
+	(void)state;
+	for (int silent = 0; silent < 2; silent++)
+		for (size_t k = 0; k < sizeof(sleeps) / sizeof(sleeps[0]); k++) {
+			start_card(48000);
+			const int64_t straight = read_for(3.005);
+			card.slept += llround(sleeps[k] * 1e9);
+			if (silent)     /* it never stopped: its buffer holds old and new frames */
+				card.position = sampled() - 1000;
+			else
+				card.state = ASLEEP;
+			read_gap(&block);
+			assert_int_equal(block.flags, BLOCK_GAP | BLOCK_SLEPT);
+			assert_int_equal(offset(&block), straight);
+			assert_true(fabs((double)block.host_ns - taken_ns(&block)) <= 2);
+			assert_int_equal(read_for(1), straight);
+		}
+}
+
+static void a_card_that_stopped_by_itself_is_started_again(void **state)
+{
+	struct block block;
+
+	(void)state;
+	start_card(48000);
+	const int64_t straight = read_for(1);
+	card.state = STOPPED;
+	card.now += 250000000;
+	read_gap(&block);
+	assert_int_equal(block.flags, BLOCK_GAP | BLOCK_STALLED);
+	assert_int_equal(offset(&block), straight);
+	/* One that stops as often as it is started is given up, without taking the core away meanwhile. */
+	card.stays_dead = true;
+	card.state = STOPPED;
+	const int before = card.restarts;
+	const int64_t from = card.now;
+	int ret = 0;
+	for (int k = 0; k < 100 && ret == 0; k++)
+		ret = read_block(&block);
+	assert_int_equal(ret, -EBADFD);
+	assert_int_equal(card.restarts - before, 5);
+	assert_true(card.now - from >= 40000000);
+}
+
+static void a_card_that_falls_silent_is_started_again(void **state)
+{
+	struct block block;
+
+	(void)state;
+	start_card(48000);
+	const int64_t straight = read_for(1), before = card.now;
+	card.mute = true;
+	for (int k = 0; k < 30 && card.mute; k++) {
+		assert_int_equal(read_block(&block), 0);
+		card.mute = card.restarts < 2;
+	}
+	assert_false(card.mute);
+	assert_in_range(card.now - before, 2000000000, 2200000000);
+	read_gap(&block);
+	assert_int_equal(block.flags, BLOCK_GAP | BLOCK_STALLED);
+	assert_int_equal(offset(&block), straight);
+	/* In vain: opening it anew is all that is left. */
+	card.mute = true;
+	int ret = 0;
+	for (int k = 0; k < 200 && ret == 0; k++)
+		ret = read_block(&block);
+	assert_int_equal(ret, -ETIMEDOUT);
+	probe.driver->explain(probe.intake, probe.explanation, sizeof(probe.explanation));
+	assert_non_null(strstr(probe.explanation, "\"nothing\" has delivered nothing since"));
+}
+
+static void a_card_at_another_rate_than_granted_is_said(void **state)
+{
+	static const double rates[] = { 44100, 96000, 47000 };
+	struct block block;
+
+	(void)state;
+	for (size_t k = 0; k < sizeof(rates) / sizeof(rates[0]); k++) {
+		char said[128];
+		int ret = 0;
+
+		start_card(48000);
+		card.rate = rates[k];
+		card.position = sampled();
+		for (int n = 0; n < 5000 && ret >= 0; n++)
+			ret = read_block(&block);
+		assert_int_equal(ret, -ERANGE);
+		assert_in_range(card.now, 17000000000, 17200000000);
+		probe.driver->explain(probe.intake, probe.explanation, sizeof(probe.explanation));
+		snprintf(said, sizeof(said), "\"nothing\" gives %.0f frames a second where 48000 were granted", rates[k]);
+		assert_string_equal(probe.explanation, said);
+	}
+	/* A crystal that is merely bad is none of that, and neither are frames that got lost. */
+	start_card(48000 * 1.0009);
+	read_for(100);
+	for (int k = 0; k < 10; k++) {
+		card.position += 4800;
+		card.now += 100000000;
+		read_for(5);
+	}
+}
+
+/* What the hardware was set to in the end, in the kernel's own fraction. */
+static void a_rate_that_comes_out_otherwise_is_refused(void **state)
+{
+	(void)state;
+	start_card(48000);
+	probe_reset(&probe);
+	probe_text(&probe, "device", "nothing");
+	card.numerator = 48000 * 999;
+	card.denominator = 1000;
+	assert_int_equal(probe_open(&probe), -EINVAL);
+	assert_non_null(strstr(probe.said, "rate_hz: \"nothing\" runs at 47952 where 48000 was asked for and granted"));
+	card.numerator = 47999500;
+	assert_int_equal(probe_open(&probe), 0);
+	assert_true(probe.intake->rate == 47999.5);
 }
 
 static void a_card_that_has_gone_is_said(void **state)
@@ -366,12 +532,16 @@ static void a_card_that_has_gone_is_said(void **state)
 	assert_int_equal(probe.driver->start(probe.intake), -ENODEV);
 	assert_non_null(strstr(probe.said, "device: \"nothing\" does not start: No such device"));
 	card.prepare_result = 0;
+	card.state = STOPPED;
 	assert_int_equal(probe.driver->start(probe.intake), 0);
 	assert_int_equal(read_block(&block), 1);
 	assert_int_equal(block.first, 0);
 
 	card.wait_result = -EIO;
-	assert_int_equal(read_block(&block), -EIO);
+	int ret = 0;
+	for (int k = 0; k < 20 && ret == 0; k++)
+		ret = read_block(&block);
+	assert_int_equal(ret, -EIO);
 	probe.driver->explain(probe.intake, probe.explanation, sizeof(probe.explanation));
 	assert_non_null(strstr(probe.explanation, "failed after 48"));
 	assert_non_null(strstr(probe.explanation, "Input/output error"));
@@ -427,11 +597,6 @@ static void woken_in_vain_it_neither_spins_nor_overstays(void **state)
 	assert_in_range(card.polls, 1, 210);
 }
 
-static double taken_ns(const struct block *block)
-{
-	return (double)*(const int32_t *)block->frames / card.rate * 1e9;
-}
-
 static void the_cards_own_stamps_are_exact(void **state)
 {
 	struct block block;
@@ -477,6 +642,11 @@ int main(void)
 		cmocka_unit_test(a_stall_within_the_buffer_loses_nothing),
 		cmocka_unit_test(a_card_off_by_100_ppm_still_counts_its_gap),
 		cmocka_unit_test(a_suspended_card_resumes_or_is_restarted),
+		cmocka_unit_test(a_computer_that_slept_leaves_a_gap_of_true_length),
+		cmocka_unit_test(a_card_that_stopped_by_itself_is_started_again),
+		cmocka_unit_test(a_card_that_falls_silent_is_started_again),
+		cmocka_unit_test(a_card_at_another_rate_than_granted_is_said),
+		cmocka_unit_test(a_rate_that_comes_out_otherwise_is_refused),
 		cmocka_unit_test(a_card_that_has_gone_is_said),
 		cmocka_unit_test(a_silent_card_times_out),
 		cmocka_unit_test(woken_in_vain_it_neither_spins_nor_overstays),

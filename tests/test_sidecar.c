@@ -30,6 +30,9 @@ static void hear(void *context, enum log_level level, const char *sentence)
 
 /* ------------------------------------------------------------------ one of everything, no two values the same */
 
+static struct sidecar_control controls[] = {
+	{ "Mic Capture Volume", "23/20 of 0 to 39" }, { "Input \xc3\xa9 \"2\"", "Line, \\" },
+};
 static struct sidecar_channel channels[] = {
 	{ .name = "diode", .column = 0, .measure = MEASURE_CHOPPED, .polarity = -1, .wavelength_m = 620e-9,
 	  .passband_m = 120e-9, .aperture_m = 0.28, .integration_s = 1e-4 / 3, .low_pass_s = 2e-5 / 7, .high_pass_hz = 0.1,
@@ -68,7 +71,7 @@ static struct sidecar everything(void)
 		.end = { .when = { INT64_C(1932773040000000003) }, .sigma_s = NAN, .quality = TIME_HOST,
 			.terms = { 5.5e-8, 6.5e-8, NAN, 8.5e-8 } },
 		.true_rate = 191992.3200000001, .boot_id = "0123456789abcdef0123456789abcdef", .monotonic_ns = 5123456789012345,
-		.clipped = 17,
+		.clipped = 17, .controls = 2, .control = controls,
 		.channels = 2, .channel = channels, .expecteds = 1, .expected = expecteds, .parts = 2, .part = parts,
 		.gaps = 2, .gap = gaps, .losses = 2, .loss = losses, .pulses = 2, .pulse = pulses, .contacts = 1, .contact = contacts,
 	};
@@ -128,6 +131,11 @@ static void assert_same_lists(const struct sidecar *a, const struct sidecar *b)
 	for (size_t k = 0; k < a->losses; k++)
 		assert_true(a->loss[k].after == b->loss[k].after && a->loss[k].before == b->loss[k].before &&
 		            a->loss[k].frames == b->loss[k].frames && a->loss[k].sigma_frames == b->loss[k].sigma_frames);
+	assert_int_equal(a->controls, b->controls);
+	for (size_t k = 0; k < a->controls; k++) {
+		assert_string_equal(a->control[k].name, b->control[k].name);
+		assert_string_equal(a->control[k].value, b->control[k].value);
+	}
 	assert_true(a->expecteds == b->expecteds && a->parts == b->parts && a->gaps == b->gaps && a->pulses == b->pulses);
 	for (size_t k = 0; k < a->expecteds; k++) {
 		const struct sidecar_expected *x = &a->expected[k], *y = &b->expected[k];
@@ -216,7 +224,8 @@ static unsigned tried;
 /* Not in the first sidecars. */
 static bool optional(const char *name)
 {
-	return !strcmp(name, "silent_losses") || !strcmp(name, "response_delay_s") || !strcmp(name, "boot");
+	return !strcmp(name, "silent_losses") || !strcmp(name, "response_delay_s") || !strcmp(name, "boot") ||
+		!strcmp(name, "mixer");
 }
 
 /* Every member below `at` in turn missing and of a type that nothing has there. */
@@ -309,6 +318,8 @@ static void a_value_out_of_range_is_named(void **state)
 		{ "channels", "measure", "\"\"", "channels[0].measure" },
 		{ "channels", "polarity", "2", "channels[0].polarity" },
 		{ "channels", "wavelength_m", "-1e-9", "channels[0].wavelength_m" },
+		{ "mixer", "name", "1", "mixer[0].name" },
+		{ "mixer", "value", "\"1234567890123456789012345678901234567890123456789012345678901234\"", "mixer[0].value" },
 		{ "expected", "kind", "\"Immersion\"", "expected[0].kind" },
 		{ "expected", "tai_ns", "9223372036854775807", "expected[0].tai_ns" },
 		{ "expected", "sigma_s", "-1", "expected[0].sigma_s" },
@@ -371,8 +382,10 @@ static void a_newer_format_is_refused_an_unknown_member_passed_over(void **state
 
 	(void)state;
 	json_object_set_new(root, "weather", json_string("clear"));
+	json_object_del(root, "mixer");         /* as before it was invented */
 	text = json_dumps(root, 0);
 	assert_int_equal(sidecar_parse(&out, text, strlen(text), "x.json"), 0);
+	assert_true(out.controls == 0 && !out.control);
 	sidecar_clear(&out);
 	free(text);
 	json_object_set_new(root, "format", json_integer(SIDECAR_FORMAT + 1));

@@ -22,14 +22,24 @@ static double ahead_ns(const struct stamp_line *line, struct stamp_point stamp, 
 	return ((double)frame - (double)stamp.frame) / line->rate * 1e9;
 }
 
+/* From a stamp to now; 0 when that is too short. */
+static double rate_since(struct stamp_point stamp, uint64_t frame, int64_t ns, double least_s)
+{
+	const double seconds = (double)(ns - stamp.ns) * 1e-9;
+
+	return seconds >= least_s ? (double)(frame - stamp.frame) / seconds : 0;
+}
+
+double stamp_line_recent_rate(const struct stamp_line *line, uint64_t frame, int64_t ns)
+{
+	return line->started ? rate_since(line->before, frame, ns, 1) : 0;
+}
+
 static void measure_rate(struct stamp_line *line, uint64_t frame, int64_t ns)
 {
-	const double seconds = (double)(ns - line->first.ns) * 1e-9;
+	const double rate = rate_since(line->first, frame, ns, min_baseline_s);
 
-	if (seconds < min_baseline_s)
-		return;
-	const double rate = (double)(frame - line->first.frame) / seconds;
-	if (fabs(rate / line->nominal - 1) <= max_rate_error)
+	if (rate > 0 && fabs(rate / line->nominal - 1) <= max_rate_error)
 		line->rate = rate;
 }
 

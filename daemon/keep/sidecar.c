@@ -20,6 +20,7 @@ const char *const sample_words[] = { "S16", "S24_3", "S24", "S32", "FLOAT", NULL
 
 void sidecar_clear(struct sidecar *s)
 {
+	free(s->control);
 	free(s->channel);
 	free(s->expected);
 	free(s->part);
@@ -70,6 +71,16 @@ static json_t *reading(const struct clock_reading *r)
 	json_object_set_new(o, "delay_s", number(r->terms.delay));
 	json_object_set_new(o, "label_s", number(r->terms.label));
 	return o;
+}
+
+static json_t *mixer(const struct sidecar *s)
+{
+	json_t *array = json_array();
+
+	for (size_t k = 0; k < s->controls; k++)
+		json_array_append_new(array, json_pack("{s:o,s:o}", "name", words(s->control[k].name), "value",
+			words(s->control[k].value)));
+	return array;
 }
 
 static json_t *channels(const struct sidecar *s)
@@ -220,6 +231,7 @@ static json_t *build(const struct sidecar *s)
 	json_object_set_new(o, "intake", json_pack("{s:o,s:o,s:o,s:o,s:o}", "driver", words(s->driver),
 		"device", words(s->device), "sample", words(sample_words[s->frames.type]),
 		"channels", count(s->frames.channels), "rate_hz", number(s->rate)));
+	json_object_set_new(o, "mixer", mixer(s));
 	json_object_set_new(o, "reason", words(reason_words[s->reason]));
 	json_object_set_new(o, "first_frame", count(s->first));
 	json_object_set_new(o, "parts", parts(s));

@@ -156,6 +156,14 @@ static void *array(struct reader *r, json_t *o, const char *name, size_t most, s
 
 /* ------------------------------------------------------------------ elements */
 
+static void read_control(struct reader *r, json_t *o, void *out)
+{
+	struct sidecar_control *c = out;
+
+	text(r, o, "name", c->name, sizeof(c->name));
+	text(r, o, "value", c->value, sizeof(c->value));
+}
+
 static void read_channel(struct reader *r, json_t *o, void *out)
 {
 	struct sidecar_channel *c = out;
@@ -337,6 +345,8 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 		return;
 	}
 	read_head(r, root, s);
+	if (json_object_get(root, "mixer"))     /* what was recorded before it was invented is read all the same */
+		s->control = array(r, root, "mixer", 1000, sizeof(*s->control), &s->controls, read_control);
 	s->part = array(r, root, "parts", 100000, sizeof(*s->part), &s->parts, read_part);
 	s->gap = array(r, root, "gaps", 1000000, sizeof(*s->gap), &s->gaps, read_gap);
 	if (json_object_get(root, "silent_losses"))     /* not in the first sidecars */

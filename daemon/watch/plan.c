@@ -134,6 +134,7 @@ static int sidecar_copy(struct sidecar *out, const struct sidecar *from)
 	struct sidecar s = *from;
 	bool ok = true;
 
+	s.control = copy_array(from->control, from->controls, sizeof(*from->control), &ok);
 	s.channel = copy_array(from->channel, from->channels, sizeof(*from->channel), &ok);
 	s.expected = copy_array(from->expected, from->expecteds, sizeof(*from->expected), &ok);
 	s.part = copy_array(from->part, from->parts, sizeof(*from->part), &ok);

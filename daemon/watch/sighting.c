@@ -338,6 +338,18 @@ static void describe_contacts(const struct listener *l, struct plan *plan, struc
 	s->contacts = plan->contacts;
 }
 
+static void describe_mixer(const struct intake *intake, struct sidecar *s)
+{
+	s->control = calloc(intake->controls + 1, sizeof(*s->control));
+	for (size_t k = 0; s->control && k < intake->controls; k++) {
+		const struct intake_control *from = &intake->control[k];
+		struct sidecar_control *to = &s->control[s->controls++];
+
+		snprintf(to->name, sizeof(to->name), "%s", from->name);
+		snprintf(to->value, sizeof(to->value), "%s", from->value);
+	}
+}
+
 /* A fresh sidecar of the plan as known now. */
 static void describe(struct listener *l, struct plan *plan, bool final)
 {
@@ -359,6 +371,7 @@ static void describe(struct listener *l, struct plan *plan, bool final)
 	snprintf(s.device, sizeof(s.device), "%s", face.name);
 	for (size_t k = 0; k < l->lanes; k++)
 		s.clipped += lane_clipped(l->lane[k]);
+	describe_mixer(&face, &s);
 	describe_channels(l, &s);
 	describe_expected(l, plan, &s);
 	describe_clock(l, plan, end, &s);

@@ -16,6 +16,10 @@ struct intake;
 enum block_flag {
 	BLOCK_GAP        = 1 << 0,      /* frames were lost just before this block; `first` counts them */
 	BLOCK_STAMP_LATE = 1 << 1,      /* host_ns is an upper limit: taken when the block arrived */
+	/* With BLOCK_GAP, why, where the driver knows. */
+	BLOCK_OVERRUN    = 1 << 2,      /* the device held all it can and was not read in time */
+	BLOCK_SLEPT      = 1 << 3,      /* device or computer slept; the gap has the length of true time, not of host_ns */
+	BLOCK_STALLED    = 1 << 4,      /* the device stopped by itself, or delivered nothing, and was started again */
 };
 
 struct block {                          /* lent by the driver until its next read or stop */
@@ -46,10 +50,14 @@ struct intake_driver {
 	 * NULL: a driver that never has.
 	 */
 	void (*explain)(struct intake *intake, char *sentence, size_t size);
-	/* A device that may be lost and found again: the recorder opens it anew.  open gives -ENODEV or -EBUSY for what may
-	 * pass, -EINVAL for a fault of the configuration. */
+	/* A device that may be lost and found again: the recorder opens it anew, then perhaps with another name and other
+	 * controls.  open gives -ENODEV or -EBUSY for what may pass, -EINVAL for a fault of the configuration. */
 	bool comes_back;
 };
+
+/* A setting of the device itself as it was found: "Mic Capture Volume", "23 of 0 to 39, 11.50 dB". */
+struct intake_control { char name[64], value[64]; };
+enum { INTAKE_CONTROLS = 32 };
 
 struct intake {                         /* first member of every driver's own struct */
 	const struct intake_driver *driver;
@@ -65,6 +73,9 @@ struct intake {                         /* first member of every driver's own st
 		const char *source;     /* "bext", "configuration": for messages */
 	} origin;
 	char     name[128];             /* the device or file, for messages and the sidecar */
+	/* What the device's own controls stood at when it had been opened (gain, input, automatic gain): for the sidecar. */
+	size_t   controls;
+	struct intake_control control[INTAKE_CONTROLS];
 };
 
 extern const struct intake_driver intake_alsa, intake_file, intake_pipe, intake_synthetic;

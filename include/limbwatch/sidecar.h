@@ -42,6 +42,9 @@ struct sidecar_gap { uint64_t first, frames; double sigma_frames; };    /* fille
 /* Frames that neither the file nor its numbers count, somewhere between two frames; negative: given twice. */
 struct sidecar_loss { uint64_t after, before; double frames, sigma_frames; };
 
+/* A control of the device as it was found when it was opened: "Mic Capture Volume", "23 of 0 to 39, 11.50 dB". */
+struct sidecar_control { char name[64], value[64]; };
+
 struct sidecar {
 	int format;
 	char version[32];               /* of limbwatch */
@@ -59,6 +62,7 @@ struct sidecar {
 	char boot_id[33];               /* "": not recorded live */
 	int64_t monotonic_ns;           /* CLOCK_MONOTONIC of frame `first`; INT64_MIN: unknown */
 	/* Arrays are the sidecar's own (malloc), freed by sidecar_clear. */
+	size_t controls;  struct sidecar_control *control;      /* in the file "mixer", which older ones lack */
 	size_t channels;  struct sidecar_channel *channel;
 	size_t expecteds; struct sidecar_expected *expected;
 	size_t parts;     struct sidecar_part *part;

@@ -41,4 +41,11 @@ void stamp_line_add(struct stamp_line *line, uint64_t frame, int64_t ns);
  */
 uint64_t stamp_line_gap(struct stamp_line *line, uint64_t next, int64_t ns);
 
+/**
+ * Frames per second of the last two to four seconds, good to a thousandth when stamps are late by some milliseconds.
+ *
+ * @return 0 when there is less than one second to go by
+ */
+double stamp_line_recent_rate(const struct stamp_line *line, uint64_t frame, int64_t ns);
+
 #endif
