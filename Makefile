@@ -14,7 +14,7 @@ PKG_CONFIG ?= $(CROSS)pkg-config
 PYTHON     ?= /usr/bin/python3
 CFLAGS     ?= -O2 -g
 PREFIX     ?= /usr/local
-SYSCONFDIR ?= $(if $(filter /usr,$(PREFIX)),/etc,$(PREFIX)/etc)
+SYSCONFDIR ?= /etc
 comma      := ,
 BUILD      ?= build$(if $(CROSS),-$(CROSS:-=))$(if $(SAN),-$(subst $(comma),-,$(SAN)))
 
@@ -22,7 +22,7 @@ PKGS       := alsa sndfile libconfig erfa gsl jansson libsystemd
 DEPS_BUILD := gcc libc6-dev make pkg-config libasound2-dev libsndfile1-dev libconfig-dev liberfa-dev \
               libgsl-dev libjansson-dev libsystemd-dev tzdata
 DEPS_CHECK := libcmocka-dev perl python3-numpy python3-scipy sox libsox-fmt-base pulseaudio \
-              libasound2-plugins
+              libasound2-plugins systemd
 DEPS_BENCH := valgrind
 
 # Looked up when a rule needs them, so that `make deps` works before pkg-config is there.
@@ -107,10 +107,26 @@ deps-check:
 deps-bench:
 	$(call install_packages,$(DEPS_BENCH))
 
+# The configuration belongs to the observer: the sample never takes the place of one that is there.  In DESTDIR nothing
+# is started; on the machine itself user, folder and rules are there afterwards, and the recorder is for the observer
+# to start (systemctl enable --now limbwatchd).
 install: all
 	install -D -m 755 $(BUILD)/limbwatchd $(DESTDIR)$(PREFIX)/sbin/limbwatchd
 	install -D -m 755 $(BUILD)/limbwatch $(DESTDIR)$(PREFIX)/bin/limbwatch
-	install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf
+	install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(PREFIX)/share/limbwatch/limbwatch.conf
+	[ -e $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf ] || \
+		install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf
+	install -D -m 644 systemd/limbwatch.sysusers $(DESTDIR)$(PREFIX)/lib/sysusers.d/limbwatch.conf
+	install -D -m 644 systemd/limbwatch.tmpfiles $(DESTDIR)$(PREFIX)/lib/tmpfiles.d/limbwatch.conf
+	install -D -m 644 systemd/60-limbwatch.rules $(DESTDIR)$(PREFIX)/lib/udev/rules.d/60-limbwatch.rules
+	install -d $(DESTDIR)$(PREFIX)/lib/systemd/system
+	sed -e 's#@SBINDIR@#$(PREFIX)/sbin#; s#@DATADIR@#$(PREFIX)/share#; s#@SYSCONFDIR@#$(SYSCONFDIR)#' \
+		systemd/limbwatchd.service > $(BUILD)/limbwatchd.service
+	install -m 644 $(BUILD)/limbwatchd.service $(DESTDIR)$(PREFIX)/lib/systemd/system/limbwatchd.service
+	if [ -z "$(DESTDIR)" ] && [ -d /run/systemd/system ]; then \
+		systemd-sysusers limbwatch.conf && systemd-tmpfiles --create limbwatch.conf && \
+		systemctl daemon-reload && udevadm control --reload && udevadm trigger; \
+	fi
 
 clean:
 	rm -rf build build-*
