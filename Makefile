@@ -2,7 +2,8 @@
 #
 #   make            the programs                  make check      set up, build, run the tests
 #   make demo       set up, build, run the demo   make bench      measurements (ratios, instruction counts)
-#   make deps       install the Debian packages   make install    DESTDIR= PREFIX=
+#   make deps       install the Debian packages   make install    DESTDIR= PREFIX= SYSCONFDIR=
+#   make check-hardware                           tests on a virtual machine with misbehaving devices
 #   SAN=address,undefined | SAN=thread            a sanitised build in a folder of its own
 #   CROSS=aarch64-linux-gnu-                      a cross build in a folder of its own
 
@@ -14,7 +15,7 @@ PKG_CONFIG ?= $(CROSS)pkg-config
 PYTHON     ?= /usr/bin/python3
 CFLAGS     ?= -O2 -g
 PREFIX     ?= /usr/local
-SYSCONFDIR ?= $(if $(filter /usr,$(PREFIX)),/etc,$(PREFIX)/etc)
+SYSCONFDIR ?= /etc
 comma      := ,
 BUILD      ?= build$(if $(CROSS),-$(CROSS:-=))$(if $(SAN),-$(subst $(comma),-,$(SAN)))
 
@@ -22,8 +23,10 @@ PKGS       := alsa sndfile libconfig erfa gsl jansson libsystemd
 DEPS_BUILD := gcc libc6-dev make pkg-config libasound2-dev libsndfile1-dev libconfig-dev liberfa-dev \
               libgsl-dev libjansson-dev libsystemd-dev tzdata
 DEPS_CHECK := libcmocka-dev perl python3-numpy python3-scipy sox libsox-fmt-base pulseaudio \
-              libasound2-plugins
+              libasound2-plugins systemd
 DEPS_BENCH := valgrind
+DEPS_HARDWARE := mmdebstrap busybox-static cpio e2fsprogs kmod bsdextrautils python3-numpy python3-scipy \
+              $(if $(filter arm64,$(shell dpkg --print-architecture)),qemu-system-arm,qemu-system-x86)
 
 # Looked up when a rule needs them, so that `make deps` works before pkg-config is there.
 pkg_cflags  = $(eval pkg_cflags := $$(shell $(PKG_CONFIG) --cflags $(PKGS)))$(pkg_cflags)
@@ -93,6 +96,13 @@ bench: deps-check deps-bench
 run-bench: all $(benches)
 	BUILD=$(BUILD) PYTHON=$(PYTHON) sh tests/bench/run
 
+# The installed recorder on a virtual machine with a Debian kernel, whose card, disks and clock misbehave.
+check-hardware: deps-build deps-hardware
+	$(MAKE) run-check-hardware
+
+run-check-hardware: all
+	BUILD=$(BUILD) PYTHON=$(PYTHON) sh tests/hardware/run
+
 define install_packages
 	@missing=; for p in $(1); do \
 		dpkg-query -W -f '$${Status}\n' $$p 2>/dev/null | grep -q '^install ok installed' || missing="$$missing $$p"; \
@@ -105,22 +115,41 @@ define install_packages
 	fi
 endef
 
-deps: deps-build deps-check deps-bench
+deps: deps-build deps-check deps-bench deps-hardware
 deps-build:
 	$(call install_packages,$(DEPS_BUILD))
 deps-check:
 	$(call install_packages,$(DEPS_BUILD) $(DEPS_CHECK))
 deps-bench:
 	$(call install_packages,$(DEPS_BENCH))
+deps-hardware:
+	$(call install_packages,$(DEPS_HARDWARE))
 
+# The configuration belongs to the observer: the sample never takes the place of one that is there.  In DESTDIR nothing
+# is started; on the machine itself user, folder and rules are there afterwards, and the recorder is for the observer
+# to start (systemctl enable --now limbwatchd).
 install: all
 	install -D -m 755 $(BUILD)/limbwatchd $(DESTDIR)$(PREFIX)/sbin/limbwatchd
 	install -D -m 755 $(BUILD)/limbwatch $(DESTDIR)$(PREFIX)/bin/limbwatch
-	install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf
+	install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(PREFIX)/share/limbwatch/limbwatch.conf
+	[ -e $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf ] || \
+		install -D -m 644 etc/limbwatch.conf $(DESTDIR)$(SYSCONFDIR)/limbwatch/limbwatch.conf
+	install -D -m 644 systemd/limbwatch.sysusers $(DESTDIR)$(PREFIX)/lib/sysusers.d/limbwatch.conf
+	install -D -m 644 systemd/limbwatch.tmpfiles $(DESTDIR)$(PREFIX)/lib/tmpfiles.d/limbwatch.conf
+	install -D -m 644 systemd/60-limbwatch.rules $(DESTDIR)$(PREFIX)/lib/udev/rules.d/60-limbwatch.rules
+	install -d $(DESTDIR)$(PREFIX)/lib/systemd/system
+	sed -e 's#@SBINDIR@#$(PREFIX)/sbin#; s#@DATADIR@#$(PREFIX)/share#; s#@SYSCONFDIR@#$(SYSCONFDIR)#' \
+		systemd/limbwatchd.service > $(BUILD)/limbwatchd.service
+	install -m 644 $(BUILD)/limbwatchd.service $(DESTDIR)$(PREFIX)/lib/systemd/system/limbwatchd.service
+	if [ -z "$(DESTDIR)" ] && [ -d /run/systemd/system ]; then \
+		systemd-sysusers limbwatch.conf && systemd-tmpfiles --create limbwatch.conf && \
+		systemctl daemon-reload && udevadm control --reload && udevadm trigger; \
+	fi
 
 clean:
 	rm -rf build build-*
 
-.PHONY: all tests check run-check demo run-demo bench run-bench deps deps-build deps-check deps-bench install clean
+.PHONY: all tests check run-check demo run-demo bench run-bench deps deps-build deps-check deps-bench deps-hardware \
+        check-hardware run-check-hardware install clean
 .DELETE_ON_ERROR:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

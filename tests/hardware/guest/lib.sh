@@ -1,0 +1,134 @@
+# Shell side of the scenes: claims, the recorder's log and state, the loopback card, the disks.  Sourced, never run.
+# Times are the machine's, which leap over idle waits: a `sleep` here is so much recording, and costs next to nothing.
+passed=0
+failed=0
+mark=
+folder=/var/lib/limbwatch
+config=/etc/limbwatch/limbwatch.conf
+. /scene/truth
+
+note() { echo "# $*"; }
+
+# ok STATUS CLAIM
+ok() {
+	if [ "$1" -eq 0 ]; then
+		passed=$((passed + 1))
+		echo "ok - $2"
+	else
+		failed=$((failed + 1))
+		echo "not ok - $2"
+		said | tail -12 | sed 's/^/#   /'
+	fi
+}
+
+# claim CLAIM COMMAND...: the command succeeds.
+claim() {
+	words=$1
+	shift
+	"$@" > /dev/null 2>&1
+	ok $? "$words"
+}
+
+uptime_s() { cut -d' ' -f1 /proc/uptime; }
+difference() { awk -v a="$1" -v b="$2" 'BEGIN { printf "%.3f", a - b }'; }
+# within VALUE LOW HIGH
+within() { awk -v x="$1" -v a="$2" -v b="$3" 'BEGIN { exit !(x != "" && x + 0 >= a + 0 && x + 0 <= b + 0) }'; }
+
+# until_so SECONDS COMMAND...: waits until the command succeeds.
+until_so() {
+	end=$(awk -v t="$1" '{ print $1 + t }' /proc/uptime)
+	shift
+	until "$@" > /dev/null 2>&1; do
+		within "$(uptime_s)" 0 "$end" || return 1
+		sleep 0.2
+	done
+}
+
+# ------------------------------------------------------------------ the recorder
+
+# From here on `said` is what the recorder's log says.
+from_here() {
+	journalctl --sync
+	mark=$(journalctl -q -n 0 --show-cursor | sed -n 's/^-- cursor: //p')
+}
+said() {
+	journalctl --sync
+	journalctl -q -o cat -u limbwatchd ${mark:+--after-cursor="$mark"}
+}
+says() { said | grep -q -- "$1"; }
+# first_saying PATTERN: the first such line of the log, for the table of faults.
+first_saying() { said | grep -m1 -- "$1" | sed 's/^limbwatchd: //; s/|/,/g' | cut -c1-150; }
+
+property() { systemctl show limbwatchd -p "$1" --value; }
+pid() { property MainPID; }
+active() { [ "$(property ActiveState)" = active ]; }
+
+# state WHAT FILTER: the newest line of that kind on the state socket, through jq.
+state() {
+	perl -MIO::Socket::UNIX -e '
+		my $s = IO::Socket::UNIX->new(Peer => "/run/limbwatch/state.sock") or exit 1;
+		$SIG{ALRM} = sub { exit 1 };
+		alarm 5;
+		while (<$s>) { if (/^\{"what":"$ARGV[0]"/) { print; exit 0 } }
+		exit 1' "$1" | jq -r "$2"
+}
+# state_is WHAT FILTER WORDS
+state_is() { [ "$(state "$1" "$2")" = "$3" ]; }
+recording() { active && state_is disk .writing true && state_is device .state running; }
+frames_lost() { state device .frames_lost; }
+
+# configure [WORDS]: a configuration for the loopback card; WORDS are further groups.  Variables: measure, watching, intake,
+# clock, keep: what stands in those groups.
+configure() {
+	cat > $config <<-END
+		station = { name = "Brackenfold"; };
+		intake = { driver = "alsa"; device = "${device:-hw:Loopback,1,0}"; rate_hz = 48000; channels = 2; format = "S16"; $intake };
+		channels = ( { name = "photodiode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
+			{ name = "gps"; column = 2; measure = "${measure:-aux}"; } );
+		watch = { outside_vigils = ${watching:-false}; vigil_before_s = 12; vigil_after_s = 6; };
+		clock = { ${clock:-host_sigma_s = 0.1;} };
+		keep = { folder = "$folder"; everything = ${everything:-true}; free_mib = 0; $keep };
+		$1
+	END
+}
+
+# begin: a fresh recorder on an empty folder, once it is at work.
+begin_recording() {
+	systemctl stop limbwatchd
+	rm -f $folder/*
+	from_here
+	systemctl start limbwatchd && until_so 20 recording
+}
+
+# The newest sidecar, and what of it.
+sidecar() { jq -r "$1" "$(ls -t $folder/*.json | head -1)"; }
+gap_frames() { cat $folder/*.json | jq -s '[.[].gaps[].frames] | add // 0'; }
+kept_frames() { cat $folder/*.json | jq -s '[.[].parts[].frames] | add // 0'; }
+
+# row FAULT | WHAT HAPPENED | WHAT WAS SAID | FRAMES LOST
+row() { printf '%s\n' "$*" >> /scene/faults; }
+
+# ------------------------------------------------------------------ card and disks
+
+card() { echo snd_aloop.0 > "/sys/bus/platform/drivers/snd_aloop/$1"; }
+
+# play MINUTES: the noise, without a break.
+play() {
+	minute=0
+	while [ $minute -lt "$1" ]; do
+		cat /scene/noise.raw
+		minute=$((minute + 1))
+	done | aplay -q -t raw -f S16_LE -r 48000 -c 2 --buffer-time=400000 -D hw:Loopback,0,0
+}
+# same_as_played FILE SECONDS: so much of the noise, sample for sample and without a break, is in the recording.
+same_as_played() { perl /scene/guest/same.pl "$1" /scene/noise.raw "$2"; }
+
+# disk NAME FIRST LENGTH: a part of the second disk that can be made to fail; MiB.
+disk() { dmsetup create "$1" --table "0 $(($3 * 2048)) linear /dev/vdb $(($2 * 2048))"; }
+# disk_becomes NAME TARGET...
+disk_becomes() {
+	disk=$1
+	shift
+	sectors=$(blockdev --getsz "/dev/mapper/$disk")
+	dmsetup suspend --nolockfs "$disk" && dmsetup load "$disk" --table "0 $sectors $*" && dmsetup resume "$disk"
+}
