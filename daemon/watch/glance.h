@@ -5,6 +5,7 @@
 #include <pthread.h>
 #include "limbwatch/config.h"
 #include "limbwatch/frame_clock.h"
+#include "limbwatch/meter.h"
 
 /* What the signal thread lets others see of it: written now and then, copied by the main thread. */
 
@@ -19,6 +20,8 @@ struct glance_view {
 	int open, next;                 /* expected contacts: whose vigil is open, whose comes next; -1: none */
 	bool busy;                      /* a vigil or an unfinished contact: no time for changes */
 	struct tai next_begin;          /* of the next vigil */
+	bool metered;                   /* levels stands for something */
+	struct meter_report levels;     /* about once a second */
 	uint64_t bins;                  /* of the strip chart since the start; bin k stands in strip[.][k % STRIP_BINS] */
 	double bin_s;
 	struct strip_bin strip[CONFIG_CHANNELS][STRIP_BINS];

@@ -125,6 +125,17 @@ static int create_clock(struct listener *l)
 	return ret;
 }
 
+static int create_meter(struct listener *l)
+{
+	struct meter_settings meter;
+	int ret;
+
+	if (!l->settings.glance)
+		return 0;
+	ret = levels_settings(&meter, l->config, l->settings.intake);
+	return ret < 0 ? ret : meter_create(&l->meter, &meter);
+}
+
 int listener_create(struct listener **out, const struct listener_settings *settings)
 {
 	struct listener *l = calloc(1, sizeof(*l));
@@ -147,6 +158,9 @@ int listener_create(struct listener **out, const struct listener_settings *setti
 		goto destroy;
 	l->settle = (uint64_t)(settle_s * l->rate) + 1;
 	strip_create(&l->strip, l->rate);
+	ret = create_meter(l);
+	if (ret < 0)
+		goto destroy;
 	vigils_create(l);
 	*out = l;
 	return 0;
@@ -163,6 +177,7 @@ void listener_destroy(struct listener *l)
 		lane_destroy(l->lane[k]);
 	pulse_detector_destroy(l->pulses);
 	loss_watch_destroy(l->loss);
+	meter_destroy(l->meter);
 	frame_clock_destroy(l->clock);
 	free(l->samples);
 	free(l->frames);
@@ -269,6 +284,8 @@ static void label_stamps(struct listener *l)
 
 static void add_edge(struct listener *l, const struct pulse_edge *edge)
 {
+	if (l->meter)
+		meter_pulse(l->meter, edge);
 	if (loss_watch_add_edge(l->loss, edge->frame, edge->sigma_frames))
 		l->solved = 0;          /* a loss was found: solve now */
 }
@@ -343,6 +360,8 @@ static void hear(struct listener *l, size_t count, const struct ring_news *news)
 	for (size_t k = 0; k < l->lanes; k++)
 		sightings_add(l, contact, lane_execute(l->lane[k], l->frames, count, news->first, contact, SIGHTINGS));
 	vigils_execute(l, l->frames, count, news->first);
+	if (l->meter)
+		meter_execute(l->meter, l->frames, count, news->first);
 	if (l->settings.glance)
 		strip_execute(&l->strip, l->settings.glance, l->config, l->settings.intake->format, l->frames, count,
 		              news->first, (float *)l->samples);
@@ -406,6 +425,11 @@ static void show(struct listener *l)
 	frame_clock_at(l->clock, (double)l->next_frame, &v->now);
 	frame_clock_summarise(l->clock, &v->clock);
 	show_vigils(l, v);
+	if ((double)(l->next_frame - l->metered) >= l->rate) {
+		meter_read(l->meter, &v->levels);
+		v->metered = true;
+		l->metered = l->next_frame;
+	}
 	pthread_mutex_unlock(&glance->mutex);
 }
 

@@ -4,6 +4,7 @@
 
 #include "lane.h"
 #include "limbwatch/host_clock.h"
+#include "limbwatch/levels.h"
 #include "limbwatch/pulse.h"
 #include "listen.h"
 #include "loss.h"
@@ -56,6 +57,8 @@ struct listener {
 	void *frames;                   /* one chunk */
 	double *samples;
 	struct strip strip;
+	struct meter *meter;            /* NULL: nobody looks */
+	uint64_t metered;               /* frame at the last report of it */
 	uint64_t shown;                 /* frame at the last glance */
 	bool busy;                      /* as shown */
 	struct latency latency;

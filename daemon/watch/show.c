@@ -5,6 +5,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <unistd.h>
+#include "limbwatch/levels.h"
 #include "limbwatch/stamp_line.h"
 #include "report.h"
 #include "service.h"
@@ -176,6 +177,15 @@ static void show_latency(struct shown *shown, const struct acquire *acquire, con
 	publish(shown, "latency", o);
 }
 
+static void show_levels(struct shown *shown, const struct glance_view *v)
+{
+	char *line = v->metered ? levels_json(&v->levels) : NULL;
+
+	if (line)
+		state_publish(shown->state, "levels", line);
+	free(line);
+}
+
 /* What has come since: one line with each channel's bins. */
 static void show_strip(struct shown *shown, const struct glance_view *v)
 {
@@ -248,6 +258,7 @@ void show_round(struct shown *shown, struct device *device, const struct acquire
 	show_device(shown, device, acquire);
 	show_clock(shown, &v);
 	show_vigil(shown, &v, contacts);
+	show_levels(shown, &v);
 	show_disk(shown, keeper);
 	show_latency(shown, acquire, heard);
 }

@@ -128,7 +128,7 @@ def looked_at():
     kinds = [line["what"] for line in lines]
     ok(kinds and kinds[0] == "hello" and lines[0]["station"] == "Brackenfold" and
        lines[0]["channels"] == ["photodiode", "gps"], "a new reader is greeted", kinds[:3])
-    ok({"device", "clock", "vigil", "disk", "latency", "series", "contact"} <= set(kinds), "and told everything", set(kinds))
+    ok({"device", "clock", "vigil", "disk", "latency", "levels", "series", "contact"} <= set(kinds), "and told everything", set(kinds))
     last = {line["what"]: line for line in lines}
     ok(last["clock"]["time_quality"] == "pulse" and last["clock"]["pulses_accepted"] >= 5, "the clock is shown", last["clock"])
     ok(abs(last["contact"]["snr"] - 40) < 12 and last["contact"]["utc"].startswith("2031-04-02T01:23:22.2"),
