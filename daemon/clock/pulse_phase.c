@@ -10,9 +10,9 @@
 #include <math.h>
 #include <stdlib.h>
 #include <string.h>
-#include "limbwatch/pulse_phase.h"
+#include "pulse_phase_inner.h"
 
-enum { LINE = 12, SEEN = 16, LOCK = 5, SHIFTS = 8, STAMPS = 64, RATIOS = 24, PENDING = 5, ENOUGH = 3, ENOUGH_AGAIN = 2, ACQUAINTED = 12 };
+enum { LOCK = 5, PENDING = 5, ENOUGH = 3, ENOUGH_AGAIN = 2, ACQUAINTED = 12 };
 
 static const double least_frames = 0.5;
 static const double sigmas = 6;
@@ -22,47 +22,9 @@ static const double span_s = 12;                /* the first pulses found lie wi
 static const double give_up_s = 10;             /* no pulse in its place for so long: look for pulses anew */
 static const double outage_s = 900;             /* the line is no guide after that */
 static const double again_s = 60;               /* after one jump the next needs two edges only */
-static const double wild = 3;
+static const double wild = 3;                   /* pulses so much worse than stated are no Gaussian that is known */
 static const double rough_s = 1e-4;             /* no pulse scatters by more */
-static const double whole_frame = 0.02;         /* by so much an edge depends on where in a frame it falls */
-static const double doubled_s = 0.1;            /* more than a buffer is not given twice: it was lost */
-
-struct edge { double at, sigma, k; };
-
-/* Edges off their place by the same amount. */
-struct shift {
-	double sum, first_off, last_off;
-	double first, first_k, last_k, sigma;   /* first: frame as counted by the card */
-	double frames[LINE];            /* of the edges themselves, newest LINE at most */
-	double edge_sigma[LINE], k[LINE];
-	int count;
-};
-
-/* |Distance from the line| over sigma of the newest pulses. */
-struct ratios { int count; double of[RATIOS]; };
-
-struct stamp { double frame, seconds; bool late; };
-
-struct pulse_phase {
-	struct pulse_phase_settings settings;
-	double lost;                    /* jumps so far */
-	int line;                       /* 0: no pulses found */
-	struct edge pulse[LINE];
-	double newest;                  /* frame of the newest pulse in its place, as counted by the card */
-	double origin, slope, middle;   /* frame `origin` + slope (k - middle) */
-	double variance, slope_variance;
-	double scatter;                 /* how much larger the pulses' scatter is than stated */
-	struct ratios ratio, pending;   /* pending: of edges off their place that may be pulses worse than stated */
-	int seen;                       /* edges since there was a line, for finding one */
-	struct edge edge[SEEN];
-	int shifts;
-	struct shift shift[SHIFTS];
-	double jumped;                  /* frame of the newest jump */
-	bool gap;                       /* declared, and not passed by an edge yet */
-	double first_gap, newest_gap;   /* frames, of those */
-	int stamps;
-	struct stamp stamp[STAMPS];
-};
+static const double least_gate = 0.02;          /* frames: by so much an edge depends on where in a frame it falls */
 
 int pulse_phase_create(struct pulse_phase **out, const struct pulse_phase_settings *s)
 {
@@ -124,8 +86,7 @@ static double place(const struct pulse_phase *p, double k)
 	return p->origin + p->slope * (k - p->middle);
 }
 
-/* Variance of the line at k: what its pulses leave, and how a drift bends it. */
-static double place_variance(const struct pulse_phase *p, double k)
+double phase_place_variance(const struct pulse_phase *p, double k)
 {
 	double dk = k - p->middle, bend = 0.5 * drift * dk * dk * p->slope;
 
@@ -151,7 +112,7 @@ static void measure_scatter(struct pulse_phase *p)
 
 static void note_ratio(struct pulse_phase *p, double ratio)
 {
-	struct ratios *r = &p->ratio;
+	struct phase_ratios *r = &p->ratio;
 
 	if (r->count == RATIOS)
 		memmove(r->of, r->of + 1, --r->count * sizeof(*r->of));
@@ -174,7 +135,7 @@ static double off_place(const struct pulse_phase *p, double at, double *k)
 	return at - place(p, *k);
 }
 
-static void keep(struct pulse_phase *p, const struct edge *edge)
+static void keep(struct pulse_phase *p, const struct phase_edge *edge)
 {
 	if (p->line == LINE)
 		memmove(p->pulse, p->pulse + 1, --p->line * sizeof(*p->pulse));
@@ -188,7 +149,7 @@ static void keep(struct pulse_phase *p, const struct edge *edge)
 /* ------------------------------------------------------------------ finding pulses */
 
 /* Whole seconds from a to b at that rate, or 0 when they do not fit. */
-static double seconds_between(const struct edge *a, const struct edge *b, double rate, double slack)
+static double seconds_between(const struct phase_edge *a, const struct phase_edge *b, double rate, double slack)
 {
 	double n = rint((b->at - a->at) / rate);
 
@@ -196,9 +157,9 @@ static double seconds_between(const struct edge *a, const struct edge *b, double
 }
 
 /* Takes the edges that keep whole seconds with the newest one at the rate of one before it. @return how many */
-static int comb(const struct pulse_phase *p, int partner, struct edge out[LINE])
+static int comb(const struct pulse_phase *p, int partner, struct phase_edge out[LINE])
 {
-	const struct edge *newest = &p->edge[p->seen - 1];
+	const struct phase_edge *newest = &p->edge[p->seen - 1];
 	double n = seconds_between(&p->edge[partner], newest, p->settings.rate, p->settings.rate_tolerance * p->settings.rate);
 	double rate = n > 0 ? (newest->at - p->edge[partner].at) / n : 0;
 	int count = 0;
@@ -218,7 +179,7 @@ static int comb(const struct pulse_phase *p, int partner, struct edge out[LINE])
 
 static void find(struct pulse_phase *p)
 {
-	struct edge found[LINE];
+	struct phase_edge found[LINE];
 
 	for (int partner = 0; partner < p->seen - 1; partner++) {
 		int count;
@@ -240,154 +201,43 @@ static void find(struct pulse_phase *p)
 	}
 }
 
-static void note_edge(struct pulse_phase *p, const struct edge *edge)
+static void note_edge(struct pulse_phase *p, const struct phase_edge *edge)
 {
 	if (p->seen == SEEN)
 		memmove(p->edge, p->edge + 1, --p->seen * sizeof(*p->edge));
 	p->edge[p->seen++] = *edge;
 }
 
-/* ------------------------------------------------------------------ stamps */
-
-void pulse_phase_add_stamp(struct pulse_phase *p, double frame, int64_t host_ns, bool late)
-{
-	double seconds = (double)host_ns * 1e-9;
-
-	if (!isfinite(frame) || (p->stamps && frame - p->stamp[p->stamps - 1].frame < 0.25 * p->settings.rate))
-		return;
-	if (p->stamps == STAMPS)
-		memmove(p->stamp, p->stamp + 1, --p->stamps * sizeof(*p->stamp));
-	p->stamp[p->stamps++] = (struct stamp){ frame, seconds, late };
-}
-
-/* Time less frames of the stamps in [from, to]: the least (stamps err late), and their spread. */
-struct offsets { int count; double least, most; bool late; };
-
-static struct offsets offsets_within(const struct pulse_phase *p, double from, double to)
-{
-	struct offsets o = { 0, INFINITY, -INFINITY, false };
-
-	for (int i = 0; i < p->stamps; i++) {
-		double offset = p->stamp[i].seconds - (p->stamp[i].frame - p->newest) / p->slope;
-
-		if (p->stamp[i].frame < from || p->stamp[i].frame > to)
-			continue;
-		o.least = fmin(o.least, offset);
-		o.most = fmax(o.most, offset);
-		o.late |= p->stamp[i].late;
-		o.count++;
-	}
-	return o;
-}
-
-/* What the stamps say was lost, frames; late: perhaps less. */
-struct stamped { double frames, sigma; bool late; };
-
-/* Frames lost between two frames by the stamps. @return false: they do not tell */
-static bool lost_by_stamps(const struct pulse_phase *p, double after, double before, struct stamped *out)
-{
-	struct offsets then = offsets_within(p, after - 15 * p->slope, after), now = offsets_within(p, before, INFINITY);
-
-	if (then.count < 2 || now.count < 1)
-		return false;
-	out->sigma = (0.002 + 0.5 * (then.most - then.least)) * p->slope;
-	out->frames = (now.least - then.least) * p->slope;
-	out->late = now.late;
-	return out->sigma < 0.1 * p->slope;
-}
-
-/* Whatever makes a computer lose frames makes it late as well: too many lost by late stamps is no contradiction. */
-static bool contradicts(const struct pulse_phase *p, const struct stamped *s, double frames, int whole)
-{
-	double excess = s->frames - frames;
-
-	if (excess > 0 && s->late && whole == 1 && frames > -doubled_s * p->slope)
-		return false;
-	return fabs(excess) > sigmas * s->sigma;
-}
-
 /* ------------------------------------------------------------------ jumps */
-
-static double shift_variance(const struct pulse_phase *p, const struct shift *s)
-{
-	double edges = p->scatter * s->sigma;
-
-	return edges * edges / s->count + place_variance(p, 0.5 * (s->first_k + s->last_k));
-}
-
-/* 1: whole frames; 0: not; -1: the pulses are not sharp enough to tell. */
-static int is_whole(double frames, double sigma)
-{
-	if (4 * sigma + whole_frame > 0.35)
-		return -1;
-	return fabs(frames) > least_frames && fabs(frames - rint(frames)) <= 4 * sigma + whole_frame;
-}
-
-/*
- * The pulses say what was lost but for whole seconds.  Without stamps: rather lost than given twice, and rather a whole number
- * of frames.
- */
-static void weigh(const struct pulse_phase *p, const struct shift *s, struct phase_loss *out)
-{
-	double off = -s->sum / s->count, sigma = sqrt(shift_variance(p, s));
-	double usual = off < -doubled_s * p->slope ? off + p->slope : off, other = usual == off ?
-		(off > 0 ? off - p->slope : off + p->slope) : off;
-	struct stamped stamped;
-
-	*out = (struct phase_loss){
-		.after = (uint64_t)fmax(0, ceil(p->newest)), .before = (uint64_t)fmax(0, floor(s->first)), .frames = usual,
-		.sigma_frames = sigma,
-	};
-	if (out->before < out->after)
-		out->before = out->after;
-	if (lost_by_stamps(p, p->newest, s->first, &stamped)) {
-		out->frames = off + rint((stamped.frames - off) / p->slope) * p->slope;
-		out->pulse_moved = contradicts(p, &stamped, out->frames, is_whole(out->frames, sigma));
-		if (out->pulse_moved)
-			out->frames = off;
-	} else if (is_whole(usual, sigma) == 0 && is_whole(other, sigma) == 1) {
-		out->frames = other;
-	}
-	if (!out->pulse_moved && is_whole(out->frames, sigma) == 0) {
-		out->pulse_moved = true;
-		out->frames = off;
-	}
-	if (!out->pulse_moved && is_whole(out->frames, sigma) == 1) {
-		out->frames = rint(out->frames);
-		out->sigma_frames = 0;
-	}
-}
 
 static double wrap(const struct pulse_phase *p, double off)
 {
 	return off - rint(off / p->slope) * p->slope;
 }
 
-static bool agrees(const struct pulse_phase *p, const struct shift *s, double off, double sigma, double k)
+static bool agrees(const struct pulse_phase *p, const struct phase_shift *s, double off, double sigma, double k)
 {
 	double span = k - s->first_k, gate = sigmas * p->scatter * hypot(sigma, s->sigma);
 
-	gate = fmax(gate, whole_frame) + steady * p->slope * span + sigmas * p->scatter * sqrt(p->slope_variance) * span;
+	gate = fmax(gate, least_gate) + steady * p->slope * span + sigmas * p->scatter * sqrt(p->slope_variance) * span;
 	return span > 0 && fabs(wrap(p, off - s->first_off)) <= gate;
 }
 
-static void add_to_shift(struct shift *s, double off, double frame, const struct edge *e)
+static void add_to_shift(struct phase_shift *s, double off, double frame, const struct phase_edge *e)
 {
 	int i = s->count < LINE ? s->count : LINE - 1;
 
 	s->sum += off;
-	s->last_off = off;
 	s->last_k = e->k;
 	s->sigma = fmax(s->sigma, e->sigma);
-	s->frames[i] = frame;
+	s->frame[i] = frame;
 	s->edge_sigma[i] = e->sigma;
-	s->k[i] = e->k;
 	s->count++;
 }
 
-static struct shift *gather(struct pulse_phase *p, double off, double frame, const struct edge *e)
+static struct phase_shift *gather(struct pulse_phase *p, double off, double frame, const struct phase_edge *e)
 {
-	struct shift *s = NULL;
+	struct phase_shift *s = NULL;
 
 	for (int i = 0; i < p->shifts && !s; i++)
 		if (agrees(p, &p->shift[i], off, e->sigma, e->k))
@@ -396,7 +246,7 @@ static struct shift *gather(struct pulse_phase *p, double off, double frame, con
 		if (p->shifts == SHIFTS)
 			memmove(p->shift, p->shift + 1, --p->shifts * sizeof(*p->shift));
 		s = &p->shift[p->shifts++];
-		*s = (struct shift){ .first_off = off, .first = frame, .first_k = e->k };
+		*s = (struct phase_shift){ .first_off = off, .first = frame, .first_k = e->k };
 	} else {
 		off = s->first_off + wrap(p, off - s->first_off);
 	}
@@ -405,7 +255,7 @@ static struct shift *gather(struct pulse_phase *p, double off, double frame, con
 }
 
 /* Losses that follow each other within seconds leave two edges each: two such are taken for what they are. */
-static int needed(const struct pulse_phase *p, const struct shift *s)
+static int needed(const struct pulse_phase *p, const struct phase_shift *s)
 {
 	if (s->first - p->jumped < again_s * p->settings.rate)
 		return ENOUGH_AGAIN;
@@ -415,23 +265,22 @@ static int needed(const struct pulse_phase *p, const struct shift *s)
 	return ENOUGH;
 }
 
-static bool proven(const struct pulse_phase *p, const struct shift *s, int edges, struct phase_loss *loss)
+static bool proven(const struct pulse_phase *p, const struct phase_shift *s, int edges, struct phase_loss *loss)
 {
-	/* Pulses much worse than stated are no Gaussian that is known. */
-	double sigma = sqrt(shift_variance(p, s)) * (p->scatter > wild ? 2 : 1);
+	double sigma = sqrt(phase_shift_variance(p, s, 0)) * (p->scatter > wild ? 2 : 1);
 
 	if (p->ratio.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
 	    fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
 		return false;
-	weigh(p, s, loss);
+	phase_weigh(p, s, loss);
 	/* Two edges will do for whole frames only. */
 	return s->count >= ENOUGH || (!loss->pulse_moved && loss->sigma_frames == 0);
 }
 
 /* The line goes on: the pulses before are put where they would have come, those of the shift join them. */
-static void jump(struct pulse_phase *p, const struct shift *s, const struct phase_loss *loss)
+static void jump(struct pulse_phase *p, const struct phase_shift *s, const struct phase_loss *loss)
 {
-	struct shift joined = *s;
+	struct phase_shift joined = *s;
 	int count = s->count < LINE ? s->count : LINE;
 	double frames = loss->sigma_frames == 0 && !loss->pulse_moved ? loss->frames : -s->sum / s->count, k;
 
@@ -439,7 +288,7 @@ static void jump(struct pulse_phase *p, const struct shift *s, const struct phas
 	p->jumped = s->first;
 	p->pending.count = 0;           /* those edges were no scatter */
 	for (int i = 0; i < count; i++) {
-		struct edge e = { joined.frames[i] + p->lost, joined.edge_sigma[i], 0 };
+		struct phase_edge e = { joined.frame[i] + p->lost, joined.edge_sigma[i], 0 };
 
 		off_place(p, e.at, &k);
 		if (k <= p->pulse[p->line - 1].k)
@@ -449,10 +298,10 @@ static void jump(struct pulse_phase *p, const struct shift *s, const struct phas
 	}
 }
 
-static enum phase_verdict off(struct pulse_phase *p, double distance, double frame, const struct edge *e,
+static enum phase_verdict off(struct pulse_phase *p, double distance, double frame, const struct phase_edge *e,
                               struct phase_loss *loss)
 {
-	const struct shift *s = gather(p, distance, frame, e);
+	const struct phase_shift *s = gather(p, distance, frame, e);
 
 	if (proven(p, s, needed(p, s), loss)) {
 		jump(p, s, loss);
@@ -475,7 +324,7 @@ static void pass_gap(struct pulse_phase *p, double frame)
 
 	if (!p->gap || frame < p->first_gap)
 		return;
-	p->line = p->seen = p->shifts = 0;
+	p->line = p->seen = p->shifts = p->pending.count = 0;
 	while (old < p->stamps && p->stamp[old].frame < p->first_gap)
 		old++;
 	p->stamps -= old;
@@ -486,7 +335,7 @@ static void pass_gap(struct pulse_phase *p, double frame)
 
 void pulse_phase_add_gap(struct pulse_phase *p, double frame, double sigma_frames)
 {
-	if (!(sigma_frames > whole_frame))
+	if (!(sigma_frames > least_gate))
 		return;
 	if (!p->gap)
 		p->first_gap = frame;
@@ -496,21 +345,21 @@ void pulse_phase_add_gap(struct pulse_phase *p, double frame, double sigma_frame
 
 enum phase_verdict pulse_phase_add_edge(struct pulse_phase *p, double frame, double sigma_frames, struct phase_loss *loss)
 {
-	struct edge e = { frame + p->lost, sigma_of(p, sigma_frames), 0 };
+	struct phase_edge e = { frame + p->lost, sigma_of(p, sigma_frames), 0 };
 	double distance, sigma;
 
 	if (!isfinite(frame) || !(sigma_frames >= 0))
 		return PHASE_OFF;
 	pass_gap(p, frame);
 	if (p->line && frame - p->newest > outage_s * p->settings.rate)
-		p->line = p->seen = 0;
+		p->line = p->seen = p->shifts = p->pending.count = 0;
 	if (!p->line) {
 		note_edge(p, &e);
 		find(p);
 		return PHASE_UNKNOWN;
 	}
 	distance = off_place(p, e.at, &e.k);
-	sigma = sqrt(place_variance(p, e.k) + pow(p->scatter * e.sigma, 2));
+	sigma = sqrt(phase_place_variance(p, e.k) + pow(p->scatter * e.sigma, 2));
 	if (e.k <= p->pulse[p->line - 1].k || fabs(distance) > fmax(least_frames, sigmas * sigma))
 		return off(p, distance, frame, &e, loss);
 	note_ratio(p, fabs(distance) / e.sigma);
