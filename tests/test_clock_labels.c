@@ -133,6 +133,38 @@ static void the_rate_of_the_labels_reaches_back(void **state)
 	gsl_rng_free(rng);
 }
 
+/* Stamps that step by packets of a millisecond, by a clock that is known far better: 100 nights of 15 minutes. */
+static void many_labels_are_better_than_one(void **state)
+{
+	gsl_rng *rng = gsl_rng_alloc(gsl_rng_mt19937);
+	double squares = 0, worst = 0;
+	int n = 0;
+
+	(void)state;
+	assert_non_null(rng);
+	gsl_rng_set(rng, 7);
+	for (int night = 0; night < 100; night++) {
+		struct frame_clock *c = make();
+		struct clock_reading r;
+
+		for (int k = 1; k < 900; k++)
+			frame_clock_add_label(c, frame_at(k), tai_s(k + 0.001 * (gsl_rng_uniform(rng) - 0.5)), 1e-5, false, TIME_HOST);
+		frame_clock_solve(c);
+		for (double t = 100; t < 1000; t += 200, n++) {
+			double z = error_at(c, t, &r) / r.sigma_s;
+
+			squares += z * z;
+			worst = fmax(worst, fabs(error_at(c, t, &r)));
+			assert_true(r.sigma_s < 0.002);
+		}
+		frame_clock_destroy(c);
+	}
+	gsl_rng_free(rng);
+	print_message("# seed 7: z rms %.2f, worst %.3f ms\n", sqrt(squares / n), worst * 1e3);
+	/* The drift that is allowed for does not happen here: sigma may be larger than the errors, not smaller. */
+	assert_true(squares / n < 1 + 3 * sqrt(2.0 / 100) && worst < 0.3e-3);
+}
+
 /* ------------------------------------------------------------------ the clock is set */
 
 struct step_case { double step_s, sigma_s; bool late, pulses, told; };       /* told: that the clock was set */
@@ -331,6 +363,7 @@ int main(void)
 	const struct CMUnitTest tests[] = {
 		cmocka_unit_test_setup_teardown(the_date_comes_afterwards, set_up, tear_down),
 		cmocka_unit_test_setup_teardown(the_rate_of_the_labels_reaches_back, set_up, tear_down),
+		cmocka_unit_test_setup_teardown(many_labels_are_better_than_one, set_up, tear_down),
 		cmocka_unit_test_setup_teardown(a_step_is_never_wrong_for_long_without_saying, set_up, tear_down),
 		cmocka_unit_test_setup_teardown(the_second_is_unconfirmed_until_labels_agree, set_up, tear_down),
 		cmocka_unit_test_setup_teardown(two_labels_that_disagree_confirm_nothing, set_up, tear_down),

@@ -6,7 +6,7 @@
 #include "limbwatch/pulse_phase.h"
 
 /* What frame_comb.c (which edges are pulses), frame_clock.c (the smooth), frame_loss.c (frames that no number counts),
- * frame_belief.c (which labels are right) and frame_labels.c (seconds, readings) share.
+ * frame_belief.c (which labels are right), frame_line.c (labels alone) and frame_labels.c (seconds, readings) share.
  *
  * `told`: the number the card gives to a frame.  `frame`: with the frames lost in silence before it added, made anew by each
  * solution. */
@@ -96,6 +96,8 @@ void carry_labels(struct frame_clock *clock, const struct node *oldest);
 void clock_believe_labels(struct frame_clock *clock);
 /** What is not known about the length of the gaps between two frames, variance in seconds squared. */
 double clock_gap_variance(const struct frame_clock *clock, double from, double to);
+/** Fits the line through the believed labels; there are labels. */
+void clock_fit_line(struct frame_clock *clock);
 /** Decides which second k = 0 is, and fits the line through the labels. */
 void label_seconds(struct frame_clock *clock);
 

@@ -8,9 +8,6 @@
 static const double sure_sigma_s = 0.1;         /* far below half a second */
 static const double half_second_s = 0.5;
 static const double least_walk = 1e-20;         /* 1e-10 per root second: a good crystal (common practice) */
-static const double one_stamp_s = 0.03;         /* a stamp on arrival may be late by this: common practice for sound devices */
-static const double steady = 1e-6;              /* a card's rate changes by so much with a night's temperature */
-static const double slope_baseline_s = 300;     /* labels over less time say nothing about the rate */
 
 void frame_clock_add_label(struct frame_clock *c, double frame, struct tai when, double sigma_s, bool late,
                            enum time_quality quality)
@@ -216,134 +213,14 @@ static void choose_second(struct frame_clock *c)
 		 rint(second[0]) == rint(second[1]));
 }
 
-/* ------------------------------------------------------------------ labels alone */
-
-/*
- * Of labels that err late: the line that touches them from below at two places far apart.  The sigma of the slope allows for the
- * lateness of those two and for a card that warms up.
- */
-static double touching_slope(const struct frame_clock *c, double from, double span, double *sigma)
-{
-	double first = INFINITY, last = INFINITY, first_at = 0, last_at = 0;
-
-	for (size_t k = 0; k < c->labels; k++) {
-		double at = (c->label[k].frame - from) / c->settings.rate, offset = c->label[k].offset;
-
-		if (!c->label[k].believed)
-			continue;
-		if (at < span / 3 && offset < first) {
-			first = offset;
-			first_at = at;
-		}
-		if (at >= span * 2 / 3 && offset < last) {
-			last = offset;
-			last_at = at;
-		}
-	}
-	*sigma = 0.001 / span + steady;
-	return (last - first) / (last_at - first_at);
-}
-
-/* Least squares, all alike: they are one clock's, whose error they share. */
-static double straight_slope(const struct frame_clock *c, double from, double span, double *sigma)
-{
-	double n = 0, at = 0, offset = 0, spread = 0, cross = 0, rest = 0, slope;
-
-	for (size_t k = 0; k < c->labels; k++)
-		if (c->label[k].believed) {
-			n++;
-			at += (c->label[k].frame - from) / c->settings.rate;
-			offset += c->label[k].offset;
-		}
-	at /= n;
-	offset /= n;
-	for (size_t k = 0; k < c->labels; k++)
-		if (c->label[k].believed) {
-			double dt = (c->label[k].frame - from) / c->settings.rate - at;
-
-			spread += dt * dt;
-			cross += dt * (c->label[k].offset - offset);
-			rest += pow(c->label[k].offset - offset, 2);
-		}
-	slope = cross / spread;
-	rest = fmax(0, rest - slope * cross) / (n - 2);
-	*sigma = sqrt(rest / spread) + 0.001 / span + steady;
-	return slope;
-}
-
-/* Rate from the believed labels, relative to nominal; 0 when they say nothing about it. */
-static double line_slope(const struct frame_clock *c, bool late, double *sigma)
-{
-	double from = NAN, to = NAN, span, slope, here;
-	size_t n = 0;
-
-	for (size_t k = 0; k < c->labels; k++)
-		if (c->label[k].believed) {
-			from = n++ ? from : c->label[k].frame;
-			to = c->label[k].frame;
-		}
-	span = (to - from) / c->settings.rate;
-	*sigma = c->settings.rate_tolerance;
-	if (n < 12 || !(span >= slope_baseline_s))
-		return 0;
-	slope = late ? touching_slope(c, from, span, &here) : straight_slope(c, from, span, &here);
-	if (!(fabs(slope) <= c->settings.rate_tolerance))
-		return 0;
-	*sigma = fmin(*sigma, here);
-	return slope;
-}
-
-/* The least of n delays is about their mean over n above none; one alone says nothing about its own. */
-static double lateness(const struct frame_clock *c, double least)
-{
-	double n = 0, sum = one_stamp_s;
-
-	for (size_t k = 0; k < c->labels; k++)
-		if (c->label[k].believed) {
-			n++;
-			sum += c->label[k].offset - c->line_slope * c->label[k].frame / c->settings.rate - least;
-		}
-	return fmax(0, sum / n) / n;
-}
-
-static void fit_line(struct frame_clock *c)
-{
-	const struct label *best = NULL;
-	double best_offset = INFINITY;
-	bool late = true;
-
-	/* One label that does not err late is worth more than any that do. */
-	for (size_t k = 0; k < c->labels; k++)
-		late &= c->label[k].late || !c->label[k].believed;
-	c->line_slope = line_slope(c, late, &c->line_slope_sigma);
-	for (size_t k = 0; k < c->labels; k++) {
-		const struct label *l = &c->label[k];
-		double offset = l->offset - c->line_slope * l->frame / c->settings.rate;
-
-		if (!l->believed || (l->late && !late))
-			continue;
-		if (!best || (late ? offset < best_offset : l->sigma_s < best->sigma_s)) {
-			best = l;
-			best_offset = offset;
-		}
-	}
-	if (!best)
-		return;
-	c->line_pivot = best->frame;
-	c->line_base = best->when;
-	c->line_fitted = true;
-	c->line_sigma_s = hypot(best->sigma_s, c->label_doubt_s);
-	if (late)
-		c->line_sigma_s = hypot(c->line_sigma_s, lateness(c, best_offset));
-}
-
 void label_seconds(struct frame_clock *c)
 {
 	c->labelled = c->second_confirmed = false;
 	clock_believe_labels(c);
 	if (c->accepted)
 		choose_second(c);
-	fit_line(c);
+	if (c->labels)
+		clock_fit_line(c);
 }
 
 /* ------------------------------------------------------------------ readings */
