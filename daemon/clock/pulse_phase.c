@@ -265,12 +265,23 @@ static int needed(const struct pulse_phase *p, const struct phase_shift *s)
 	return ENOUGH;
 }
 
+/* Few pulses so far tell their scatter only when it is about as stated; then a jump may come early. */
+static bool acquainted(const struct pulse_phase *p)
+{
+	return p->ratio.count >= ACQUAINTED || p->scatter < wild;
+}
+
+/* In a row, but for pulses that are missing. */
+static bool in_a_row(const struct phase_shift *s)
+{
+	return s->count >= LOCK || s->last_k - s->first_k <= 2 * s->count + 1;
+}
+
 static bool proven(const struct pulse_phase *p, const struct phase_shift *s, int edges, struct phase_loss *loss)
 {
 	double sigma = sqrt(phase_shift_variance(p, s, 0)) * (p->scatter > wild ? 2 : 1);
 
-	if (p->ratio.count < ACQUAINTED || s->count < edges || s->last_k - s->first_k > 2 * s->count + 1 ||
-	    fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
+	if (!acquainted(p) || !in_a_row(s) || s->count < edges || fabs(s->sum / s->count) < fmax(least_frames, sigmas * sigma))
 		return false;
 	phase_weigh(p, s, loss);
 	/* Two edges will do for whole frames only. */

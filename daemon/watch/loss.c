@@ -9,6 +9,7 @@
 
 enum { WAITING = 64, REMEMBERED = 8192, SAID_AT_ONCE = 3 };
 
+static const double longest_wait_s = 6;
 static const double quiet_s = 600;              /* after a few sentences only one in so long, with the sum */
 
 struct waiting { double frame, sigma_frames; };
@@ -163,7 +164,8 @@ bool loss_watch_add_edge(struct loss_watch *w, double frame, double sigma_frames
 
 	if (verdict == PHASE_JUMPED)
 		take(w, &loss);
-	if (w->waitings == WAITING)     /* a channel of clicks, no pulse in its place for long */
+	/* No pulse in its place for long: clicks, or a new beginning, which the clock finds by itself. */
+	if (w->waitings == WAITING || (w->waitings && frame - w->waiting[0].frame > longest_wait_s * w->settings.phase.rate))
 		release(w);
 	w->waiting[w->waitings++] = (struct waiting){ frame, sigma_frames };
 	if (verdict != PHASE_OFF)
