@@ -69,8 +69,8 @@ struct alsa_intake {
 	unsigned gap;                   /* flags of the gap, of a length still unknown, before the next block; 0: none */
 	unsigned in_vain;               /* restarts since the last block */
 	int64_t heard_ns;               /* when the last block came, or the device was started */
-	int64_t slept_ns;               /* CLOCK_BOOTTIME - CLOCK_MONOTONIC: what the computer has slept */
-	struct stamp_line line;         /* in CLOCK_BOOTTIME: a gap is as long as the sleep was */
+	int64_t slept_ns;               /* by the computer since it was switched on */
+	struct stamp_line line;         /* in true time: a gap is as long as the sleep was */
 	int64_t right_ns;               /* when the rate was last seen to be right, in that time */
 	double measured;                /* frames per second, when that is not the rate granted */
 	int error;                      /* errno of a failed read */
@@ -152,23 +152,12 @@ static int name_error(const struct alsa_intake *alsa, int error)
 	return gone ? -ENODEV : error;
 }
 
-/* How long the computer has slept since it was switched on; good to *bracket. */
-static int64_t read_slept(int64_t *bracket)
-{
-	struct timespec boot;
-	const int64_t before = host_now();
-
-	clock_gettime(CLOCK_BOOTTIME, &boot);
-	*bracket = host_now() - before;
-	return (int64_t)boot.tv_sec * 1000000000 + boot.tv_nsec - before;
-}
-
 /* Whether the computer has slept since the last call. */
 static bool woke_up(struct alsa_intake *alsa)
 {
-	int64_t bracket;
-	const int64_t least_ns = 5000000, slept_ns = read_slept(&bracket);
-	const bool woke = slept_ns - alsa->slept_ns > least_ns + bracket;
+	int64_t late_ns;
+	const int64_t least_ns = 5000000, slept_ns = host_slept(&late_ns);
+	const bool woke = slept_ns - alsa->slept_ns > least_ns + late_ns;
 
 	if (woke)
 		alsa->slept_ns = slept_ns;
@@ -178,7 +167,6 @@ static bool woke_up(struct alsa_intake *alsa)
 static int alsa_start(struct intake *intake)
 {
 	struct alsa_intake *alsa = (struct alsa_intake *)intake;
-	int64_t bracket;
 	const int ret = restart(alsa);
 
 	if (ret < 0) {
@@ -190,7 +178,7 @@ static int alsa_start(struct intake *intake)
 	alsa->next = 0;
 	alsa->gap = alsa->in_vain = 0;
 	alsa->error = 0;
-	alsa->slept_ns = read_slept(&bracket);
+	alsa->slept_ns = host_slept(NULL);
 	stamp_line_create(&alsa->line, intake->rate);
 	return 0;
 }

@@ -14,6 +14,7 @@
 #include <stdint.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/syscall.h>
 #include <time.h>
 #include <unistd.h>
 #include <cmocka.h>
@@ -27,7 +28,7 @@
 enum { RATE = 8000, BLOCK = 80 };
 
 /* What it does next, in order; each lasts so many seconds. */
-enum act { WORK, GONE, SILENT, HANG, OTHER_RATE, END };
+enum act { WORK, GONE, SILENT, HANG, OTHER_RATE, OVERRUN, ASLEEP, END };
 struct scene { enum act act; double seconds; };
 
 static struct play {
@@ -39,6 +40,21 @@ static struct play {
 	unsigned opened;
 } play;
 
+/* The computer's sleep: CLOCK_MONOTONIC stands still in it, the device's crystal does not. */
+static _Atomic int64_t slept_ns;
+
+int clock_gettime(clockid_t clock, struct timespec *out)
+{
+	const int ret = (int)syscall(SYS_clock_gettime, clock, out);
+
+	if (clock == CLOCK_BOOTTIME) {
+		const int64_t ns = out->tv_nsec + atomic_load(&slept_ns);
+		out->tv_sec += ns / 1000000000;
+		out->tv_nsec = ns % 1000000000;
+	}
+	return ret;
+}
+
 struct actor { struct intake intake; uint64_t next; int64_t taken_ns; int32_t samples[BLOCK]; };
 
 /* Scenes that end by themselves; SILENT and HANG end when the recorder opens the device anew. */
@@ -47,7 +63,8 @@ static enum act act_now(void)
 	const struct scene *s = &play.scene[atomic_load(&play.at)];
 	int64_t now = host_now();
 
-	if (s->act == END || s->act == SILENT || s->act == HANG || now - play.scene_ns < (int64_t)(s->seconds * 1e9))
+	if (s->act == END || s->act == SILENT || s->act == HANG || s->act == OVERRUN || s->act == ASLEEP ||
+	    now - play.scene_ns < (int64_t)(s->seconds * 1e9))
 		return s->act;
 	atomic_store(&play.scene_ns, now);
 	atomic_fetch_add(&play.at, 1);
@@ -102,9 +119,22 @@ static int actor_read(struct intake *intake, struct block *block, int timeout_ms
 	struct actor *a = (struct actor *)intake;
 	const struct timespec pause = { .tv_nsec = timeout_ms * 1000000L }, moment = { .tv_nsec = 1000000 };
 	double truth;
+	unsigned flags = 0;
 
 	switch (act_now()) {
 	case GONE: case OTHER_RATE: return -ENODEV;
+	case ASLEEP:            /* the card is gone when the computer wakes up */
+		atomic_fetch_add(&slept_ns, 40000000000);
+		atomic_store(&play.scene_ns, host_now());
+		atomic_fetch_add(&play.at, 1);
+		return -ENODEV;
+	case OVERRUN:
+		a->next += BLOCK * 20;
+		a->taken_ns += BLOCK * 20 * (1000000000 / RATE);
+		flags = BLOCK_GAP | BLOCK_OVERRUN;
+		atomic_store(&play.scene_ns, host_now());
+		atomic_fetch_add(&play.at, 1);
+		break;
 	case SILENT: nanosleep(&pause, NULL); return 0;
 	case HANG: sem_wait(&play.never); return -EIO;
 	case END: recorder_stop(); return 0;
@@ -112,10 +142,10 @@ static int actor_read(struct intake *intake, struct block *block, int timeout_ms
 	}
 	while (host_now() < a->taken_ns + BLOCK * (1000000000 / RATE))
 		nanosleep(&moment, NULL);
-	truth = round((double)(a->taken_ns - play.born_ns) * 1e-9 * RATE);
+	truth = round((double)(a->taken_ns + slept_ns - play.born_ns) * 1e-9 * RATE);
 	for (int k = 0; k < BLOCK; k++)
 		a->samples[k] = (int32_t)truth + k + 1;         /* never zero: zeros fill gaps */
-	*block = (struct block){ a->samples, BLOCK, a->next, a->taken_ns, 0 };
+	*block = (struct block){ a->samples, BLOCK, a->next, a->taken_ns, flags };
 	a->next += BLOCK;
 	a->taken_ns += BLOCK * (1000000000 / RATE);
 	return 1;
@@ -230,7 +260,7 @@ static long worst_place(const struct sidecar *s, long *present)
 static void a_card_lost_silent_or_hanging_is_recorded_on(void **state)
 {
 	static const struct scene scenes[] = {
-		{ GONE, 0.7 }, { WORK, 1 }, { GONE, 0.9 }, { WORK, 1 }, { SILENT, 0 }, { WORK, 1 }, { HANG, 0 }, { WORK, 1 },
+		{ GONE, 0.7 }, { WORK, 1 }, { OVERRUN, 0 }, { WORK, 0.3 }, { ASLEEP, 0 }, { GONE, 0.9 }, { WORK, 1 }, { SILENT, 0 }, { WORK, 1 }, { HANG, 0 }, { WORK, 1 },
 		{ GONE, 0.3 }, { OTHER_RATE, 1.2 }, { WORK, 0.5 }, { END, 0 },
 	};
 	struct sidecar s;
@@ -248,7 +278,8 @@ static void a_card_lost_silent_or_hanging_is_recorded_on(void **state)
 	assert_non_null(strstr(said, "is back after"));
 	disk_real.list(folder, find_sidecar, path);
 	assert_int_equal(sidecar_read(&s, &disk_real, path), 0);
-	assert_int_equal(s.gaps, 4);
+	assert_int_equal(s.gaps, 5);
+	assert_non_null(strstr(said, "\"card\" lost 1600 frames, 0.2 s: it was not read in time"));
 	worst = worst_place(&s, &present);
 	print_message("# %ld frames, at most %ld from their places\n", present, worst);
 	/* Stamps of this device are exact; the rest is the host's rounding. */

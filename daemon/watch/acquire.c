@@ -95,13 +95,17 @@ static void pass_live(struct acquire *a, const struct block *block)
 		latency_add(&a->latency, host_now() - block->host_ns - span);
 }
 
-/* Counts frames from the start of the run, across the gap since an earlier session: its length by the host's clock. */
+/*
+ * Counts frames from the start of the run, across the gap since an earlier session: its length by the host's clock, which
+ * has to count a sleep of the computer, too.
+ */
 static void renumber(struct acquire *a, struct block *block, uint64_t *base, bool first)
 {
 	int64_t ns = block->host_ns;
 
 	if (ns == INT64_MIN)
 		ns = host_now() - (int64_t)((double)block->count / a->rate * 1e9);
+	ns += host_slept(NULL);
 	if (first && a->next) {
 		*base = a->next + stamp_line_gap(&a->line, a->next, ns) - block->first;
 		block->flags |= BLOCK_GAP;
@@ -118,8 +122,10 @@ static void pass_block(struct acquire *a, const struct intake *intake, const str
 		put_stamp(a, block);
 		a->stamped = block->host_ns;
 	}
-	if (block->first > a->next)
-		atomic_fetch_add_explicit(&a->lost, block->first - a->next, memory_order_relaxed);
+	if (block->first > a->next) {
+		atomic_fetch_or_explicit(&a->why, block->flags, memory_order_relaxed);
+		atomic_fetch_add_explicit(&a->lost, block->first - a->next, memory_order_release);
+	}
 	a->next = block->first + block->count;
 	if (intake->real_time)
 		pass_live(a, block);

@@ -34,6 +34,7 @@ struct acquire {
 	atomic_uint stamps_written, stamps_read;
 	/* For any thread. */
 	atomic_ullong lost;             /* frames in gaps */
+	atomic_uint why;                /* enum block_flag of the gaps; whoever says them takes it away */
 	atomic_ullong beats;            /* goes round with every read, successful or not */
 	atomic_ullong frames;           /* passed to the ring */
 	atomic_llong origin_ns;         /* CLOCK_MONOTONIC of frame 0, reckoned back from the newest block; INT64_MIN: unknown */

@@ -9,6 +9,7 @@
 
 static const int64_t retry_first_ns = 500000000, retry_ns = 3000000000;         /* quick replugs, then patience */
 static const int64_t remind_ns = 600000000000;          /* a missing device is said again every ten minutes */
+static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, but not oftener than once a minute */
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
 
 /* Sessions whose threads never came back, with all that those still hold. */
@@ -261,6 +262,26 @@ static void check_silence(struct device *d, int64_t now)
 	lost(d);
 }
 
+static void say_gaps(struct device *d, int64_t now)
+{
+	static const struct { unsigned flag; const char *reason; } reasons[] = {
+		{ BLOCK_OVERRUN, "it was not read in time" }, { BLOCK_SLEPT, "it or the computer slept" },
+		{ BLOCK_STALLED, "it had stopped by itself and was started again" },
+	};
+	const unsigned long long lost = atomic_load(&d->acquire->lost), frames = lost - d->gaps;
+	char why[160] = "";
+
+	if (!frames || (d->gaps_said_ns && now - d->gaps_said_ns < gaps_ns))
+		return;
+	const unsigned flags = atomic_exchange(&d->acquire->why, 0);
+	for (size_t k = 0; k < sizeof(reasons) / sizeof(*reasons); k++)
+		if (flags & reasons[k].flag)
+			snprintf(why + strlen(why), sizeof(why) - strlen(why), "%s%s", *why ? "; " : ": ", reasons[k].reason);
+	log_warning("\"%s\" lost %llu frames, %.4g s%s", d->intake->name, frames, (double)frames / d->rate, why);
+	d->gaps = lost;
+	d->gaps_said_ns = now;
+}
+
 static void check_end(struct device *d)
 {
 	if (!atomic_load(&d->session->result))
@@ -305,6 +326,8 @@ void device_watch(struct device *d)
 		check_hang(d, now);
 	if (d->state == DEVICE_RUNNING)
 		check_silence(d, now);
+	if (d->state == DEVICE_RUNNING)
+		say_gaps(d, now);
 	if (d->state == DEVICE_MISSING)
 		find_again(d);
 }

@@ -34,9 +34,9 @@ struct device {
 	bool known;                     /* opened once: format and rate are fixed */
 	struct frame_format format;
 	double rate;
-	int64_t lost_ns, retry_ns, said_ns;
+	int64_t lost_ns, retry_ns, said_ns, gaps_said_ns;
 	int said_error;                 /* of the last try that was said */
-	unsigned long long beats, frames, frames_at_start;
+	unsigned long long beats, frames, frames_at_start, gaps;
 	int64_t beat_ns, frame_ns;
 	pthread_mutex_t mutex;
 	struct intake face;             /* a copy for other threads: no calls through it */

@@ -15,6 +15,23 @@ static inline int64_t host_now(void)
 	return (int64_t)now.tv_sec * 1000000000 + now.tv_nsec;
 }
 
+/**
+ * How long the computer has slept since it was switched on, ns: CLOCK_BOOTTIME - CLOCK_MONOTONIC, which stands still
+ * meanwhile.  Time that goes on is host_now() + host_slept().
+ *
+ * @param late_ns  NULL, or by how much the answer may be too large, when the thread was interrupted between the readings
+ */
+static inline int64_t host_slept(int64_t *late_ns)
+{
+	struct timespec boot;
+	const int64_t before = host_now();
+
+	clock_gettime(CLOCK_BOOTTIME, &boot);
+	if (late_ns)
+		*late_ns = host_now() - before;
+	return (int64_t)boot.tv_sec * 1000000000 + boot.tv_nsec - before;
+}
+
 /*
  * Frame numbers against the host's clock, as far as a device's stamps tell, which err late only: from it the length
  * of a gap follows.  Any thread; nothing is allocated.
