@@ -19,7 +19,7 @@
 #include "service.h"
 #include "show.h"
 
-static const long idle_live_ns = 2000000, idle_replay_ns = 200000, poll_ns = 50000000;
+static const long idle_live_ns = 4000000, idle_keeper_ns = 20000000, idle_replay_ns = 200000, poll_ns = 50000000;
 static const double progress_every_s = 5;
 static const int64_t stuck_ns = 10000000000;    /* the signal thread looks for frames every 2 ms */
 
@@ -411,7 +411,7 @@ static int run(struct recorder *r)
 		goto destroy_listener;
 	r->keeper = (struct keeper){
 		.config = r->config, .disk = &disk_real, .intake = &r->face, .reader = r->keeping, .plans = &r->plans,
-		.idle_ns = idle,
+		.idle_ns = r->face.real_time ? idle_keeper_ns : idle,
 	};
 	ret = keeper_open(&r->keeper);
 	if (ret < 0)
