@@ -257,6 +257,51 @@ static void a_loss_not_recognised_yet_bends_nothing(void **state)
 		assert_true(score[ended].squares / score[ended].count < 1.17 * (1 + 3 * sqrt(2.0 / 360)) && score[ended].worst_s < 0.3e-6);
 }
 
+/*
+ * As the night goes on: the time of a frame some seconds ago, asked again and again while a loss comes soon after the pulses are
+ * found.  The detector gives an edge half a second to two seconds after it, which comes on top here.
+ */
+static void times_asked_for_later_are_right(void **state)
+{
+	static const double later_s[] = { 4, 6, 8, 12 };
+	static struct probe_run run;
+	unsigned wrong[4] = { 0 }, asked[4] = { 0 };
+
+	(void)state;
+	log_set_sink(hear, NULL);
+	for (unsigned seed = 1; seed <= 80; seed++) {
+		struct probe_card c = good;
+		struct feed f = make(c.rate);
+
+		c.seconds = 60;
+		c.losses = 1;
+		c.loss[0] = (struct probe_loss){ 8.17 + 0.343 * seed, seed % 3 == 0 ? 1 : seed % 3 == 1 ? 480 : -1024 };
+		c.seed = seed;
+		probe_run_make(&run, &c);
+		frame_clock_add_label(f.clock, 0, tai_s(0), 0.01, false, TIME_HOST);
+		for (size_t k = 0; k < run.edges; k++) {
+			loss_watch_add_edge(f.watch, run.edge[k].frame, c.noise_frames);
+			frame_clock_solve(f.clock);
+			for (int l = 0; l < 4; l++) {
+				double t = run.edge[k].second - later_s[l] - 0.31;
+				struct clock_reading r;
+
+				if (t < 1 || isnan(existing_frame(&run, t)) || fabs(t - c.loss[0].at_s) > 5)
+					continue;
+				frame_clock_at(f.clock, probe_frame(&run, t), &r);
+				asked[l]++;
+				wrong[l] += fabs(tai_difference(r.when, tai_s(t))) > 6 * r.sigma_s + 1e-7;
+			}
+		}
+		probe_run_release(&run);
+		unmake(&f);
+	}
+	log_set_sink(NULL, NULL);
+	for (int l = 0; l < 4; l++)
+		print_message("# within 5 s of a loss, asked for %g s later: %u of %u wrong and unsaid\n", later_s[l], wrong[l], asked[l]);
+	assert_true(asked[0] > 500 && wrong[0] <= asked[0] / 200 && wrong[1] + wrong[2] + wrong[3] == 0);
+}
+
 static void two_pulses_prove_a_loss_at_the_end(void **state)
 {
 	struct feed f = make(48000);
@@ -512,6 +557,7 @@ int main(void)
 		cmocka_unit_test(a_loss_is_said_and_kept),
 		cmocka_unit_test(many_losses_are_summed_up),
 		cmocka_unit_test(clicks_without_end_do_not_wait_for_ever),
+		cmocka_unit_test(times_asked_for_later_are_right),
 		cmocka_unit_test(two_pulses_prove_a_loss_at_the_end),
 		cmocka_unit_test(a_loss_is_found_in_the_samples),
 		cmocka_unit_test(samples_without_a_loss_show_none),
