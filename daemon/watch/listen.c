@@ -8,7 +8,7 @@
 #include "limbwatch/stamp_line.h"
 #include "listen_inner.h"
 
-static const double settle_s = 4;       /* pulses come up to two seconds late, and one more each side helps */
+static const double settle_s = 6;       /* pulses come up to two seconds late, and what was lost in silence is known five seconds after */
 static const double patience_s = 2;     /* stamps of a live device come with the first blocks */
 static const double show_every_s = 0.2;
 static const double fill_s = 600;       /* longer gaps end a segment instead of filling it with zeros */

@@ -60,7 +60,7 @@ class Recorder:
         self.log.seek(0)
         return self.log.read()
 
-    def wait_for(self, what, seconds=30):
+    def wait_for(self, what, seconds=90):
         """Until `what()` is true."""
         end = time.monotonic() + seconds
         while time.monotonic() < end and self.process.poll() is None:
@@ -69,7 +69,7 @@ class Recorder:
             pause(0.02)
         return bool(what())
 
-    def end(self, seconds=60):
+    def end(self, seconds=120):
         try:
             out, _ = self.process.communicate(timeout=seconds)
         except subprocess.TimeoutExpired:
@@ -79,7 +79,7 @@ class Recorder:
         return self.process.returncode, out.decode(), self.said()
 
 
-def connect(path, seconds=10):
+def connect(path, seconds=60):
     end = time.monotonic() + seconds
     while True:
         reader = socket.socket(socket.AF_UNIX)
@@ -93,7 +93,7 @@ def connect(path, seconds=10):
             pause(0.02)
 
 
-def lines_of(reader, until, seconds=20):
+def lines_of(reader, until, seconds=90):
     """Lines of JSON until `until(lines)`."""
     data, lines, end = b"", [], time.monotonic() + seconds
     reader.settimeout(0.2)
@@ -138,7 +138,7 @@ def looked_at():
     ok(bins > 60 and 0.25 < mean[0] < 0.35, "the strip chart has its bins", (bins, mean[:1]))
     ok(last["latency"]["to_ring"]["count"] > 500, "latencies are counted", last["latency"])
     extra = [connect(f"{work}/look.sock") for _ in range(3)]
-    told = lines_of(extra[-1], lambda seen: len(seen) > 0, 5)
+    told = lines_of(extra[-1], lambda seen: len(seen) > 0, 30)
     ok(bool(told) and told[0]["what"] == "full", "too many readers are told so", told[:1])
     status, out, said = recorder.end()
     ok(status == 0 and len(out.splitlines()) == 1 and "lost" not in said.replace("times_lost", ""),
@@ -185,11 +185,11 @@ def reloaded():
 
     def station():
         try:
-            reader = connect(f"{work}/reload.sock", 1)
+            reader = connect(f"{work}/reload.sock", 5)
         except OSError:
             return False
         with reader:
-            lines = lines_of(reader, lambda seen: len(seen) > 0, 2)
+            lines = lines_of(reader, lambda seen: len(seen) > 0, 10)
         return bool(lines) and lines[0].get("station") == "Hollowmere"
     ok(recorder.wait_for(station), "a good one is taken up", recorder.said())
     manager.read()
@@ -225,7 +225,7 @@ def stuck():
         ok(True, "a thread that stands still stops the watchdog # SKIP ptrace is not allowed here")
     else:
         os.waitpid(tid, 0x40000000)     # __WALL
-        said = recorder.wait_for(lambda: manager.read() and "no progress" in recorder.said(), 30)
+        said = recorder.wait_for(lambda: manager.read() and "no progress" in recorder.said(), 90)
         pause(0.5)
         manager.read()
         before = len(manager.lines)
@@ -265,7 +265,7 @@ def unread():
     process = subprocess.Popen([program, "--config", path, "--json", "--verbose"], stdout=subprocess.PIPE, stderr=write_end)
     os.close(write_end)
     try:
-        out, _ = process.communicate(timeout=30)
+        out, _ = process.communicate(timeout=90)
         ok(process.returncode == 0 and out.count(b'"snr"') == 1, "a log that nobody reads stops nothing",
            (process.returncode, out))
     except subprocess.TimeoutExpired:
