@@ -129,6 +129,9 @@ static int alsa_open(struct intake **out, const struct setting_value *values)
 		alsa->device.own_stamps ? "a device with stamps of its own" : "a plug-in dated by the arrival of its frames",
 		alsa->intake.format.channels, sample_type_name(alsa->intake.format.type), alsa->intake.rate,
 		alsa->device.period_us * 1e-3, alsa->device.buffer_us * 1e-3);
+	if (!alsa->device.own_stamps && alsa->intake.real_time)
+		log_warning("\"%s\" is a plug-in, not the card itself: no real time; its frames are dated by their arrival, and a "
+			"busy computer may lose some (hw:CARD,DEVICE or card = gives the card)", alsa->intake.name);
 	*out = &alsa->intake;
 	return 0;
 }

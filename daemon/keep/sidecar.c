@@ -217,6 +217,17 @@ static json_t *boot(const struct sidecar *s)
 	return json_pack("{s:o,s:I}", "id", words(s->boot_id), "monotonic_ns", (json_int_t)s->monotonic_ns);
 }
 
+static json_t *health(const struct sidecar *s)
+{
+	const struct sidecar_health *h = &s->health;
+
+	if (!s->healthy)
+		return json_null();
+	return json_pack("{s:o,s:o,s:b,s:b,s:o,s:o,s:o}", "temperature_c", number(h->temperature_c), "load", number(h->load),
+		"under_voltage", h->under_voltage, "throttled", h->throttled, "free_bytes", number(h->free_bytes),
+		"ring_p999_s", number(h->ring_p999_s), "trigger_p999_s", number(h->trigger_p999_s));
+}
+
 static json_t *build(const struct sidecar *s)
 {
 	json_t *o = json_object();
@@ -244,6 +255,7 @@ static json_t *build(const struct sidecar *s)
 	json_object_set_new(o, "clock", json_pack("{s:o,s:o,s:o}", "true_rate_hz", number(s->true_rate),
 		"start", reading(&s->start), "end", reading(&s->end)));
 	json_object_set_new(o, "boot", boot(s));
+	json_object_set_new(o, "health", health(s));
 	json_object_set_new(o, "pulses", pulses(s));
 	return o;
 }

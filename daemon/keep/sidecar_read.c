@@ -334,6 +334,26 @@ static void read_boot(struct reader *r, json_t *root, struct sidecar *s)
 	within(r, "");
 }
 
+/* Not in the first sidecars, null where nobody asked. */
+static void read_health(struct reader *r, json_t *root, struct sidecar *s)
+{
+	json_t *o = json_object_get(root, "health");
+
+	if (!o || json_is_null(o))
+		return;
+	o = object(r, root, "health");
+	within(r, "health.");
+	s->healthy = true;
+	s->health.temperature_c = number(r, o, "temperature_c", -273.15, 1e6, true);
+	s->health.load = number(r, o, "load", 0, 1e9, true);
+	s->health.under_voltage = truth(r, o, "under_voltage");
+	s->health.throttled = truth(r, o, "throttled");
+	s->health.free_bytes = number(r, o, "free_bytes", 0, 1e24, true);
+	s->health.ring_p999_s = number(r, o, "ring_p999_s", 0, 1e12, true);
+	s->health.trigger_p999_s = number(r, o, "trigger_p999_s", 0, 1e12, true);
+	within(r, "");
+}
+
 static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 {
 	json_t *clock;
@@ -355,6 +375,7 @@ static void read_root(struct reader *r, json_t *root, struct sidecar *s)
 	s->expected = array(r, root, "expected", 1000, sizeof(*s->expected), &s->expecteds, read_expected);
 	s->contact = array(r, root, "contacts", 100000, sizeof(*s->contact), &s->contacts, read_contact);
 	read_boot(r, root, s);
+	read_health(r, root, s);
 	clock = object(r, root, "clock");
 	within(r, "clock.");
 	s->true_rate = number(r, clock, "true_rate_hz", 0, 1e9, true);

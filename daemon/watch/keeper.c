@@ -6,6 +6,7 @@
 #include <string.h>
 #include <time.h>
 #include "acquire.h"
+#include "health.h"
 #include "keeper.h"
 #include "limbwatch/log.h"
 #include "limbwatch/segment.h"
@@ -200,6 +201,22 @@ static void *move_array(void **from, size_t *n, size_t *out)
 	return p;
 }
 
+static void describe_health(const struct keeper *keeper, struct sidecar *s)
+{
+	struct latency_summary ring, trigger;
+	long long free_bytes = atomic_load(&keeper->free_bytes);
+
+	if (!keeper->intake->real_time)
+		return;         /* a replay says nothing of the night */
+	latency_read(keeper->to_ring, &ring);
+	latency_read(keeper->to_trigger, &trigger);
+	health_read(&s->health, "/sys");
+	s->health.free_bytes = free_bytes < 0 ? NAN : (double)free_bytes;
+	s->health.ring_p999_s = ring.p999_s;
+	s->health.trigger_p999_s = trigger.p999_s;
+	s->healthy = true;
+}
+
 static int write_piece_sidecar(struct work *w, struct piece *piece)
 {
 	char path[4096];
@@ -221,6 +238,7 @@ static int write_piece_sidecar(struct work *w, struct piece *piece)
 		s.monotonic_ns = w->plan->host_ns +
 			llround(((double)piece->first - (double)w->plan->start_frame) / w->keeper->intake->rate * 1e9);
 	s.state = piece->segment ? SEGMENT_RECORDING : SEGMENT_CLOSED;
+	describe_health(w->keeper, &s);
 	snprintf(path, sizeof(path), "%s/%s.json", w->keeper->config->keep.folder, piece->name);
 	ret = sidecar_write(&s, w->keeper->disk, path);
 	/* Parts and gaps of a closed piece are still needed by a later writing. */

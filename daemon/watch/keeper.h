@@ -27,6 +27,7 @@ struct keeper {
 	struct ring_reader *reader;
 	struct plans *plans;
 	long idle_ns;                   /* how long to wait when there is nothing to do */
+	const struct latency *to_ring, *to_trigger;
 	/* Towards the main thread. */
 	pthread_mutex_t mutex;
 	struct delivery *delivery, **last;

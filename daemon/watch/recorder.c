@@ -411,7 +411,8 @@ static int run(struct recorder *r)
 		goto destroy_listener;
 	r->keeper = (struct keeper){
 		.config = r->config, .disk = &disk_real, .intake = &r->face, .reader = r->keeping, .plans = &r->plans,
-		.idle_ns = r->face.real_time ? idle_keeper_ns : idle,
+		.idle_ns = r->face.real_time ? idle_keeper_ns : idle, .to_ring = &r->acquire.latency,
+		.to_trigger = listener_latency(r->listener),
 	};
 	ret = keeper_open(&r->keeper);
 	if (ret < 0)

@@ -45,6 +45,15 @@ struct sidecar_loss { uint64_t after, before; double frames, sigma_frames; };
 /* A control of the device as it was found when it was opened: "Mic Capture Volume", "23 of 0 to 39, 11.50 dB". */
 struct sidecar_control { char name[64], value[64]; };
 
+/* How computer and recorder were doing when the sidecar was written; NAN: this computer does not tell. */
+struct sidecar_health {
+	double temperature_c;           /* of its hottest part */
+	double load;                    /* processes that want to run, mean of a minute */
+	bool   under_voltage, throttled;/* since it was switched on, as a board's firmware tells */
+	double free_bytes;              /* of the disk */
+	double ring_p999_s, trigger_p999_s;     /* latency from a sample to the ring, to a trigger: 99.9% are below */
+};
+
 struct sidecar {
 	int format;
 	char version[32];               /* of limbwatch */
@@ -71,6 +80,8 @@ struct sidecar {
 	size_t pulses;    struct clock_pulse *pulse;
 	size_t contacts;  struct contact *contact;
 	uint64_t clipped;               /* series samples with a frame at full scale */
+	bool healthy;                   /* `health` has been filled */
+	struct sidecar_health health;
 };
 
 void sidecar_clear(struct sidecar *sidecar);
