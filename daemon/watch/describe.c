@@ -193,6 +193,21 @@ static void say_keep(const struct config *c, const struct intake *in, const stru
 	        ring * (double)frame_bytes(in->format) / 1e6, (ring - backlog) / in->rate);
 }
 
+static void say_live(const struct config *c, const struct intake *in, FILE *out)
+{
+	if (!in->real_time)
+		return;
+	if (c->live.priority > 0)
+		fprintf(out, "Live: the device is read at real-time priority %d", c->live.priority);
+	else
+		fprintf(out, "Live: the device is read without real-time priority");
+	fprintf(out, ", memory is %slocked.\n", c->live.lock_memory ? "" : "not ");
+	if (in->driver->comes_back)
+		fprintf(out, "  A device that is lost, or silent for %g s, is opened anew until it is there.\n", c->live.silence_s);
+	if (*c->state.socket)
+		fprintf(out, "  What the recorder is doing is shown at %s.\n", c->state.socket);
+}
+
 static int describe(const struct config *c, struct intake *in, FILE *out)
 {
 	static struct acquire acquire;  /* only its address counts here */
@@ -215,6 +230,7 @@ static int describe(const struct config *c, struct intake *in, FILE *out)
 	if (ret < 0)
 		return ret;
 	say_keep(c, in, listener, out);
+	say_live(c, in, out);
 	listener_destroy(listener);
 	return 0;
 }
