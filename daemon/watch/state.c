@@ -110,23 +110,6 @@ static void dismiss(struct state *state, struct reader *reader)
 	state->readers--;
 }
 
-void state_close(struct state *state)
-{
-	struct stat st;
-
-	if (!state)
-		return;
-	for (size_t k = 0; k < READERS; k++)
-		if (state->reader[k].fd >= 0)
-			dismiss(state, &state->reader[k]);
-	for (size_t k = 0; k < state->kinds; k++)
-		free(state->kept[k].line);
-	if (lstat(state->path, &st) == 0 && st.st_dev == state->device && st.st_ino == state->inode)
-		unlink(state->path);
-	close(state->fd);
-	free(state);
-}
-
 size_t state_readers(const struct state *state)
 {
 	return state ? state->readers : 0;
@@ -246,4 +229,22 @@ void state_poll(struct state *state)
 	for (size_t k = 0; k < READERS; k++)
 		if (state->reader[k].fd >= 0)
 			pass_on(state, &state->reader[k]);
+}
+
+void state_close(struct state *state)
+{
+	struct stat st;
+
+	if (!state)
+		return;
+	state_poll(state);              /* the last contacts are told at the very end */
+	for (size_t k = 0; k < READERS; k++)
+		if (state->reader[k].fd >= 0)
+			dismiss(state, &state->reader[k]);
+	for (size_t k = 0; k < state->kinds; k++)
+		free(state->kept[k].line);
+	if (lstat(state->path, &st) == 0 && st.st_dev == state->device && st.st_ino == state->inode)
+		unlink(state->path);
+	close(state->fd);
+	free(state);
 }

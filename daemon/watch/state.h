@@ -16,7 +16,8 @@ struct state;
  * @return 0; -errno: nobody can look in (the caller says so), which never keeps the recorder from recording
  */
 int  state_open(struct state **out, const char *path);
-void state_close(struct state *state);          /* NULL is fine; removes the socket */
+/** Passes on what readers take at once, removes the socket.  NULL is fine. */
+void state_close(struct state *state);
 
 /**
  * One line for everybody.
