@@ -123,7 +123,7 @@ static void pass_block(struct acquire *a, const struct intake *intake, const str
 		a->stamped = block->host_ns;
 	}
 	if (block->first > a->next) {
-		atomic_fetch_or_explicit(&a->why, block->flags, memory_order_relaxed);
+		atomic_fetch_or_explicit(&a->why, BLOCK_GAP | (block->flags & ~(unsigned)BLOCK_STAMP_LATE), memory_order_relaxed);
 		atomic_fetch_add_explicit(&a->lost, block->first - a->next, memory_order_release);
 	}
 	a->next = block->first + block->count;
