@@ -208,7 +208,8 @@ static int perform(const struct scene *scenes)
 	play.scene = scenes;
 	play.at = 0;
 	play.opened = 0;
-	play.born_ns = play.scene_ns = host_now();
+	play.born_ns = host_now();
+	play.scene_ns = play.born_ns;
 	*said = 0;
 	log_set_sink(hear, NULL);
 	ret = recorder_run(&config, &hooks);
