@@ -59,13 +59,17 @@ static void put_stamp(struct acquire *a, const struct block *block)
 	atomic_store_explicit(&a->stamps_written, written + 1, memory_order_release);
 }
 
-/* A replay loses nothing: it waits for the slowest reader.  Never called for a live device. */
-static void wait_for_room(struct acquire *a, size_t count)
+/* A replay loses nothing: it waits for the slowest reader.  Never called for a live device.  @return false: stopped */
+static bool wait_for_room(struct acquire *a, size_t count)
 {
 	const struct timespec moment = { .tv_nsec = 200000 };
 
-	while (ring_room(a->ring) < count && !atomic_load(a->stop))
+	while (ring_room(a->ring) < count) {
+		if (atomic_load(a->stop))
+			return false;
 		nanosleep(&moment, NULL);
+	}
+	return true;
 }
 
 static void pass_replay(struct acquire *a, const struct intake *intake, const struct block *block)
@@ -76,7 +80,8 @@ static void pass_replay(struct acquire *a, const struct intake *intake, const st
 	for (size_t done = 0; done < block->count; ) {
 		size_t count = block->count - done < most ? block->count - done : most;
 
-		wait_for_room(a, count);
+		if (!wait_for_room(a, count))
+			return;         /* written all the same, it would push out what is still to be read */
 		ring_write(a->ring, (const char *)block->frames + done * size, count, block->first + done);
 		done += count;
 	}
@@ -123,7 +128,7 @@ static void pass_block(struct acquire *a, const struct intake *intake, const str
 		a->stamped = block->host_ns;
 	}
 	if (block->first > a->next) {
-		atomic_fetch_or_explicit(&a->why, block->flags, memory_order_relaxed);
+		atomic_fetch_or_explicit(&a->why, BLOCK_GAP | (block->flags & ~(unsigned)BLOCK_STAMP_LATE), memory_order_relaxed);
 		atomic_fetch_add_explicit(&a->lost, block->first - a->next, memory_order_release);
 	}
 	a->next = block->first + block->count;

@@ -9,7 +9,7 @@
 
 static const int64_t retry_first_ns = 500000000, retry_ns = 3000000000;         /* quick replugs, then patience */
 static const int64_t remind_ns = 600000000000;          /* a missing device is said again every ten minutes */
-static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, but not oftener than once a minute */
+static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, for one reason not oftener than once a minute */
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
 
 /* Sessions whose threads never came back, with all that those still hold. */
@@ -271,7 +271,9 @@ static void say_gaps(struct device *d, int64_t now)
 	const unsigned long long lost = atomic_load(&d->acquire->lost), frames = lost - d->gaps;
 	char why[160] = "";
 
-	if (!frames || (d->gaps_said_ns && now - d->gaps_said_ns < gaps_ns))
+	if (now - d->gaps_said_ns >= gaps_ns)
+		d->gaps_why = 0;
+	if (!frames || !(atomic_load(&d->acquire->why) & ~d->gaps_why))
 		return;
 	const unsigned flags = atomic_exchange(&d->acquire->why, 0);
 	for (size_t k = 0; k < sizeof(reasons) / sizeof(*reasons); k++)
@@ -279,6 +281,7 @@ static void say_gaps(struct device *d, int64_t now)
 			snprintf(why + strlen(why), sizeof(why) - strlen(why), "%s%s", *why ? "; " : ": ", reasons[k].reason);
 	log_warning("\"%s\" lost %llu frames, %.4g s%s", d->intake->name, frames, (double)frames / d->rate, why);
 	d->gaps = lost;
+	d->gaps_why |= flags;
 	d->gaps_said_ns = now;
 }
 

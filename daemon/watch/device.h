@@ -35,6 +35,7 @@ struct device {
 	struct frame_format format;
 	double rate;
 	int64_t lost_ns, retry_ns, said_ns, gaps_said_ns;
+	unsigned gaps_why;              /* reasons said in the last minute */
 	int said_error;                 /* of the last try that was said */
 	unsigned long long beats, frames, frames_at_start, gaps;
 	int64_t beat_ns, frame_ns;
