@@ -62,7 +62,7 @@ static bool same_stream(struct device *d)
 static bool passing(int error)
 {
 	return error == -ENODEV || error == -ENXIO || error == -ENOENT || error == -EBUSY || error == -EIO ||
-		error == -ECONNREFUSED || error == -ETIMEDOUT || error == -EHOSTDOWN || error == -EAGAIN;
+		error == -EACCES || error == -ECONNREFUSED || error == -ETIMEDOUT || error == -EHOSTDOWN || error == -EAGAIN;
 }
 
 static void wait_for_it(struct device *d, int64_t now)

@@ -22,7 +22,7 @@ def config(name, seconds, extra="", expected=""):
     with open(path, "w") as out:
         out.write(f'''station = {{ name = "Brackenfold"; }};
 intake = {{ driver = "synthetic"; real_time_pace = true; pulse = true; duration_s = {seconds}; rate_hz = 8000;
-  contact_s = {seconds / 2}; snr = 40; start_utc = "2031-04-02T01:23:15.25Z"; }};
+  contact_s = {min(seconds / 2, 7)}; snr = 40; start_utc = "2031-04-02T01:23:15.25Z"; }};
 channels = ( {{ name = "photodiode"; column = 1; wavelength_nm = 620; }},
              {{ name = "gps"; column = 2; measure = "pulse"; }} );
 {expected}
@@ -120,7 +120,7 @@ def thread(process, name):
 
 
 def looked_at():
-    recorder = Recorder(config("look", 14))
+    recorder = Recorder(config("look", 20))
     idle = [connect(f"{work}/look.sock") for _ in range(14)]     # nobody reads here
     reader = connect(f"{work}/look.sock")
     reader.shutdown(socket.SHUT_WR)
