@@ -24,6 +24,7 @@
 #include "limbwatch/recorder.h"
 #include "limbwatch/sidecar.h"
 #include "limbwatch/stamp_line.h"
+#include "support/folder.h"
 
 enum { RATE = 8000, BLOCK = 80 };
 
@@ -171,23 +172,7 @@ static void hear(void *context, enum log_level level, const char *sentence)
 	pthread_mutex_unlock(&saying);
 }
 
-static char folder[64], socket_path[96];
-
-static int make_folder(void **state)
-{
-	(void)state;
-	snprintf(folder, sizeof(folder), "/tmp/limbwatch-device-XXXXXX");
-	return mkdtemp(folder) ? 0 : -1;
-}
-
-static int remove_folder(void **state)
-{
-	char command[128];
-
-	(void)state;
-	snprintf(command, sizeof(command), "rm -rf %s", folder);
-	return system(command);
-}
+static char socket_path[96];
 
 static int perform(const struct scene *scenes)
 {
@@ -297,7 +282,7 @@ static void a_card_lost_silent_or_hanging_is_recorded_on(void **state)
 int main(void)
 {
 	const struct CMUnitTest tests[] = {
-		cmocka_unit_test_setup_teardown(a_card_lost_silent_or_hanging_is_recorded_on, make_folder, remove_folder),
+		cmocka_unit_test_setup_teardown(a_card_lost_silent_or_hanging_is_recorded_on, folder_make, folder_remove),
 	};
 
 	return cmocka_run_group_tests_name("device", tests, NULL, NULL);

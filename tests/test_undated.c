@@ -23,8 +23,9 @@
 #include "limbwatch/recorder.h"
 #include "limbwatch/sidecar.h"
 #include "limbwatch/undated.h"
+#include "support/folder.h"
 
-static char folder[64], said[16384];
+static char said[16384];
 static atomic_bool known;               /* whether the kernel calls its clock synchronised */
 static atomic_int recordings;           /* closed ones in the folder after which it does; 0: never */
 
@@ -91,22 +92,6 @@ static int evening(double seconds, const char *kind, double *began)
 	log_set_sink(NULL, NULL);
 	config_free(&config);
 	return ret;
-}
-
-static int make_folder(void **state)
-{
-	(void)state;
-	snprintf(folder, sizeof(folder), "/tmp/limbwatch-undated-XXXXXX");
-	return mkdtemp(folder) ? 0 : -1;
-}
-
-static int remove_folder(void **state)
-{
-	char command[128];
-
-	(void)state;
-	snprintf(command, sizeof(command), "rm -rf %s", folder);
-	return system(command);
 }
 
 struct found { size_t n; struct sidecar sidecar[8]; };
@@ -217,7 +202,7 @@ static void the_delay_of_the_detector_is_taken_off_once(void **state)
 int main(void)
 {
 	const struct CMUnitTest tests[] = {
-		cmocka_unit_test_setup_teardown(what_was_recorded_before_the_time_was_known_is_dated, make_folder, remove_folder),
+		cmocka_unit_test_setup_teardown(what_was_recorded_before_the_time_was_known_is_dated, folder_make, folder_remove),
 		cmocka_unit_test(the_delay_of_the_detector_is_taken_off_once),
 	};
 
