@@ -25,7 +25,7 @@ DEPS_BUILD := gcc libc6-dev make pkg-config libasound2-dev libsndfile1-dev libco
 DEPS_CHECK := libcmocka-dev perl python3-numpy python3-scipy sox libsox-fmt-base pulseaudio \
               libasound2-plugins systemd
 DEPS_BENCH := valgrind
-DEPS_HARDWARE := mmdebstrap busybox-static cpio e2fsprogs kmod bsdextrautils python3-numpy python3-scipy \
+DEPS_HARDWARE = mmdebstrap busybox-static cpio e2fsprogs kmod bsdextrautils python3-numpy python3-scipy \
               $(if $(filter arm64,$(shell dpkg --print-architecture)),qemu-system-arm,qemu-system-x86)
 
 # Looked up when a rule needs them, so that `make deps` works before pkg-config is there.
@@ -152,4 +152,4 @@ clean:
 .PHONY: all tests check run-check demo run-demo bench run-bench deps deps-build deps-check deps-bench deps-hardware \
         check-hardware run-check-hardware install clean
 .DELETE_ON_ERROR:
--include $(shell find $(BUILD) -name '*.d' 2>/dev/null)
+-include $(shell find $(BUILD) -name '*.d' -type f 2>/dev/null)

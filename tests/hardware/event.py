@@ -14,7 +14,7 @@ from scipy.special import erf, fresnel
 
 RATE, SEED = 48000, 20310402
 RATE_ERROR = -48.8e-6           # what snd-aloop makes of a rate shift of 100005; the scene "quiet" measures it
-LENGTH_S, FIRST_PULSE_S, CONTACT_S = 36.0, 0.75, 21.371234      # the contact counts from the first pulse
+LENGTH_S, FIRST_PULSE_S, CONTACT_S = 36.0, 0.98, 21.371234      # aplay takes 0.02 s; the contact counts from the first pulse
 WAVELENGTH_M, PASSBAND_M, DISTANCE_M, SPEED_MPS = 620e-9, 120e-9, 371500e3, 612.0
 
 

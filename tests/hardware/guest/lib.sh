@@ -2,7 +2,7 @@
 # Times are the machine's, which leap over idle waits: a `sleep` here is so much recording, and costs next to nothing.
 passed=0
 failed=0
-mark=
+mark=0
 folder=/var/lib/limbwatch
 config=/etc/limbwatch/limbwatch.conf
 . /scene/truth
@@ -40,42 +40,45 @@ until_so() {
 	shift
 	until "$@" > /dev/null 2>&1; do
 		within "$(uptime_s)" 0 "$end" || return 1
-		sleep 0.2
+		sleep 0.5
 	done
 }
 
 # ------------------------------------------------------------------ the recorder
 
+# Followed all the time, because asking journal and socket anew costs this machine a second each.
+follow() {
+	: > /run/said
+	journalctl -q -f -n 0 -o cat -u limbwatchd > /run/said &
+	mkdir -p /run/state
+	perl /scene/guest/follow.pl /run/limbwatch/state.sock /run/state &
+}
+
 # From here on `said` is what the recorder's log says.
-from_here() {
-	journalctl --sync
-	mark=$(journalctl -q -n 0 --show-cursor | sed -n 's/^-- cursor: //p')
-}
-said() {
-	journalctl --sync
-	journalctl -q -o cat -u limbwatchd ${mark:+--after-cursor="$mark"}
-}
+from_here() { mark=$(wc -l < /run/said); }
+said() { tail -n "+$((mark + 1))" /run/said; }
 says() { said | grep -q -- "$1"; }
 # first_saying PATTERN: the first such line of the log, for the table of faults.
-first_saying() { said | grep -m1 -- "$1" | sed 's/^limbwatchd: //; s/|/,/g' | cut -c1-150; }
+first_saying() {
+	line=$(said | grep -m1 -- "$1" | sed 's/^limbwatchd: //; s/|/,/g' | cut -c1-150)
+	echo "${line:-NOTHING}"
+}
 
 property() { systemctl show limbwatchd -p "$1" --value; }
 pid() { property MainPID; }
 active() { [ "$(property ActiveState)" = active ]; }
+restarts() { property NRestarts; }
 
 # state WHAT FILTER: the newest line of that kind on the state socket, through jq.
-state() {
-	perl -MIO::Socket::UNIX -e '
-		my $s = IO::Socket::UNIX->new(Peer => "/run/limbwatch/state.sock") or exit 1;
-		$SIG{ALRM} = sub { exit 1 };
-		alarm 5;
-		while (<$s>) { if (/^\{"what":"$ARGV[0]"/) { print; exit 0 } }
-		exit 1' "$1" | jq -r "$2"
+state() { jq -r "$2" "/run/state/$1"; }
+# state_is WHAT MEMBER VALUE, both as they stand in the line
+state_is() { grep -q "\"$2\":$3" "/run/state/$1" 2> /dev/null; }
+recording() { state_is disk writing true && state_is device state '"running"'; }
+# The state is a second old at most.
+frames_lost() {
+	sleep 1.2
+	state device .frames_lost
 }
-# state_is WHAT FILTER WORDS
-state_is() { [ "$(state "$1" "$2")" = "$3" ]; }
-recording() { active && state_is disk .writing true && state_is device .state running; }
-frames_lost() { state device .frames_lost; }
 
 # configure [WORDS]: a configuration for the loopback card; WORDS are further groups.  Variables: measure, watching, intake,
 # clock, keep: what stands in those groups.
@@ -86,7 +89,7 @@ configure() {
 		channels = ( { name = "photodiode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
 			{ name = "gps"; column = 2; measure = "${measure:-aux}"; } );
 		watch = { outside_vigils = ${watching:-false}; vigil_before_s = 12; vigil_after_s = 6; };
-		clock = { ${clock:-host_sigma_s = 0.1;} };
+		clock = { ${clock:-host_sigma_s = 0.05;} };
 		keep = { folder = "$folder"; everything = ${everything:-true}; free_mib = 0; $keep };
 		$1
 	END
@@ -95,7 +98,7 @@ configure() {
 # begin: a fresh recorder on an empty folder, once it is at work.
 begin_recording() {
 	systemctl stop limbwatchd
-	rm -f $folder/*
+	rm -f $folder/*.*
 	from_here
 	systemctl start limbwatchd && until_so 20 recording
 }
@@ -119,6 +122,11 @@ play() {
 		cat /scene/noise.raw
 		minute=$((minute + 1))
 	done | aplay -q -t raw -f S16_LE -r 48000 -c 2 --buffer-time=400000 -D hw:Loopback,0,0
+}
+# Without its reader the pipe ends, too.
+stop_playing() {
+	pkill -x aplay
+	until_so 10 eval '! pgrep -x aplay'
 }
 # same_as_played FILE SECONDS: so much of the noise, sample for sample and without a break, is in the recording.
 same_as_played() { perl /scene/guest/same.pl "$1" /scene/noise.raw "$2"; }
