@@ -3,6 +3,7 @@
 passed=0
 failed=0
 mark=0
+marks=0
 folder=/var/lib/limbwatch
 config=/etc/limbwatch/limbwatch.conf
 . /scene/truth
@@ -49,19 +50,28 @@ until_so() {
 # Followed all the time, because asking journal and socket anew costs this machine a second each.
 follow() {
 	: > /run/said
-	journalctl -q -f -n 0 -o cat -u limbwatchd > /run/said &
+	journalctl -q -f -n 0 -o cat _SYSTEMD_UNIT=limbwatchd.service + UNIT=limbwatchd.service + SYSLOG_IDENTIFIER=scene \
+		> /run/said &
 	mkdir -p /run/state
 	perl /scene/guest/follow.pl /run/limbwatch/state.sock /run/state &
 }
 
 # From here on `said` is what the recorder's log says.
-from_here() { mark=$(wc -l < /run/said); }
+from_here() {
+	marks=$((marks + 1))
+	journalctl --sync
+	echo "mark $marks." | systemd-cat -t scene
+	until_so 10 grep -q "^mark $marks\." /run/said
+	mark=$(wc -l < /run/said)
+}
 said() { tail -n "+$((mark + 1))" /run/said; }
 says() { said | grep -q -- "$1"; }
+# heard PATTERN: soon, for the log takes its way.
+heard() { until_so 5 says "$1"; }
 # first_saying PATTERN: the first such line of the log, for the table of faults.
 first_saying() {
 	line=$(said | grep -m1 -- "$1" | sed 's/^limbwatchd: //; s/|/,/g' | cut -c1-150)
-	echo "${line:-NOTHING}"
+	echo "${line:-nothing}"
 }
 
 property() { systemctl show limbwatchd -p "$1" --value; }
@@ -107,6 +117,16 @@ begin_recording() {
 sidecar() { jq -r "$1" "$(ls -t $folder/*.json | head -1)"; }
 gap_frames() { cat $folder/*.json | jq -s '[.[].gaps[].frames] | add // 0'; }
 kept_frames() { cat $folder/*.json | jq -s '[.[].parts[].frames] | add // 0'; }
+
+# Frames that are in none of the files, between the first one's begin and the last one's end.
+missing_frames() {
+	cat $folder/*.json | jq -s '[.[].parts[]] | (map(.first_frame + .frames) | max) - (map(.first_frame) | min) - (map(.frames) | add)'
+}
+# The same between the files of two recorders, by the host's clock: seconds.
+missing_seconds() {
+	cat $folder/*.json | jq -s 'sort_by(.boot.monotonic_ns) | .[1].boot.monotonic_ns * 1e-9 - .[0].boot.monotonic_ns * 1e-9
+		- ([.[0].parts[].frames] | add) / 48000 | . * 100 | round / 100'
+}
 
 # row FAULT | WHAT HAPPENED | WHAT WAS SAID | FRAMES LOST
 row() { printf '%s\n' "$*" >> /scene/faults; }
