@@ -98,10 +98,10 @@ run-bench: all $(benches)
 
 # The installed recorder on a virtual machine with a Debian kernel, whose card, disks and clock misbehave.
 check-hardware: deps-build deps-hardware
-	$(MAKE) run-check-hardware
+	@$(MAKE) --no-print-directory run-check-hardware
 
 run-check-hardware: all
-	BUILD=$(BUILD) PYTHON=$(PYTHON) sh tests/hardware/run
+	@BUILD=$(BUILD) PYTHON=$(PYTHON) sh tests/hardware/run
 
 define install_packages
 	@missing=; for p in $(1); do \

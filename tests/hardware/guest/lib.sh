@@ -90,22 +90,22 @@ frames_lost() {
 	state device .frames_lost
 }
 
-# configure [WORDS]: a configuration for the loopback card; WORDS are further groups.  Variables: measure, watching, intake,
-# clock, keep: what stands in those groups.
+# configure [WORDS]: a configuration for the loopback card; WORDS are further groups.  Variables may say otherwise for once:
+# measure=pulse, watching=true, everything=false, clock='...'.
 configure() {
 	cat > $config <<-END
 		station = { name = "Brackenfold"; };
-		intake = { driver = "alsa"; device = "${device:-hw:Loopback,1,0}"; rate_hz = 48000; channels = 2; format = "S16"; $intake };
+		intake = { driver = "alsa"; device = "hw:Loopback,1,0"; rate_hz = 48000; channels = 2; format = "S16"; };
 		channels = ( { name = "photodiode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
 			{ name = "gps"; column = 2; measure = "${measure:-aux}"; } );
 		watch = { outside_vigils = ${watching:-false}; vigil_before_s = 12; vigil_after_s = 6; };
 		clock = { ${clock:-host_sigma_s = 0.05;} };
-		keep = { folder = "$folder"; everything = ${everything:-true}; free_mib = 0; $keep };
+		keep = { folder = "$folder"; everything = ${everything:-true}; free_mib = 0; };
 		$1
 	END
 }
 
-# begin: a fresh recorder on an empty folder, once it is at work.
+# begin_recording: a fresh recorder on an empty folder, once it is at work.
 begin_recording() {
 	systemctl stop limbwatchd
 	rm -f $folder/*.*
@@ -116,7 +116,6 @@ begin_recording() {
 # The newest sidecar, and what of it.
 sidecar() { jq -r "$1" "$(ls -t $folder/*.json | head -1)"; }
 gap_frames() { cat $folder/*.json | jq -s '[.[].gaps[].frames] | add // 0'; }
-kept_frames() { cat $folder/*.json | jq -s '[.[].parts[].frames] | add // 0'; }
 
 # Frames that are in none of the files, between the first one's begin and the last one's end.
 missing_frames() {
@@ -133,6 +132,10 @@ row() { printf '%s\n' "$*" >> /scene/faults; }
 
 # ------------------------------------------------------------------ card and disks
 
+# Where the recorder's end of the card is, and when, by the kernel itself: frames since it was started, nanoseconds.
+card_clock() {
+	awk '/^tstamp/ { t = $3 } /^hw_ptr/ { print $3, t * 1e9 }' OFMT=%.0f /proc/asound/Loopback/pcm1c/sub0/status
+}
 card() { echo snd_aloop.0 > "/sys/bus/platform/drivers/snd_aloop/$1"; }
 
 # play MINUTES: the noise, without a break.
