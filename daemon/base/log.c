@@ -2,6 +2,7 @@
 #include "limbwatch/log.h"
 
 #include <errno.h>
+#include <fcntl.h>
 #include <stdio.h>
 #include <string.h>
 #include <unistd.h>
@@ -24,8 +25,21 @@ static const char *const level_word[] = {
 	[LEVEL_ERROR] = "error: ", [LEVEL_WARNING] = "warning: ", [LEVEL_NOTICE] = "", [LEVEL_DETAIL] = "",
 };
 
+/* A program started without them would open a recording under the number that sentences are written to. */
+static void hold_descriptors(void)
+{
+	int fd;
+
+	do {
+		fd = open("/dev/null", O_RDWR);
+	} while (fd >= 0 && fd <= STDERR_FILENO);
+	if (fd > STDERR_FILENO)
+		close(fd);
+}
+
 void log_open(const char *program, enum log_level least)
 {
+	hold_descriptors();
 	log_program = program;
 	log_least = least;
 }

@@ -456,6 +456,14 @@ int segment_write(struct segment *s, const void *frames, size_t count, uint64_t 
 	return ret < 0 ? ret : write_frames(s, frames, count);
 }
 
+int segment_look(const struct segment *segment)
+{
+	char path[PATH_BYTES];
+
+	part_path(segment, path, segment->part[segment->parts - 1].file, ".part");
+	return exists(segment, path) ? 0 : -ENOENT;
+}
+
 uint64_t segment_position(const struct segment *segment)
 {
 	return segment->position;

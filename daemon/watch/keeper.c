@@ -108,7 +108,10 @@ static int create_segment(struct work *w, struct piece *piece, uint64_t first)
 static int make_space(struct keeper *keeper)
 {
 	const struct config *config = keeper->config;
-	int ret = space_make(keeper->disk, config->keep.folder, config->keep.free_bytes, config->keep.remove_contacts);
+	int ret = keeper->disk->make_folder(config->keep.folder, 0775);
+
+	if (ret == 0)
+		ret = space_make(keeper->disk, config->keep.folder, config->keep.free_bytes, config->keep.remove_contacts);
 
 	atomic_store(&keeper->free_bytes, keeper->disk->free_bytes(config->keep.folder));
 	return ret;
@@ -310,6 +313,11 @@ static void disk_failed(struct work *w, int ret)
 	clock_gettime(CLOCK_MONOTONIC, &now);
 	if (ret == -ERANGE)             /* a gap too long for one file: simply a new piece */
 		return;
+	if (ret == -ENOENT) {
+		log_error("%s: the recording was taken away while it was being written; a new one begins", folder);
+		trouble(w->keeper, ret);
+		return;
+	}
 	if (!w->refused)
 		log_error("%s: %s: RECORDING STOPPED; watching goes on, the disk is tried again every 5 s", folder,
 		          strerror(-ret));
@@ -329,12 +337,16 @@ static bool disk_ready(struct work *w)
 	return now.tv_sec >= w->again;
 }
 
+/* Now and then: there must be room, and the file must still be where it was made (a folder can be removed or renamed). */
 static int keep_space(struct work *w, uint64_t first)
 {
+	int ret;
+
 	if ((double)(first - w->checked) < 10 * w->keeper->intake->rate)
 		return 0;
 	w->checked = first;
-	return make_space(w->keeper);
+	ret = segment_look(open_piece(w)->segment);
+	return ret < 0 ? ret : make_space(w->keeper);
 }
 
 static void write_frames(struct work *w, size_t count, const struct ring_news *news)
@@ -365,7 +377,7 @@ static void write_frames(struct work *w, size_t count, const struct ring_news *n
 			return;
 		}
 		disk_failed(w, ret);
-		if (ret != -ERANGE)
+		if (ret != -ERANGE && ret != -ENOENT)
 			return;
 		ret = 0;
 	}

@@ -12,7 +12,10 @@
  */
 enum log_level { LEVEL_ERROR, LEVEL_WARNING, LEVEL_NOTICE, LEVEL_DETAIL };
 
-/** Name before each sentence (kept by reference) and the least important level shown; initially LEVEL_NOTICE. */
+/**
+ * Name before each sentence (kept by reference) and the least important level shown; initially LEVEL_NOTICE.  To be called first of
+ * all: where standard input, output or error are closed, /dev/null takes their place.
+ */
 void log_open(const char *program, enum log_level least);
 
 /** Sends every sentence to `sink` instead of stderr, all levels; NULL restores.  For tests. */

@@ -40,6 +40,9 @@ int segment_create(struct segment **out, const struct disk *disk, const struct s
  */
 int segment_write(struct segment *segment, const void *frames, size_t count, uint64_t first, double gap_sigma_frames);
 
+/** @return 0; -ENOENT: the growing file has been taken away, and what is written to it is lost */
+int segment_look(const struct segment *segment);
+
 /** Number after the last frame written. */
 uint64_t segment_position(const struct segment *segment);
 

@@ -1,6 +1,6 @@
 # SPDX-License-Identifier: GPL-3.0-or-later
 """Drives a live recorder (the synthetic intake at a device's pace) from outside and prints TAP."""
-import ctypes, glob, json, os, re, signal, socket, subprocess, sys, threading, time
+import ctypes, glob, json, os, re, shutil, signal, socket, subprocess, sys, threading, time
 
 pause = threading.Event().wait
 program, work = sys.argv[1:3]
@@ -252,6 +252,26 @@ def last_good():
     ok(status == 2, "without a service manager a bad one is refused", (status, said))
 
 
+def taken_away():
+    recorder = Recorder(config("away", 14, extra="everything = true;"))
+    recorder.wait_for(lambda: glob.glob(f"{work}/away/*.wav.part"))
+    shutil.rmtree(f"{work}/away")
+    status, _, said = recorder.end()
+    kept = glob.glob(f"{work}/away/*.wav")
+    ok(status == 1 and "taken away" in said and len(kept) == 1 and os.path.getsize(kept[0]) > 8000 * 2 * 3,
+       "a folder that is removed is made again, and said", (status, kept, said))
+
+
+def closed():
+    """Started without standard output and error: nothing that is said gets into a recording."""
+    path = config("closed", 4, extra="everything = true;")
+    status = subprocess.call(["sh", "-c", f'exec "{program}" --verbose --config "{path}" >&- 2>&- <&-'])
+    kept = glob.glob(f"{work}/closed/*.wav")
+    data = open(kept[0], "rb").read() if len(kept) == 1 else b""
+    ok(status == 0 and data[:4] == b"RIFF" and b"limbwatchd:" not in data, "without standard output recordings stay clean",
+       (status, kept))
+
+
 def unread():
     """Nobody reads the log: a pipe that is full from the start."""
     path = config("unread", 4)
@@ -281,9 +301,9 @@ def guarded(part):
         print("#", part.__name__, repr(error))
 
 
-print("1..27")
+print("1..29")
 parts = [threading.Thread(target=guarded, args=(part,))
-         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread, last_good)]
+         for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread, last_good, taken_away, closed)]
 for part in parts:
     part.start()
 for part in parts:
