@@ -4,6 +4,7 @@
  * and once a second its header: the file is readable by anything after any sync, and segment_repair() needs
  * nothing but the header written at the beginning and the size of the file.
  */
+#include <assert.h>
 #include <errno.h>
 #include <fcntl.h>
 #include <sndfile.h>
@@ -497,12 +498,30 @@ int segment_describe(const struct segment *s, struct sidecar *sidecar)
 	return 0;
 }
 
+static void release(struct segment *s)
+{
+	free(s->part);
+	free(s->gap);
+	free(s);
+}
+
 int segment_close(struct segment *s)
 {
 	int ret = end_part(s);
 
-	free(s->part);
-	free(s->gap);
-	free(s);
+	release(s);
 	return ret;
+}
+
+void segment_abandon(struct segment *s)
+{
+	char path[PATH_BYTES];
+
+	assert(s->parts == 1 && s->position == s->header.first);
+	part_path(s, path, s->part[0].file, ".part");
+	s->mute = true;                 /* libsndfile would write its header once more */
+	sf_close(s->file);
+	s->disk->close(s->fd);
+	s->disk->unlink(path);
+	release(s);
 }

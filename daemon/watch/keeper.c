@@ -14,6 +14,8 @@
 #include "limbwatch/space.h"
 #include "limbwatch/undated.h"
 
+enum { RETRY_S = 2 };                   /* between tries of a disk that refuses */
+
 struct work {
 	struct keeper *keeper;
 	struct plan *plan;              /* being carried out; NULL: none */
@@ -21,6 +23,8 @@ struct work {
 	size_t delivered;               /* contacts of it */
 	bool refused;                   /* the disk took nothing of this plan since the last attempt */
 	time_t again;                   /* then: when to try again, CLOCK_MONOTONIC seconds */
+	size_t held;                    /* frames in the buffer that the disk did not take: live, they are tried again */
+	struct ring_news held_news;
 	size_t pieces;
 	struct piece piece[32];
 	size_t max;                     /* frames of buffer */
@@ -145,6 +149,19 @@ static void describe_piece(struct piece *piece)
 		log_error("out of memory while describing %s", piece->name);
 }
 
+/* Nothing of it got onto the disk, and it would only be in the way of the next try. */
+static void abandon_piece(struct work *w, struct piece *piece)
+{
+	char path[4096];
+
+	snprintf(path, sizeof(path), "%s/%s.json", w->keeper->config->keep.folder, piece->name);
+	segment_abandon(piece->segment);
+	w->keeper->disk->unlink(path);
+	sidecar_clear(&piece->described);
+	w->pieces--;
+	atomic_store(&w->keeper->writing, false);
+}
+
 static void end_piece(struct work *w)
 {
 	struct piece *piece = w->pieces ? &w->piece[w->pieces - 1] : NULL;
@@ -152,6 +169,10 @@ static void end_piece(struct work *w)
 
 	if (!piece || !piece->segment)
 		return;
+	if (segment_position(piece->segment) == piece->first) {
+		abandon_piece(w, piece);
+		return;
+	}
 	describe_piece(piece);
 	piece->end = segment_position(piece->segment);
 	ret = segment_close(piece->segment);
@@ -319,12 +340,12 @@ static void disk_failed(struct work *w, int ret)
 		return;
 	}
 	if (!w->refused)
-		log_error("%s: %s: RECORDING STOPPED; watching goes on, the disk is tried again every 5 s", folder,
-		          strerror(-ret));
+		log_error("%s: %s: RECORDING STOPPED; watching goes on, the disk is tried again every %d s%s", folder,
+		          strerror(-ret), RETRY_S, w->keeper->intake->real_time ? ", and memory keeps what comes meanwhile" : "");
 	trouble(w->keeper, ret);
 	w->refused = true;
 	atomic_store(&w->keeper->refusing, ret);
-	w->again = now.tv_sec + 5;
+	w->again = now.tv_sec + RETRY_S;
 }
 
 static bool disk_ready(struct work *w)
@@ -349,7 +370,8 @@ static int keep_space(struct work *w, uint64_t first)
 	return ret < 0 ? ret : make_space(w->keeper);
 }
 
-static void write_frames(struct work *w, size_t count, const struct ring_news *news)
+/* @return whether the disk took them */
+static bool write_frames(struct work *w, size_t count, const struct ring_news *news)
 {
 	int ret = 0;
 
@@ -361,7 +383,7 @@ static void write_frames(struct work *w, size_t count, const struct ring_news *n
 	for (int attempt = 0; attempt < 2; attempt++) {
 		if (!open_piece(w)) {
 			if (!disk_ready(w))
-				return;
+				return false;
 			ret = begin_piece(w, news->first);
 		}
 		if (ret == 0)
@@ -374,13 +396,31 @@ static void write_frames(struct work *w, size_t count, const struct ring_news *n
 				log_notice("%s: recording again", w->keeper->config->keep.folder);
 			w->refused = false;
 			atomic_store(&w->keeper->refusing, 0);
-			return;
+			return true;
 		}
 		disk_failed(w, ret);
 		if (ret != -ERANGE && ret != -ENOENT)
-			return;
+			return false;
 		ret = 0;
 	}
+	return false;
+}
+
+/*
+ * While the disk refuses, what a live device delivers waits in the ring, which is as long as a stall may be.  A replay waits for nobody.
+ *
+ * @return false: still refused
+ */
+static bool write_held(struct work *w, bool ended)
+{
+	if (!ended && !disk_ready(w))
+		return false;
+	if (write_frames(w, w->held, &w->held_news) || ended) {
+		w->held = 0;
+		return true;
+	}
+	w->held_news.overrun = 0;       /* has been said */
+	return false;
 }
 
 static void finish_plan(struct work *w, unsigned version)
@@ -460,6 +500,8 @@ static bool carry_out(struct work *w, const struct plan_view *view)
 	struct ring_news news = { 0 };
 	bool written = false;
 
+	if (w->held && !write_held(w, view->ended))
+		return false;
 	if (position < view->from) {
 		ring_skip_to(reader, view->decided < view->from ? view->decided : view->from);
 		if (ring_reader_position(reader) < view->from)
@@ -470,9 +512,12 @@ static bool carry_out(struct work *w, const struct plan_view *view)
 		size_t want = view->to - position < w->max ? view->to - position : w->max;
 		size_t count = ring_read(reader, w->buffer, want, &news);
 
-		if (count)
-			write_frames(w, count, &news);
 		written = count > 0;
+		if (count && !write_frames(w, count, &news) && w->keeper->intake->real_time && !view->ended) {
+			w->held = count;
+			w->held_news = news;
+			w->held_news.overrun = 0;
+		}
 	}
 	if (w->version != view->version && view->version && open_piece(w)) {
 		write_sidecars(w, view->version);

@@ -52,6 +52,9 @@ int segment_describe(const struct segment *segment, struct sidecar *sidecar);
 /** Closes properly: header, sync, rename, sync of the folder.  Frees `segment` whatever happens. @return 0 or -errno */
 int segment_close(struct segment *segment);
 
+/** The disk took none of its frames: removes what there is of it and frees it. */
+void segment_abandon(struct segment *segment);
+
 /**
  * After a power cut or kill: closes every NAME.wav.part in the folder (header made to agree with the data that are
  * there, incomplete frame cut off, renamed), marks their sidecars REPAIRED (parts, frames), removes temporary
