@@ -119,7 +119,11 @@ gap_frames() { cat $folder/*.json | jq -s '[.[].gaps[].frames] | add // 0'; }
 
 # Frames that are in none of the files, between the first one's begin and the last one's end.
 missing_frames() {
-	cat $folder/*.json | jq -s '[.[].parts[]] | (map(.first_frame + .frames) | max) - (map(.first_frame) | min) - (map(.frames) | add)'
+	[ $# -gt 0 ] || set -- $folder/*.json
+	cat "$@" | jq -s '[.[].parts[]] | sort_by(.first_frame)
+		| reduce .[] as $p ({ end: .[0].first_frame, lost: 0 };
+			{ lost: (.lost + ([0, $p.first_frame - .end] | max)), end: ([.end, $p.first_frame + $p.frames] | max) })
+		| .lost'
 }
 # The same between the files of two recorders, by the host's clock: seconds.
 missing_seconds() {
