@@ -17,6 +17,9 @@ struct options {
 	bool check, json, quiet, verbose;
 	struct config next;             /* read by the last reload and not taken up yet */
 	bool renewed;
+	struct config before;           /* what ran until the last renewal, until the new one is at work */
+	bool unproven;                  /* `before` stands for something */
+	char *text;                     /* of the configuration file, as it was read */
 };
 
 static void help(FILE *out)
@@ -105,61 +108,83 @@ static void last_good_path(char path[4096])
 		snprintf(path, 4096, "%.*s/limbwatch.conf.last-good", (int)strcspn(folder, ":"), folder);
 }
 
-static int copy_file(const char *from, const char *to)
+/* The file as it is now; NULL: it cannot be read. */
+static char *read_text(const char *path)
 {
-	char buffer[65536], part[4200];
-	FILE *in = fopen(from, "re"), *out;
-	size_t n;
+	char *text = NULL;
+	size_t size = 0;
+	FILE *in = fopen(path, "re"), *out = in ? open_memstream(&text, &size) : NULL;
+	int c;
+
+	while (out && (c = getc(in)) != EOF)
+		putc(c, out);
+	if (in)
+		fclose(in);
+	if (out)
+		fclose(out);
+	return text;
+}
+
+static int write_text(const char *path, const char *text)
+{
+	char part[4200];
+	FILE *out;
 	int ret;
 
-	if (!in)
-		return -errno;
-	snprintf(part, sizeof(part), "%s.part", to);
+	snprintf(part, sizeof(part), "%s.part", path);
 	out = fopen(part, "we");
-	if (!out) {
-		ret = -errno;
-		fclose(in);
-		return ret;
-	}
-	while ((n = fread(buffer, 1, sizeof(buffer), in)) > 0)
-		fwrite(buffer, 1, n, out);
-	ret = ferror(in) || ferror(out) || fflush(out) || fdatasync(fileno(out)) ? -EIO : 0;
-	fclose(in);
-	if (fclose(out) || (ret == 0 && rename(part, to) < 0))
+	if (!out)
+		return -errno;
+	fputs(text, out);
+	ret = ferror(out) || fflush(out) || fdatasync(fileno(out)) ? -EIO : 0;
+	if (fclose(out) || (ret == 0 && rename(part, path) < 0))
 		ret = -errno;
 	return ret;
 }
 
-/* For a restart that finds a bad one, with nobody there: see load(). */
-static void remember_good(const char *config)
+/* This configuration is at work: it is the last good one, for a restart that finds a bad one, with nobody there. */
+static void on_running(void *context)
+{
+	struct options *o = context;
+	char path[4096];
+	int ret;
+
+	if (o->unproven)
+		config_free(&o->before);
+	o->unproven = false;
+	last_good_path(path);
+	if (!*path || !o->text)
+		return;
+	ret = write_text(path, o->text);
+	if (ret < 0)
+		log_warning("%s cannot be kept as the last good configuration in %s: %s", o->config, path, strerror(-ret));
+}
+
+static int load(struct config *config, struct options *o)
+{
+	int ret = config_load(config, o->config);
+
+	if (ret == 0) {
+		free(o->text);
+		o->text = read_text(o->config);
+	}
+	return ret;
+}
+
+/* Under a service manager a bad configuration does not end the nights: the last good one is taken, loudly. @return 0: it is */
+static int load_last_good(struct config *config, struct options *o)
 {
 	char path[4096];
 	int ret;
 
 	last_good_path(path);
-	if (!*path)
-		return;
-	ret = copy_file(config, path);
-	if (ret < 0)
-		log_warning("%s cannot be kept as the last good configuration in %s: %s", config, path, strerror(-ret));
-}
-
-/* Under a service manager a bad configuration does not end the nights: the last good one is taken, loudly. */
-static int load(struct config *config, const struct options *o)
-{
-	char path[4096];
-	int ret = config_load(config, o->config);
-
-	if (o->check || ret == 0) {
-		if (!o->check)
-			remember_good(o->config);
-		return ret;
-	}
-	last_good_path(path);
 	if (!*path || access(path, R_OK) < 0)
-		return ret;
+		return -ENOENT;
 	log_error("%s is refused; THE LAST GOOD CONFIGURATION IS USED INSTEAD: %s", o->config, path);
-	return config_load(config, path);
+	ret = config_load(config, path);
+	free(o->text);
+	o->text = NULL;                 /* it stands there already */
+	return ret;
 }
 
 /* A bad configuration changes nothing: the last good one runs on. */
@@ -168,12 +193,11 @@ static bool reload(void *context)
 	struct options *o = context;
 	struct config config;
 
-	if (config_load(&config, o->config) < 0) {
+	if (load(&config, o) < 0) {
 		log_error("%s is refused; the recorder runs on as it was", o->config);
 		return false;
 	}
 	log_notice("%s is read anew", o->config);
-	remember_good(o->config);
 	if (o->renewed)
 		config_free(&o->next);
 	o->next = config;
@@ -181,22 +205,59 @@ static bool reload(void *context)
 	return true;
 }
 
+/* The new configuration is sound in itself, but may still not fit the device: then the one before runs on. */
+static void renew(struct config *config, struct options *o)
+{
+	if (o->unproven)
+		config_free(config);    /* never got to work; `before` stays */
+	else
+		o->before = *config;
+	o->unproven = true;
+	*config = o->next;
+	o->renewed = false;
+}
+
+/* @return whether there is something to fall back on; `ret` is what ended a configuration that never got to work */
+static bool fall_back(struct config *config, struct options *o, int ret, bool *tried)
+{
+	struct config good;
+
+	if (o->unproven) {
+		log_error("%s does not work; the recorder runs on as it was", o->config);
+		config_free(config);
+		*config = o->before;
+		o->unproven = false;
+		return true;
+	}
+	if (ret != -EINVAL || *tried || load_last_good(&good, o) < 0)
+		return false;
+	*tried = true;
+	config_free(config);
+	*config = good;
+	return true;
+}
+
 static int record(struct config *config, struct options *o)
 {
 	struct recorder_hooks hooks = {
-		.context = o, .contact = print_contact, .progress = true, .service = true, .reload = reload,
+		.context = o, .contact = print_contact, .progress = true, .service = true, .running = on_running, .reload = reload,
 	};
+	bool tried = false;
 	int ret;
 
 	log_detach();
-	while ((ret = recorder_run(config, &hooks)) == RECORDER_RENEW) {
-		config_free(config);
-		*config = o->next;
-		o->renewed = false;
+	for (;;) {
+		ret = recorder_run(config, &hooks);
+		if (ret == RECORDER_RENEW)
+			renew(config, o);
+		else if (ret >= 0 || !fall_back(config, o, ret, &tried))
+			break;
 	}
 	log_attach();
 	if (o->renewed)
 		config_free(&o->next);
+	if (o->unproven)
+		config_free(&o->before);
 	return ret;
 }
 
@@ -212,11 +273,14 @@ int main(int argc, char **argv)
 		return ret;
 	log_open("limbwatchd", options.quiet ? LEVEL_WARNING : options.verbose ? LEVEL_DETAIL : LEVEL_NOTICE);
 	ret = load(&config, &options);
+	if (ret < 0 && !options.check)
+		ret = load_last_good(&config, &options);
 	if (ret < 0)
 		return EXIT_USAGE;
 	catch_signals();
 	ret = options.check ? recorder_describe(&config, stdout) : record(&config, &options);
 	config_free(&config);
+	free(options.text);
 	if (ret == -EINVAL)
 		return EXIT_USAGE;
 	return ret < 0 ? EXIT_FAILURE : EXIT_SUCCESS;

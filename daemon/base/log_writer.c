@@ -7,7 +7,7 @@
 #include "limbwatch/stamp_line.h"
 #include "log_writer.h"
 
-enum { WAITING = 512, KINDS = 64, BURST = 10 };
+enum { WAITING = 512, KINDS = 64, BURST = 30 };
 static const int64_t quiet_ns = 60000000000;            /* one kind of sentence: so many, then a minute's silence */
 
 static pthread_mutex_t mutex = PTHREAD_MUTEX_INITIALIZER;

@@ -415,7 +415,12 @@ static bool write_held(struct work *w, bool ended)
 {
 	if (!ended && !disk_ready(w))
 		return false;
-	if (write_frames(w, w->held, &w->held_news) || ended) {
+	if (write_frames(w, w->held, &w->held_news)) {
+		w->held = 0;
+		return true;
+	}
+	if (ended) {
+		atomic_fetch_add(&w->keeper->lost, w->held);
 		w->held = 0;
 		return true;
 	}
@@ -492,6 +497,18 @@ static void idle(const struct keeper *keeper)
 	nanosleep(&(struct timespec){ .tv_nsec = keeper->idle_ns }, NULL);
 }
 
+/* The disk did not take these. */
+static void hold(struct work *w, const struct plan_view *view, size_t count, const struct ring_news *news)
+{
+	if (!w->keeper->intake->real_time || view->ended) {
+		atomic_fetch_add(&w->keeper->lost, count);
+		return;
+	}
+	w->held = count;
+	w->held_news = *news;
+	w->held_news.overrun = 0;       /* has been said */
+}
+
 /* Takes one step of the plan. @return false: nothing to do now */
 static bool carry_out(struct work *w, const struct plan_view *view)
 {
@@ -513,11 +530,8 @@ static bool carry_out(struct work *w, const struct plan_view *view)
 		size_t count = ring_read(reader, w->buffer, want, &news);
 
 		written = count > 0;
-		if (count && !write_frames(w, count, &news) && w->keeper->intake->real_time && !view->ended) {
-			w->held = count;
-			w->held_news = news;
-			w->held_news.overrun = 0;
-		}
+		if (count && !write_frames(w, count, &news))
+			hold(w, view, count, &news);
 	}
 	if (w->version != view->version && view->version && open_piece(w)) {
 		write_sidecars(w, view->version);

@@ -320,6 +320,8 @@ static int run_threads(struct recorder *r)
 		             r->device.realtime < 0 ? r->device.realtime : 0);
 	if (r->hooks->service)
 		service_ready();
+	if (r->hooks->running)
+		r->hooks->running(r->hooks->context);
 	watch_over(r);
 	pthread_join(r->signal_thread, NULL);
 	return 0;
@@ -355,6 +357,8 @@ static int say_end(struct recorder *r)
 		log_error("%s", sentence);
 	else if (*sentence)
 		log_warning("%s", sentence);
+	if (lost)
+		log_error("%llu frames are in no recording: the disk did not take them in time", lost);
 	if (gaps)
 		log_warning("%s lost %llu frames; the gaps are noted in the sidecars", r->face.name, gaps);
 	say_latency("ring", &r->acquire.latency);

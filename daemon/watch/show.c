@@ -58,8 +58,13 @@ void show_hello(struct shown *shown)
 
 void show_waiting(struct shown *shown)
 {
-	json_t *o = object("device");
+	int64_t now = host_now();
+	json_t *o;
 
+	if (now / 1000000000 == shown->second_ns / 1000000000)
+		return;
+	shown->second_ns = now;
+	o = object("device");
 	json_object_set_new(o, "state", json_string("missing"));
 	json_object_set_new(o, "driver", json_string(shown->config->driver->name));
 	publish(shown, "device", o);

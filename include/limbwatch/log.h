@@ -23,7 +23,7 @@ void log_set_sink(void (*sink)(void *context, enum log_level level, const char *
 
 /**
  * From now on a thread of its own writes to stderr: nobody who says something waits for a terminal or a journal that does not read.
- * What is too much is counted and said: more than ten sentences of a kind in a minute, or 512 waiting.  @return 0 or -errno
+ * What is too much is counted and said: more than thirty sentences of a kind in a minute, or 512 waiting.  @return 0 or -errno
  */
 int  log_detach(void);
 /** Ends that; what waits is written, for two seconds at most. */

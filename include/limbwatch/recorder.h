@@ -14,6 +14,8 @@ struct recorder_hooks {
 	void (*contact)(void *context, const struct config *config, const struct contact *contact, const char *segment);
 	bool progress;                  /* say how far a long replay has come */
 	bool service;                   /* the daemon itself: state socket, service manager, real-time priority */
+	/* Main thread, once: everything this configuration needs is there, and it is at work.  May be NULL. */
+	void (*running)(void *context);
 	/* Main thread, after recorder_reload(): reads and checks the new configuration.  @return whether it is to be taken up,
 	 * which ends recorder_run() with RECORDER_RENEW when no vigil is open.  NULL: there is none. */
 	bool (*reload)(void *context);

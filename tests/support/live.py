@@ -180,6 +180,13 @@ def reloaded():
     recorder.wait_for(lambda: "is refused" in recorder.said())
     ok(re.search(r"line \d+.*column.*99", recorder.said()) and "runs on as it was" in recorder.said(),
        "a bad configuration is refused with its line", recorder.said())
+    open(path, "w").write(good.replace("column = 2", "column = 3"))
+    recorder.process.send_signal(signal.SIGHUP)
+    recorder.wait_for(lambda: "does not work" in recorder.said())
+    with connect(f"{work}/reload.sock") as reader:
+        again = lines_of(reader, lambda seen: any(line["what"] == "clock" for line in seen))
+    ok("in column 3" in recorder.said() and recorder.process.poll() is None and again[0].get("station") == "Brackenfold",
+       "one that does not fit the device gives way to the one before", recorder.said())
     open(path, "w").write(good.replace("Brackenfold", "Hollowmere"))
     recorder.process.send_signal(signal.SIGHUP)
 
@@ -248,6 +255,10 @@ def last_good():
     status, out, said = Recorder(path, STATE_DIRECTORY=kept).end()
     ok(status == 0 and "LAST GOOD" in said and "line 1" in said and out.count('"snr"') == 1,
        "and taken, loudly, when a restart finds a bad one", (status, out, said))
+    open(path, "w").write(open(f"{kept}/limbwatch.conf.last-good").read().replace("column = 2", "column = 3"))
+    status, out, said = Recorder(path, STATE_DIRECTORY=kept).end()
+    ok(status == 0 and "LAST GOOD" in said and "in column 3" in said and out.count('"snr"') == 1,
+       "also when it does not fit the device", (status, out, said))
     status, _, said = Recorder(path).end()
     ok(status == 2, "without a service manager a bad one is refused", (status, said))
 
@@ -301,7 +312,7 @@ def guarded(part):
         print("#", part.__name__, repr(error))
 
 
-print("1..29")
+print("1..31")
 parts = [threading.Thread(target=guarded, args=(part,))
          for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread, last_good, taken_away, closed)]
 for part in parts:
