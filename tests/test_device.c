@@ -39,6 +39,7 @@ static struct play {
 	_Atomic size_t at;
 	sem_t never;
 	unsigned opened;
+	atomic_uint closed;
 } play;
 
 /* The computer's sleep: CLOCK_MONOTONIC stands still in it, the other clocks and the device's crystal do not. */
@@ -113,6 +114,7 @@ static int actor_stop(struct intake *intake)
 static void actor_close(struct intake *intake)
 {
 	free(intake);
+	atomic_fetch_add(&play.closed, 1);
 }
 
 static int actor_read(struct intake *intake, struct block *block, int timeout_ms)
@@ -193,6 +195,7 @@ static int perform(const struct scene *scenes)
 	play.scene = scenes;
 	play.at = 0;
 	play.opened = 0;
+	atomic_store(&play.closed, 0);
 	play.born_ns = host_now();
 	play.scene_ns = play.born_ns;
 	*said = 0;
@@ -276,7 +279,12 @@ static void a_card_lost_silent_or_hanging_is_recorded_on(void **state)
 	assert_true(present > 3.5 * RATE);
 	sidecar_clear(&s);
 	assert_int_equal(access(socket_path, F_OK), -1);
+	/* The hanging read comes back when nobody waits for it any more: its card is given free. */
+	assert_int_equal(atomic_load(&play.closed), play.opened - 1);
 	sem_post(&play.never);
+	for (int64_t until = host_now() + 30000000000; atomic_load(&play.closed) < play.opened && host_now() < until; )
+		nanosleep(&(struct timespec){ .tv_nsec = 1000000 }, NULL);
+	assert_int_equal(atomic_load(&play.closed), play.opened);
 }
 
 int main(void)

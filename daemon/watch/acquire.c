@@ -7,7 +7,7 @@
 #include "acquire.h"
 
 /* Who may write to the ring: the session's thread only while it holds the grip. */
-enum grip { GRIP_FREE, GRIP_HELD, GRIP_ABANDONED };
+enum grip { GRIP_FREE, GRIP_HELD, GRIP_ABANDONED, GRIP_HUNG, GRIP_CAME_BACK };
 
 void acquire_create(struct acquire *a, struct ring *ring, double rate, atomic_bool *stop)
 {
@@ -146,14 +146,27 @@ static bool take_grip(struct session *s)
 	return atomic_compare_exchange_strong(&s->grip, &wanted, GRIP_HELD);
 }
 
-void acquire_abandon(struct session *s)
+void acquire_abandon(struct session *s, bool hung)
 {
 	int wanted = GRIP_FREE;
 
-	while (!atomic_compare_exchange_strong(&s->grip, &wanted, GRIP_ABANDONED)) {
+	while (!atomic_compare_exchange_strong(&s->grip, &wanted, hung ? GRIP_HUNG : GRIP_ABANDONED)) {
 		wanted = GRIP_FREE;
 		sched_yield();          /* held for the microseconds of one block */
 	}
+}
+
+bool acquire_came_back(const struct session *s)
+{
+	return atomic_load(&s->grip) == GRIP_CAME_BACK;
+}
+
+/* A hung read has come back at last: the device must not stay in use by a handle that nobody has any more. */
+static void come_back(struct session *s)
+{
+	s->intake->driver->stop(s->intake);
+	s->intake->driver->close(s->intake);
+	atomic_store(&s->grip, GRIP_CAME_BACK);
 }
 
 /* A page fault in the loop would be a file access: the stack is there beforehand. */
@@ -199,8 +212,11 @@ void *acquire_run(void *argument)
 
 	touch_stack();
 	ret = take_blocks(s);
-	if (ret == 0)
-		return NULL;            /* abandoned */
+	if (ret == 0) {                 /* abandoned */
+		if (atomic_load(&s->grip) == GRIP_HUNG)
+			come_back(s);
+		return NULL;
+	}
 	if (ret == -ENODATA || ret == -ECANCELED || !s->intake->driver->comes_back)
 		ring_end(s->acquire->ring);
 	atomic_store(&s->result, ret);

@@ -10,6 +10,7 @@
 static const int64_t retry_first_ns = 500000000, retry_ns = 3000000000;         /* quick replugs, then patience */
 static const int64_t remind_ns = 600000000000;          /* a missing device is said again every ten minutes */
 static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, for one reason not oftener than once a minute */
+static const int64_t hung_patience_ns = 60000000000;
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
 
 /* Sessions whose threads never came back, with all that those still hold. */
@@ -184,7 +185,8 @@ static void abandon_session(struct device *d)
 {
 	struct abandoned *a = malloc(sizeof(*a));
 
-	acquire_abandon(d->session);
+	acquire_abandon(d->session, true);
+	d->hung = d->session;
 	pthread_detach(d->thread);
 	if (a) {
 		*a = (struct abandoned){ d->session, abandoned };
@@ -254,7 +256,7 @@ static void check_silence(struct device *d, int64_t now)
 	/* The thread is in a read that times out: this takes its grip before the next block, and it ends. */
 	snprintf(d->why, sizeof(d->why), "\"%s\" has delivered nothing for %.0f s", d->intake->name,
 	         (double)(now - d->frame_ns) * 1e-9);
-	acquire_abandon(d->session);
+	acquire_abandon(d->session, false);
 	pthread_join(d->thread, NULL);
 	free(d->session);
 	d->session = NULL;
@@ -296,6 +298,17 @@ static void check_end(struct device *d)
 		lost(d);
 }
 
+/* A device held by our own hanging read is free only when this process ends: then the service manager's new start helps. */
+static void give_up_hung(struct device *d)
+{
+	if (!d->hung || acquire_came_back(d->hung) || d->said_error != -EBUSY || host_now() - d->lost_ns < hung_patience_ns)
+		return;
+	snprintf(d->why, sizeof(d->why), "\"%s\" is still held by a read that hangs: only a new start of the recorder frees it",
+	         d->face.name);
+	d->result = -EBUSY;
+	ended(d);
+}
+
 static void find_again(struct device *d)
 {
 	int64_t since = d->lost_ns;
@@ -307,8 +320,10 @@ static void find_again(struct device *d)
 		ended(d);
 		return;
 	}
-	if (device_find(d) != 1)
+	if (device_find(d) != 1) {
+		give_up_hung(d);
 		return;
+	}
 	ret = device_start(d, d->acquire);
 	if (ret < 0) {
 		d->config->driver->close(d->intake);
