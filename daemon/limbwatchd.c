@@ -96,6 +96,9 @@ static void print_contact(void *context, const struct config *config, const stru
 	const struct options *o = context;
 
 	(o->json ? report_json : report_text)(stdout, config, contact, segment);
+	if (ferror(stdout))
+		log_error("standard output does not take the contact: %s; it is in the sidecar", strerror(errno));
+	clearerr(stdout);
 }
 
 /* Where the service manager lets the recorder keep things, "" without one: systemd.exec(5), StateDirectory=. */

@@ -171,6 +171,20 @@ void state_publish(struct state *state, const char *kind, const char *line)
 			tell(&state->reader[k], line);
 }
 
+/* Who has missed most reads no more, perhaps: the place is given to somebody who comes. @return past the end when all keep up */
+static struct reader *make_place(struct state *state)
+{
+	struct reader *worst = state->reader;
+
+	for (struct reader *reader = state->reader; reader < state->reader + READERS; reader++)
+		if (reader->missed > worst->missed)
+			worst = reader;
+	if (!worst->missed)
+		return state->reader + READERS;
+	dismiss(state, worst);
+	return worst;
+}
+
 static bool let_in(struct state *state)
 {
 	int fd = accept4(state->fd, NULL, NULL, SOCK_NONBLOCK | SOCK_CLOEXEC);
@@ -180,6 +194,8 @@ static bool let_in(struct state *state)
 		return false;
 	while (reader < state->reader + READERS && reader->fd >= 0)
 		reader++;
+	if (reader == state->reader + READERS)
+		reader = make_place(state);
 	if (reader == state->reader + READERS) {
 		static const char full[] = "{\"what\":\"full\"}\n";
 
