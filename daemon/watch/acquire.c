@@ -199,8 +199,10 @@ void *acquire_run(void *argument)
 
 	touch_stack();
 	ret = take_blocks(s);
-	if (ret == 0)
-		return NULL;            /* abandoned */
+	if (ret == 0) {                 /* abandoned: the session is the main thread's from here on */
+		atomic_store(&s->left, true);
+		return NULL;
+	}
 	if (ret == -ENODATA || ret == -ECANCELED || !s->intake->driver->comes_back)
 		ring_end(s->acquire->ring);
 	atomic_store(&s->result, ret);

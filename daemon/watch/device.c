@@ -3,6 +3,7 @@
 #include <inttypes.h>
 #include <stdlib.h>
 #include <string.h>
+#include <time.h>
 #include "device.h"
 #include "limbwatch/log.h"
 #include "realtime.h"
@@ -12,7 +13,7 @@ static const int64_t remind_ns = 600000000000;          /* a missing device is s
 static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, for one reason not oftener than once a minute */
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
 
-/* Sessions whose threads never came back, with all that those still hold. */
+/* Sessions whose threads have not come back, with all that those still hold. */
 static struct abandoned {
 	struct session *session;
 	struct abandoned *next;
@@ -179,12 +180,11 @@ static void end_session(struct device *d)
 	close_intake(d);
 }
 
-/* The thread hangs in a driver: it is left there with its intake. */
-static void abandon_session(struct device *d)
+/* The thread, from which the grip has been taken, hangs in a driver: it is left there with its intake. */
+static void leave_session(struct device *d)
 {
 	struct abandoned *a = malloc(sizeof(*a));
 
-	acquire_abandon(d->session);
 	pthread_detach(d->thread);
 	if (a) {
 		*a = (struct abandoned){ d->session, abandoned };
@@ -193,6 +193,27 @@ static void abandon_session(struct device *d)
 	d->session = NULL;
 	d->intake = NULL;
 	d->result = -ETIMEDOUT;
+}
+
+/* A thread that came back after all leaves its intake to be closed: until then a card may be busy, or keep its number. */
+static void close_left(void)
+{
+	struct abandoned **at = &abandoned;
+
+	while (*at) {
+		struct abandoned *a = *at;
+		struct intake *intake = a->session->intake;
+
+		if (!atomic_load(&a->session->left)) {
+			at = &a->next;
+			continue;
+		}
+		intake->driver->stop(intake);
+		intake->driver->close(intake);
+		free(a->session);
+		*at = a->next;
+		free(a);
+	}
 }
 
 static void lost(struct device *d)
@@ -231,13 +252,29 @@ static void check_hang(struct device *d, int64_t now)
 		return;
 	snprintf(d->why, sizeof(d->why), "\"%s\" hangs: a read has not come back for %.0f s", d->intake->name,
 	         (double)(now - d->beat_ns) * 1e-9);
-	abandon_session(d);
+	acquire_abandon(d->session);
+	leave_session(d);
 	if (stopping)
 		d->result = -ECANCELED;
 	if (stopping || !d->config->driver->comes_back)
 		ended(d);
 	else
 		lost(d);
+}
+
+/* The thread is in a read that times out: this takes its grip before the next block, and it ends.  @return false: it hangs after all */
+static bool comes_out(struct device *d)
+{
+	struct timespec until;
+
+	acquire_abandon(d->session);
+	clock_gettime(CLOCK_MONOTONIC, &until);
+	until.tv_sec += hang_stopping_ns / 1000000000;
+	if (pthread_clockjoin_np(d->thread, NULL, CLOCK_MONOTONIC, &until))
+		return false;
+	free(d->session);
+	d->session = NULL;
+	return true;
 }
 
 /* A device that runs and delivers nothing is stopped and opened anew. */
@@ -251,14 +288,12 @@ static void check_silence(struct device *d, int64_t now)
 	}
 	if (now - d->frame_ns < silence_ns(d) || atomic_load(d->stop))
 		return;
-	/* The thread is in a read that times out: this takes its grip before the next block, and it ends. */
 	snprintf(d->why, sizeof(d->why), "\"%s\" has delivered nothing for %.0f s", d->intake->name,
 	         (double)(now - d->frame_ns) * 1e-9);
-	acquire_abandon(d->session);
-	pthread_join(d->thread, NULL);
-	free(d->session);
-	d->session = NULL;
-	close_intake(d);
+	if (comes_out(d))
+		close_intake(d);
+	else
+		leave_session(d);
 	lost(d);
 }
 
@@ -323,6 +358,7 @@ void device_watch(struct device *d)
 {
 	int64_t now = host_now();
 
+	close_left();
 	if (d->state == DEVICE_RUNNING)
 		check_end(d);
 	if (d->state == DEVICE_RUNNING)
