@@ -12,6 +12,7 @@ static const int64_t retry_first_ns = 500000000, retry_ns = 3000000000;         
 static const int64_t remind_ns = 600000000000;          /* a missing device is said again every ten minutes */
 static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, for one reason not oftener than once a minute */
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
+static const int64_t absent_ns = 1000000000;            /* this thread comes by several times a second */
 
 /* Sessions whose threads have not come back, with all that those still hold. */
 static struct abandoned {
@@ -354,10 +355,23 @@ static void find_again(struct device *d)
 	log_notice("\"%s\" is back after %.1f s", d->face.name, (double)(host_now() - since) * 1e-9);
 }
 
+/* While the whole program stood still (stopped, or a machine under it asleep) nobody could make progress: that is no fault of the device. */
+static void excuse_absence(struct device *d, int64_t now)
+{
+	int64_t absent = now - d->watched_ns;
+
+	if (d->watched_ns && absent > absent_ns) {
+		d->beat_ns = d->beat_ns + absent < now ? d->beat_ns + absent : now;
+		d->frame_ns = d->frame_ns + absent < now ? d->frame_ns + absent : now;
+	}
+	d->watched_ns = now;
+}
+
 void device_watch(struct device *d)
 {
 	int64_t now = host_now();
 
+	excuse_absence(d, now);
 	close_left();
 	if (d->state == DEVICE_RUNNING)
 		check_end(d);

@@ -38,7 +38,7 @@ struct device {
 	unsigned gaps_why;              /* reasons said in the last minute */
 	int said_error;                 /* of the last try that was said */
 	unsigned long long beats, frames, frames_at_start, gaps;
-	int64_t beat_ns, frame_ns;
+	int64_t beat_ns, frame_ns, watched_ns;
 	pthread_mutex_t mutex;
 	struct intake face;             /* a copy for other threads: no calls through it */
 };
