@@ -230,6 +230,8 @@ static bool fall_back(struct config *config, struct options *o, int ret, bool *t
 		config_free(config);
 		*config = o->before;
 		o->unproven = false;
+		free(o->text);          /* of the one that does not work */
+		o->text = NULL;
 		return true;
 	}
 	if (ret != -EINVAL || *tried || load_last_good(&good, o) < 0)

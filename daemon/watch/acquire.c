@@ -7,7 +7,7 @@
 #include "acquire.h"
 
 /* Who may write to the ring: the session's thread only while it holds the grip. */
-enum grip { GRIP_FREE, GRIP_HELD, GRIP_ABANDONED, GRIP_HUNG, GRIP_CAME_BACK };
+enum grip { GRIP_FREE, GRIP_HELD, GRIP_ABANDONED };
 
 void acquire_create(struct acquire *a, struct ring *ring, double rate, atomic_bool *stop)
 {
@@ -146,27 +146,14 @@ static bool take_grip(struct session *s)
 	return atomic_compare_exchange_strong(&s->grip, &wanted, GRIP_HELD);
 }
 
-void acquire_abandon(struct session *s, bool hung)
+void acquire_abandon(struct session *s)
 {
 	int wanted = GRIP_FREE;
 
-	while (!atomic_compare_exchange_strong(&s->grip, &wanted, hung ? GRIP_HUNG : GRIP_ABANDONED)) {
+	while (!atomic_compare_exchange_strong(&s->grip, &wanted, GRIP_ABANDONED)) {
 		wanted = GRIP_FREE;
 		sched_yield();          /* held for the microseconds of one block */
 	}
-}
-
-bool acquire_came_back(const struct session *s)
-{
-	return atomic_load(&s->grip) == GRIP_CAME_BACK;
-}
-
-/* A hung read has come back at last: the device must not stay in use by a handle that nobody has any more. */
-static void come_back(struct session *s)
-{
-	s->intake->driver->stop(s->intake);
-	s->intake->driver->close(s->intake);
-	atomic_store(&s->grip, GRIP_CAME_BACK);
 }
 
 /* A page fault in the loop would be a file access: the stack is there beforehand. */
@@ -212,9 +199,8 @@ void *acquire_run(void *argument)
 
 	touch_stack();
 	ret = take_blocks(s);
-	if (ret == 0) {                 /* abandoned */
-		if (atomic_load(&s->grip) == GRIP_HUNG)
-			come_back(s);
+	if (ret == 0) {                 /* abandoned: the session is the main thread's from here on */
+		atomic_store(&s->left, true);
 		return NULL;
 	}
 	if (ret == -ENODATA || ret == -ECANCELED || !s->intake->driver->comes_back)

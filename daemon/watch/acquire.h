@@ -57,18 +57,13 @@ struct session {
 	struct acquire *acquire;
 	struct intake *intake;          /* started */
 	atomic_int grip;                /* enum grip */
+	atomic_bool left;               /* abandoned, and the thread is out of the driver: the intake may be closed */
 	atomic_int result;              /* 0 while running; -ENODATA: the data ended; -ECANCELED: stopped; other -errno */
 };
 
 /** Thread function; argument: struct session.  Ends the ring when nothing more can come from this intake. */
 void *acquire_run(void *session);
-/**
- * Main thread: from now on the session's thread touches neither ring nor acquire.
- *
- * @param hung  nobody will join it: should it ever come back, it closes the intake itself
- */
-void acquire_abandon(struct session *session, bool hung);
-/** Whether a session abandoned as hung has come back and closed its intake. */
-bool acquire_came_back(const struct session *session);
+/** Main thread: from now on the session's thread touches neither ring nor acquire. */
+void acquire_abandon(struct session *session);
 
 #endif

@@ -3,6 +3,7 @@
 #include <inttypes.h>
 #include <stdlib.h>
 #include <string.h>
+#include <time.h>
 #include "device.h"
 #include "limbwatch/log.h"
 #include "realtime.h"
@@ -12,8 +13,9 @@ static const int64_t remind_ns = 600000000000;          /* a missing device is s
 static const int64_t gaps_ns = 60000000000;             /* gaps are said at once, for one reason not oftener than once a minute */
 static const int64_t hung_patience_ns = 60000000000;
 static const int64_t hang_stopping_ns = 1000000000;     /* a read comes back within 0.1 s */
+static const int64_t absent_ns = 1000000000;            /* this thread comes by several times a second */
 
-/* Sessions whose threads never came back, with all that those still hold. */
+/* Sessions whose threads have not come back, with all that those still hold. */
 static struct abandoned {
 	struct session *session;
 	struct abandoned *next;
@@ -180,13 +182,11 @@ static void end_session(struct device *d)
 	close_intake(d);
 }
 
-/* The thread hangs in a driver: it is left there with its intake. */
-static void abandon_session(struct device *d)
+/* The thread, from which the grip has been taken, hangs in a driver: it is left there with its intake. */
+static void leave_session(struct device *d)
 {
 	struct abandoned *a = malloc(sizeof(*a));
 
-	acquire_abandon(d->session, true);
-	d->hung = d->session;
 	pthread_detach(d->thread);
 	if (a) {
 		*a = (struct abandoned){ d->session, abandoned };
@@ -195,6 +195,27 @@ static void abandon_session(struct device *d)
 	d->session = NULL;
 	d->intake = NULL;
 	d->result = -ETIMEDOUT;
+}
+
+/* A thread that came back after all leaves its intake to be closed: until then a card may be busy, or keep its number. */
+static void close_left(void)
+{
+	struct abandoned **at = &abandoned;
+
+	while (*at) {
+		struct abandoned *a = *at;
+		struct intake *intake = a->session->intake;
+
+		if (!atomic_load(&a->session->left)) {
+			at = &a->next;
+			continue;
+		}
+		intake->driver->stop(intake);
+		intake->driver->close(intake);
+		free(a->session);
+		*at = a->next;
+		free(a);
+	}
 }
 
 static void lost(struct device *d)
@@ -233,13 +254,29 @@ static void check_hang(struct device *d, int64_t now)
 		return;
 	snprintf(d->why, sizeof(d->why), "\"%s\" hangs: a read has not come back for %.0f s", d->intake->name,
 	         (double)(now - d->beat_ns) * 1e-9);
-	abandon_session(d);
+	acquire_abandon(d->session);
+	leave_session(d);
 	if (stopping)
 		d->result = -ECANCELED;
 	if (stopping || !d->config->driver->comes_back)
 		ended(d);
 	else
 		lost(d);
+}
+
+/* The thread is in a read that times out: this takes its grip before the next block, and it ends.  @return false: it hangs after all */
+static bool comes_out(struct device *d)
+{
+	struct timespec until;
+
+	acquire_abandon(d->session);
+	clock_gettime(CLOCK_MONOTONIC, &until);
+	until.tv_sec += hang_stopping_ns / 1000000000;
+	if (pthread_clockjoin_np(d->thread, NULL, CLOCK_MONOTONIC, &until))
+		return false;
+	free(d->session);
+	d->session = NULL;
+	return true;
 }
 
 /* A device that runs and delivers nothing is stopped and opened anew. */
@@ -253,14 +290,12 @@ static void check_silence(struct device *d, int64_t now)
 	}
 	if (now - d->frame_ns < silence_ns(d) || atomic_load(d->stop))
 		return;
-	/* The thread is in a read that times out: this takes its grip before the next block, and it ends. */
 	snprintf(d->why, sizeof(d->why), "\"%s\" has delivered nothing for %.0f s", d->intake->name,
 	         (double)(now - d->frame_ns) * 1e-9);
-	acquire_abandon(d->session, false);
-	pthread_join(d->thread, NULL);
-	free(d->session);
-	d->session = NULL;
-	close_intake(d);
+	if (comes_out(d))
+		close_intake(d);
+	else
+		leave_session(d);
 	lost(d);
 }
 
@@ -301,7 +336,7 @@ static void check_end(struct device *d)
 /* A device held by our own hanging read is free only when this process ends: then the service manager's new start helps. */
 static void give_up_hung(struct device *d)
 {
-	if (!d->hung || acquire_came_back(d->hung) || d->said_error != -EBUSY || host_now() - d->lost_ns < hung_patience_ns)
+	if (!abandoned || d->said_error != -EBUSY || host_now() - d->lost_ns < hung_patience_ns)
 		return;
 	snprintf(d->why, sizeof(d->why), "\"%s\" is still held by a read that hangs: only a new start of the recorder frees it",
 	         d->face.name);
@@ -334,10 +369,24 @@ static void find_again(struct device *d)
 	log_notice("\"%s\" is back after %.1f s", d->face.name, (double)(host_now() - since) * 1e-9);
 }
 
+/* While the whole program stood still (stopped, or a machine under it asleep) nobody could make progress: that is no fault of the device. */
+static void excuse_absence(struct device *d, int64_t now)
+{
+	int64_t absent = now - d->watched_ns;
+
+	if (d->watched_ns && absent > absent_ns) {
+		d->beat_ns = d->beat_ns + absent < now ? d->beat_ns + absent : now;
+		d->frame_ns = d->frame_ns + absent < now ? d->frame_ns + absent : now;
+	}
+	d->watched_ns = now;
+}
+
 void device_watch(struct device *d)
 {
 	int64_t now = host_now();
 
+	excuse_absence(d, now);
+	close_left();
 	if (d->state == DEVICE_RUNNING)
 		check_end(d);
 	if (d->state == DEVICE_RUNNING)

@@ -36,10 +36,9 @@ struct device {
 	double rate;
 	int64_t lost_ns, retry_ns, said_ns, gaps_said_ns;
 	unsigned gaps_why;              /* reasons said in the last minute */
-	struct session *hung;           /* the newest one abandoned in a read that hangs */
 	int said_error;                 /* of the last try that was said */
 	unsigned long long beats, frames, frames_at_start, gaps;
-	int64_t beat_ns, frame_ns;
+	int64_t beat_ns, frame_ns, watched_ns;
 	pthread_mutex_t mutex;
 	struct intake face;             /* a copy for other threads: no calls through it */
 };

@@ -169,7 +169,8 @@ def left_over():
 def reloaded():
     manager = Manager(f"{work}/notify")
     path = config("reload", 600)
-    recorder = Recorder(path, NOTIFY_SOCKET=manager.path, WATCHDOG_USEC="2000000")
+    os.mkdir(f"{work}/reload_state")
+    recorder = Recorder(path, NOTIFY_SOCKET=manager.path, WATCHDOG_USEC="2000000", STATE_DIRECTORY=f"{work}/reload_state")
     recorder.wait_for(lambda: manager.read().count("WATCHDOG=1") > 2)
     ok("READY=1" in manager.lines, "the manager hears that it is ready", manager.lines)
     ok(manager.lines.count("WATCHDOG=1") > 2, "and that it lives", manager.lines)
@@ -187,6 +188,7 @@ def reloaded():
         again = lines_of(reader, lambda seen: any(line["what"] == "clock" for line in seen))
     ok("in column 3" in recorder.said() and recorder.process.poll() is None and again[0].get("station") == "Brackenfold",
        "one that does not fit the device gives way to the one before", recorder.said())
+    ok(open(f"{work}/reload_state/limbwatch.conf.last-good").read() == good, "and is not remembered as the last good one")
     open(path, "w").write(good.replace("Brackenfold", "Hollowmere"))
     recorder.process.send_signal(signal.SIGHUP)
 
@@ -312,7 +314,7 @@ def guarded(part):
         print("#", part.__name__, repr(error))
 
 
-print("1..31")
+print("1..32")
 parts = [threading.Thread(target=guarded, args=(part,))
          for part in (looked_at, left_over, reloaded, renewed_after_the_vigil, stuck, unread, last_good, taken_away, closed)]
 for part in parts:
