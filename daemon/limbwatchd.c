@@ -277,12 +277,13 @@ int main(int argc, char **argv)
 	if (ret >= 0)
 		return ret;
 	log_open("limbwatchd", options.quiet ? LEVEL_WARNING : options.verbose ? LEVEL_DETAIL : LEVEL_NOTICE);
+	if (!options.check)
+		catch_signals();        /* before the configuration is read, which takes a while: a SIGHUP then must not end it */
 	ret = load(&config, &options);
 	if (ret < 0 && !options.check)
 		ret = load_last_good(&config, &options);
 	if (ret < 0)
 		return EXIT_USAGE;
-	catch_signals();
 	ret = options.check ? recorder_describe(&config, stdout) : record(&config, &options);
 	config_free(&config);
 	free(options.text);

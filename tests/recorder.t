@@ -1,7 +1,7 @@
 #!/bin/sh
 # The whole recorder: synthetic, file and pipe intakes, what it says and what it leaves behind.
 . tests/support/tap.sh
-plan 19
+plan 20
 
 channels='channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );'
@@ -138,3 +138,16 @@ END
 head -c 600000 "$work/raw" | "$build/limbwatchd" --quiet --config "$work/g.conf" > "$work/out" 2> "$work/err"
 ls "$work/g" | grep -q "^$(date -u +%Y%m)[0-9]*T[0-9]*Z_unnamed.wav\$"
 ok $? "a pipe is dated by the host's clock"
+
+# Room is made at the start: a full disk would refuse the first file, and a recorder that never starts makes none.
+for free in 0 1000000; do
+	cat > "$work/h.conf" <<END
+$station intake = { driver = "synthetic"; duration_s = 3; start_utc = "2031-04-02T01:23:30.25Z"; };
+channels = ( { name = "diode"; column = 1; wavelength_nm = 620; } ); watch = { outside_vigils = false; };
+keep = { folder = "$work/h"; free_mib = $free; everything = $([ $free = 0 ] && echo true || echo false); };
+END
+	run "$build/limbwatchd" --config "$work/h.conf"
+	[ $free = 0 ] && kept=$(ls "$work/h" | wc -l)
+done
+[ "$kept" -eq 2 ] && [ -z "$(ls "$work/h")" ] && grep -q 'removed to make room' "$work/err"
+ok $? "the oldest recording without a contact makes room at the start"

@@ -13,6 +13,7 @@
 #include "limbwatch/log.h"
 #include "limbwatch/recorder.h"
 #include "limbwatch/segment.h"
+#include "limbwatch/space.h"
 #include "limbwatch/stamp_line.h"
 #include "listen.h"
 #include "realtime.h"
@@ -108,6 +109,8 @@ static int prepare_folder(const struct config *config)
 	lock = lock_folder(folder);
 	if (lock < 0)
 		return lock;
+	/* A full disk must not keep a restart from making room; when there is none to make, the writing below tells. */
+	space_make(&disk_real, folder, config->keep.free_bytes, config->keep.remove_contacts);
 	snprintf(path, sizeof(path), "%s/.limbwatch-%ld", folder, (long)getpid());
 	fd = disk_real.open(path, O_CREAT | O_WRONLY | O_EXCL | O_CLOEXEC, 0600);
 	if (fd < 0) {
