@@ -14,6 +14,7 @@
 #include "limbwatch/recorder.h"
 #include "limbwatch/segment.h"
 #include "limbwatch/space.h"
+#include "limbwatch/space.h"
 #include "limbwatch/stamp_line.h"
 #include "listen.h"
 #include "realtime.h"
@@ -90,6 +91,48 @@ static int lock_folder(const char *folder)
 	return ret;
 }
 
+/* @return 0 or -errno, unsaid: whether a file can be made and written */
+static int try_folder(const char *folder)
+{
+	char path[4096];
+	int fd, ret;
+
+	snprintf(path, sizeof(path), "%s/.limbwatch-%ld", folder, (long)getpid());
+	fd = disk_real.open(path, O_CREAT | O_WRONLY | O_EXCL | O_CLOEXEC, 0600);
+	if (fd < 0)
+		return fd;
+	ret = disk_real.write(fd, path, 1) < 1 ? -ENOSPC : 0;
+	disk_real.close(fd);
+	disk_real.unlink(path);
+	return ret;
+}
+
+/*
+ * A full disk is no reason not to watch: what may be removed goes, and recording begins when there is room.
+ *
+ * @return 0 or -errno (said)
+ */
+static int try_and_repair(const struct config *config)
+{
+	const char *folder = config->keep.folder;
+	int ret = try_folder(folder);
+
+	if (ret == -ENOSPC) {
+		space_make(&disk_real, folder, config->keep.free_bytes, config->keep.remove_contacts);
+		ret = try_folder(folder);
+	}
+	if (ret < 0 && ret != -ENOSPC) {
+		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
+		return ret;
+	}
+	if (ret == -ENOSPC)
+		log_error("keep.folder %s: the disk is full, and nothing on it may be removed: RECORDING BEGINS WHEN THERE IS ROOM", folder);
+	ret = segment_repair(&disk_real, folder);
+	if (ret < 0)
+		log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
+	return ret == -ENOSPC || ret > 0 ? 0 : ret;
+}
+
 /*
  * The folder must take files before recording begins: better refused at dusk than found out at the contact.
  *
@@ -98,8 +141,7 @@ static int lock_folder(const char *folder)
 static int prepare_folder(const struct config *config)
 {
 	const char *folder = config->keep.folder;
-	char path[4096];
-	int fd, ret, lock;
+	int ret, lock;
 
 	ret = disk_real.make_folder(folder, 0775);
 	if (ret < 0) {
@@ -109,27 +151,9 @@ static int prepare_folder(const struct config *config)
 	lock = lock_folder(folder);
 	if (lock < 0)
 		return lock;
-	/* A full disk must not keep a restart from making room; when there is none to make, the writing below tells. */
-	space_make(&disk_real, folder, config->keep.free_bytes, config->keep.remove_contacts);
-	snprintf(path, sizeof(path), "%s/.limbwatch-%ld", folder, (long)getpid());
-	fd = disk_real.open(path, O_CREAT | O_WRONLY | O_EXCL | O_CLOEXEC, 0600);
-	if (fd < 0) {
-		ret = fd;
-		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
-		goto unlock;
-	}
-	ret = disk_real.write(fd, path, 1) < 1 ? -ENOSPC : 0;
-	disk_real.close(fd);
-	disk_real.unlink(path);
-	if (ret < 0) {
-		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
-		goto unlock;
-	}
-	ret = segment_repair(&disk_real, folder);
-	if (ret >= 0)
+	ret = try_and_repair(config);
+	if (ret == 0)
 		return lock;
-	log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
-unlock:
 	close(lock);
 	return ret;
 }
