@@ -126,9 +126,9 @@ static int prepare_folder(const struct config *config)
 		goto unlock;
 	}
 	ret = segment_repair(&disk_real, folder);
-	if (ret >= 0)
-		return lock;
-	log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
+	if (ret < 0)                    /* an old recording that cannot be read is no reason to miss the next contact */
+		log_error("keep.folder %s: not everything that was left open could be repaired: %s", folder, strerror(-ret));
+	return lock;
 unlock:
 	close(lock);
 	return ret;
