@@ -1,7 +1,7 @@
 #!/bin/sh
 # The whole recorder: synthetic, file and pipe intakes, what it says and what it leaves behind.
 . tests/support/tap.sh
-plan 20
+plan 21
 
 channels='channels = ( { name = "diode"; column = 1; wavelength_nm = 620; passband_nm = 120; aperture_m = 0.28; },
   { name = "gps"; column = 2; measure = "pulse"; } );'
@@ -151,3 +151,10 @@ END
 done
 [ "$kept" -eq 2 ] && [ -z "$(ls "$work/h")" ] && grep -q 'removed to make room' "$work/err"
 ok $? "the oldest recording without a contact makes room at the start"
+
+# What cannot be opened for repair stands in nobody's way.
+ln -s /proc/version "$work/h/20300101T000000Z_x.wav.part"      # can be neither written nor measured
+sed -i 's/everything = false/everything = true/; s/free_mib = [0-9]*/free_mib = 0/' "$work/h.conf"
+run "$build/limbwatchd" --config "$work/h.conf"
+[ "$status" -eq 0 ] && grep -q '20300101T000000Z_x.wav.part cannot be repaired' "$work/err" && ls "$work/h" | grep -q '_brackenfold.wav$'
+ok $? "a file that cannot be repaired is said, and recording begins all the same"

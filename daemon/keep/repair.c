@@ -338,8 +338,11 @@ static int list(const struct disk *disk, const char *folder, struct found *f)
 	return ret;
 }
 
+/* One that cannot be mended leaves the others their turn. @return 0, or -errno of the first */
 static int mend_parts(const struct disk *disk, const char *folder, const struct found *f)
 {
+	int first = 0;
+
 	for (size_t k = 0; k < f->n; k++) {
 		char path[PATH_BYTES];
 		int64_t ret = 0;
@@ -353,27 +356,30 @@ static int mend_parts(const struct disk *disk, const char *folder, const struct 
 				ret = 0;
 		}
 		if (ret < 0)
-			return (int)ret;
+			log_error("%s/%s cannot be repaired: %s", folder, f->name[k], strerror((int)-ret));
+		if (ret < 0 && !first)
+			first = (int)ret;
 	}
-	return 0;
+	return first;
 }
 
 int segment_repair(const struct disk *disk, const char *folder)
 {
 	struct found f = { 0 };
-	int ret, repaired = 0;
+	int ret, first = 0, repaired = 0;
 
 	ret = list(disk, folder, &f);
-	if (ret == 0)
-		ret = mend_parts(disk, folder, &f);
-	if (ret == 0)
+	if (ret == 0) {
+		first = mend_parts(disk, folder, &f);
 		ret = list(disk, folder, &f);
+	}
 	for (size_t k = 0; ret >= 0 && k < f.n; k++) {
-		if (!ends_with(f.name[k], ".json"))
-			continue;
-		ret = mend_sidecar(disk, folder, f.name[k], &f);
-		repaired += ret > 0;
+		int mended = ends_with(f.name[k], ".json") ? mend_sidecar(disk, folder, f.name[k], &f) : 0;
+
+		repaired += mended > 0;
+		if (mended < 0 && !first)
+			first = mended;
 	}
 	free(f.name);
-	return ret < 0 ? ret : repaired;
+	return ret < 0 ? ret : first ? first : repaired;
 }

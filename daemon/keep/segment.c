@@ -31,7 +31,7 @@ struct segment {
 	int64_t synced_frames;          /* of this part, at the last sync */
 	/* The growing part. */
 	SNDFILE *file;
-	int fd, error;                  /* error: what the disk said inside libsndfile's call */
+	int fd, error, broke;           /* error: what the disk said inside libsndfile's call; broke: what `broken` came of */
 	bool broken, mute;              /* a call failed: libsndfile's idea of the file is not to be trusted any more */
 	int64_t offset, size, data_begin, allocated, frames;
 	unsigned number;
@@ -84,14 +84,18 @@ static sf_count_t virtual_write(const void *data, sf_count_t count, void *contex
 	sf_count_t done = 0;
 
 	/* After a seek that failed the bytes would land in the wrong place. */
-	if (s->mute || s->broken)
-		return s->mute ? count : 0;
+	if (s->mute)
+		return count;
+	if (s->broken) {
+		s->error = s->broke ? s->broke : -EIO;
+		return 0;
+	}
 	while (done < count) {
 		ssize_t ret = s->disk->write(s->fd, (const char *)data + done, (size_t)(count - done));
 
 		if (ret <= 0) {
 			s->broken = true;
-			s->error = ret < 0 ? (int)ret : -ENOSPC;
+			s->error = s->broke = ret < 0 ? (int)ret : -ENOSPC;
 			break;
 		}
 		done += ret;

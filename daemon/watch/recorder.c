@@ -128,9 +128,9 @@ static int try_and_repair(const struct config *config)
 	if (ret == -ENOSPC)
 		log_error("keep.folder %s: the disk is full, and nothing on it may be removed: RECORDING BEGINS WHEN THERE IS ROOM", folder);
 	ret = segment_repair(&disk_real, folder);
-	if (ret < 0)
-		log_error("keep.folder %s: recordings left open cannot be repaired: %s", folder, strerror(-ret));
-	return ret == -ENOSPC || ret > 0 ? 0 : ret;
+	if (ret < 0)                    /* an old recording that cannot be read is no reason to miss the next contact */
+		log_error("keep.folder %s: not everything that was left open could be repaired: %s", folder, strerror(-ret));
+	return 0;
 }
 
 /*
