@@ -198,13 +198,10 @@ void *acquire_run(void *argument)
 	int ret;
 
 	touch_stack();
-	ret = take_blocks(s);
-	if (ret == 0) {                 /* abandoned: the session is the main thread's from here on */
-		atomic_store(&s->left, true);
-		return NULL;
-	}
-	if (ret == -ENODATA || ret == -ECANCELED || !s->intake->driver->comes_back)
+	ret = take_blocks(s);           /* 0: abandoned */
+	if (ret == -ENODATA || ret == -ECANCELED || (ret < 0 && !s->intake->driver->comes_back))
 		ring_end(s->acquire->ring);
 	atomic_store(&s->result, ret);
+	atomic_store(&s->left, true);   /* an abandoned session is the main thread's from here on */
 	return NULL;
 }

@@ -57,7 +57,7 @@ struct session {
 	struct acquire *acquire;
 	struct intake *intake;          /* started */
 	atomic_int grip;                /* enum grip */
-	atomic_bool left;               /* abandoned, and the thread is out of the driver: the intake may be closed */
+	atomic_bool left;               /* the thread is out of the driver, its last word: the intake may be closed */
 	atomic_int result;              /* 0 while running; -ENODATA: the data ended; -ECANCELED: stopped; other -errno */
 };
 

@@ -267,13 +267,15 @@ static void check_hang(struct device *d, int64_t now)
 /* The thread is in a read that times out: this takes its grip before the next block, and it ends.  @return false: it hangs after all */
 static bool comes_out(struct device *d)
 {
-	struct timespec until;
+	const struct timespec moment = { .tv_nsec = 10000000 };
+	const int64_t until = host_now() + hang_stopping_ns;
 
 	acquire_abandon(d->session);
-	clock_gettime(CLOCK_MONOTONIC, &until);
-	until.tv_sec += hang_stopping_ns / 1000000000;
-	if (pthread_clockjoin_np(d->thread, NULL, CLOCK_MONOTONIC, &until))
+	while (!atomic_load(&d->session->left) && host_now() < until)
+		nanosleep(&moment, NULL);
+	if (!atomic_load(&d->session->left))
 		return false;
+	pthread_join(d->thread, NULL);
 	free(d->session);
 	d->session = NULL;
 	return true;
