@@ -139,7 +139,8 @@ int log_writer_start(void (*write_text)(const char *text))
 
 void log_writer_end(void)
 {
-	struct timespec until;
+	const struct timespec moment = { .tv_nsec = 5000000 };
+	int64_t until = host_now() + 2000000000;        /* for a reader that does not read: not for ever */
 	bool was;
 
 	pthread_mutex_lock(&mutex);
@@ -150,8 +151,11 @@ void log_writer_end(void)
 	pthread_mutex_unlock(&mutex);
 	if (!was)
 		return;
-	clock_gettime(CLOCK_REALTIME, &until);
-	until.tv_sec += 2;              /* for a reader that does not read: not for ever */
-	if (pthread_timedjoin_np(thread, NULL, &until))
-		pthread_detach(thread);
+	while (pthread_tryjoin_np(thread, NULL)) {
+		if (host_now() > until) {
+			pthread_detach(thread);
+			return;
+		}
+		nanosleep(&moment, NULL);
+	}
 }

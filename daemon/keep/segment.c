@@ -87,7 +87,8 @@ static sf_count_t virtual_write(const void *data, sf_count_t count, void *contex
 	if (s->mute)
 		return count;
 	if (s->broken) {
-		s->error = s->broke ? s->broke : -EIO;
+		if (!s->error)
+			s->error = s->broke;
 		return 0;
 	}
 	while (done < count) {

@@ -115,12 +115,10 @@ static int try_folder(const char *folder)
 static int try_and_repair(const struct config *config)
 {
 	const char *folder = config->keep.folder;
-	int ret = try_folder(folder);
+	int ret;
 
-	if (ret == -ENOSPC) {
-		space_make(&disk_real, folder, config->keep.free_bytes, config->keep.remove_contacts);
-		ret = try_folder(folder);
-	}
+	space_make(&disk_real, folder, config->keep.free_bytes, config->keep.remove_contacts);
+	ret = try_folder(folder);
 	if (ret < 0 && ret != -ENOSPC) {
 		log_error("keep.folder %s cannot be written to: %s", folder, strerror(-ret));
 		return ret;
